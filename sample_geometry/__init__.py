@@ -1,0 +1,1 @@
+"""Small gmsh models and job files, all invented; each one runs in a test."""

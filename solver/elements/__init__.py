@@ -1,0 +1,1 @@
+"""Finite elements: data and one method each."""

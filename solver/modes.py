@@ -1,0 +1,76 @@
+"""Cavity modes of the undamped interior.
+
+    K phi = w^2 M phi,   K = sum_r K_r / rho_r,   M = sum_r M_r / (rho_r c_r^2)
+
+Walls are hard, losses are left out, media take the real part of their values at the frequency looked at; surfaces of
+kind `pressure` keep p = 0. Shapes are normalised to a largest value of 1 at the vertices.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+import scipy.sparse as sp
+import scipy.sparse.linalg as spla
+
+from murmesh.solver.assembly import volume_matrices
+from murmesh.solver.case.model import Case
+from murmesh.solver.errors import CaseError
+from murmesh.solver.linalg import analyse
+from murmesh.solver.space import Space, discretise
+from murmesh.solver.system import pressure_fixed
+
+Floats = npt.NDArray[np.float64]
+
+
+@dataclass(frozen=True, eq=False)
+class Modes:
+    """Frequencies (m,) [Hz] and shapes (unknowns, m) on `space`."""
+
+    space: Space
+    frequencies: Floats
+    shapes: Floats
+
+
+def modes(case: Case, count: int, near: float = 0.0, order: int = 0) -> Modes:
+    """The `count` modes nearest to the frequency `near` [Hz], in rising order."""
+    space = discretise(case, order)
+    stiffness, mass = _matrices(space, near or float(case.sweep.frequencies[-1]))
+    free = np.flatnonzero(~pressure_fixed(space))
+    stiffness, mass = stiffness[free][:, free].tocsc(), mass[free][:, free].tocsc()
+    if not 0 < count < len(free) - 1:
+        raise CaseError(f"{count} modes are asked of {len(free)} unknowns; ask for 1 .. {len(free) - 2}")
+    values, vectors = _nearest(stiffness, mass, count, near)
+    shapes = np.zeros((space.dofs.n_dofs, count))
+    shapes[free] = vectors
+    peaks = np.abs(shapes[: space.dofs.n_vertex_dofs]).max(axis=0)
+    return Modes(space, np.sqrt(np.maximum(values, 0.0)) / (2 * np.pi), shapes / np.where(peaks > 0, peaks, 1.0))
+
+
+def _matrices(space: Space, f: float) -> tuple[sp.csr_matrix, sp.csr_matrix]:
+    stiffness: sp.csr_matrix = sp.csr_matrix((space.dofs.n_dofs, space.dofs.n_dofs))
+    mass = stiffness.copy()
+    for index, region in enumerate(space.case.regions):
+        at = np.array([f])
+        rho, c = float(region.medium.density(at)[0].real), float(region.medium.speed(at)[0].real)
+        k, m = volume_matrices(space.geometry, space.dofs, np.flatnonzero(space.case.mesh.tet_region == index))
+        stiffness, mass = stiffness + k / rho, mass + m / (rho * c**2)
+    return stiffness, mass
+
+
+def _nearest(stiffness: sp.csc_matrix, mass: sp.csc_matrix, count: int, near: float) -> tuple[Floats, Floats]:
+    """Shift-invert Lanczos around w^2, a little beside it so that the shifted matrix is never singular."""
+    shift = (2 * np.pi * near) ** 2
+    scale = stiffness.diagonal().sum() / mass.diagonal().sum()
+    shift = shift * (1 + 1e-4) if shift > 0 else -1e-6 * scale
+    lower = sp.tril(stiffness - shift * mass).tocsc()
+    lower.sort_indices()
+    factor = analyse(lower).factor(lower.data.astype(np.complex128))
+    inverse = spla.LinearOperator(
+        stiffness.shape, matvec=lambda b: factor.solve(b.reshape(-1, 1).astype(np.complex128)).real.ravel()
+    )
+    values, vectors = spla.eigsh(stiffness, count, mass, sigma=shift, OPinv=inverse, v0=np.ones(stiffness.shape[0]))
+    order = np.argsort(values)
+    return values[order], vectors[:, order]

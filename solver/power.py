@@ -1,0 +1,49 @@
+"""The power balance: what loads put in is what surfaces and volumes take.
+
+    input of a load      W_l = Re( (i/w) p^T conj(f_l) ) / 2
+    taken by a term      W_j = Im(phi_j) p^H A_j p / (2 w)
+    sum_l W_l = sum_j W_j
+
+Both follow from (i/(2w)) p^T conj(A p - f) = 0 with real symmetric A_j. A wave that enters through a port counts as
+input, what leaves through it as taken; their difference is the net power through the port.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from murmesh.solver.system import System
+
+Complex = npt.NDArray[np.complex128]
+Floats = npt.NDArray[np.float64]
+
+
+def power_labels(system: System) -> tuple[str, ...]:
+    """Whom the taken power belongs to, in a fixed order: volumes, then surfaces."""
+    return tuple(dict.fromkeys(term.label for term in system.terms))
+
+
+def absorbed_power(system: System, phi: Complex, f: float, field: Complex, labels: tuple[str, ...]) -> Floats:
+    """Power [W] taken under each label by the fields (n, r), summed over r; peak amplitudes."""
+    taken = np.zeros(len(labels))
+    for coefficient, term in zip(phi, system.terms, strict=True):
+        if coefficient.imag != 0.0:
+            form = float(np.real(np.vdot(field, term.matrix @ field)))
+            taken[labels.index(term.label)] += coefficient.imag * form / (4 * np.pi * f)
+    return taken
+
+
+def input_power(
+    f: float, forces: Complex, given: Complex, reaction: Complex | None, field: Complex, mix: Complex
+) -> Floats:
+    """Power [W] that each load (columns of forces and given) puts in.
+
+    A prescribed pressure drives through the reaction A p - f of the unknowns it holds: conj(given) picks its own share.
+    """
+    pressure_form = forces.conj().T @ field  # (loads, r): conj(f_l)^T p_r
+    work = np.real(1j * np.sum(pressure_form * mix.conj(), axis=1)) / (4 * np.pi * f)
+    if reaction is not None:
+        held = given.T @ reaction.conj()
+        work = work + np.real(1j * np.sum(held * mix, axis=1)) / (4 * np.pi * f)
+    return np.asarray(work, dtype=np.float64)

@@ -1,0 +1,65 @@
+"""Where the pressure is read: receivers as sample points inside elements.
+
+A receiver with a radius is sampled at its centre and at the vertices of an icosahedron on the sphere, with weights that
+integrate quadratic functions over the ball exactly: w_0 = 2/5 at the centre, the rest shared by the 12 vertices (the
+mean of r^2 over a ball is 3/5 of its radius squared, and the icosahedron is a spherical 5-design).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from murmesh.solver.assembly import Geometry
+from murmesh.solver.case.model import Case, Receiver
+from murmesh.solver.errors import CaseError
+
+Floats = npt.NDArray[np.float64]
+Ints = npt.NDArray[np.int64]
+
+
+@dataclass(frozen=True, eq=False)
+class Samples:
+    """Sample points of all receivers: `receiver` (s,) index, `weight` (s,) summing to 1 per receiver, and their places."""
+
+    receiver: Ints
+    weight: Floats
+    points: Floats
+    tet: Ints
+    bary: Floats
+
+
+def _icosahedron() -> Floats:
+    g = (1 + np.sqrt(5)) / 2
+    corners = [(0.0, s, t * g) for s in (-1, 1) for t in (-1, 1)]
+    points = np.array([np.roll(corner, shift) for corner in corners for shift in range(3)])
+    return points / np.linalg.norm(points, axis=1)[:, None]
+
+
+def sphere_points(receiver: Receiver) -> tuple[Floats, Floats]:
+    """Sample points (s, 3) and weights (s,) of one receiver."""
+    centre = np.array([receiver.position])
+    if receiver.radius == 0.0:
+        return centre, np.ones(1)
+    points = np.vstack([centre, centre + receiver.radius * _icosahedron()])
+    return points, np.concatenate([[0.4], np.full(12, 0.05)])
+
+
+def locate_receivers(case: Case, geometry: Geometry) -> Samples:
+    """Find every receiver's samples in the mesh; CaseError with the nearest point for one that lies outside."""
+    groups = [sphere_points(receiver) for receiver in case.receivers]
+    points = np.vstack([group[0] for group in groups]) if groups else np.empty((0, 3))
+    index = np.repeat(np.arange(len(groups)), [len(group[1]) for group in groups]).astype(np.int64)
+    weights = np.concatenate([group[1] for group in groups]) if groups else np.empty(0)
+    tet, bary = geometry.locate(points) if len(points) else (np.empty(0, np.int64), np.empty((0, 4)))
+    for sample in np.flatnonzero(tet < 0):
+        receiver, at = case.receivers[index[sample]], points[sample]
+        near = geometry.nearest_point(at)
+        what = "lies" if receiver.radius == 0 else f"with its averaging sphere of {receiver.radius:g} m reaches"
+        raise CaseError(
+            f"receiver '{receiver.name}' {what} outside every region at ({at[0]:.4g}, {at[1]:.4g}, {at[2]:.4g}) m; the "
+            f"nearest point of the fluid is ({near[0]:.4g}, {near[1]:.4g}, {near[2]:.4g}) m"
+        )
+    return Samples(index, weights, points, tet, bary)

@@ -1,0 +1,291 @@
+"""What a sweep found, and its HDF5 file.
+
+The file holds a copy of the case it came from (with its checksum), so that it stands alone: pictures, rankings and
+exports need nothing else. All pressures are complex peak amplitudes, e^{+iwt}.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import IO, cast
+
+import h5py
+import numpy as np
+import numpy.typing as npt
+
+from murmesh.solver.assembly import evaluate
+from murmesh.solver.case.hdf5 import check_header, open_hdf5, read_case_group, write_atomically, write_case_group
+from murmesh.solver.case.load import LoadCase
+from murmesh.solver.case.model import Case
+from murmesh.solver.errors import FormatError, MurmeshError, ResultError, nearest
+from murmesh.solver.receiver_points import Samples
+from murmesh.solver.space import Space, discretise
+
+Floats = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
+Ints = npt.NDArray[np.int64]
+FORMAT = "murmesh result"
+VERSION = 1
+
+
+@dataclass(frozen=True, eq=False)
+class Response:
+    """One load case at one line."""
+
+    contributions: Complex
+    supplied: Floats
+    absorbed: Floats
+    residual: float
+    closure: float
+    field: Complex | None
+
+
+@dataclass(frozen=True, eq=False)
+class Line:
+    """One solved frequency, as the journal keeps it."""
+
+    frequency: float
+    responses: tuple[Response, ...]
+    residual: float
+
+    @classmethod
+    def of(cls, f: float, responses: list[Response], residual: float) -> Line:
+        return cls(f, tuple(responses), residual)
+
+    def save(self, stream: IO[bytes]) -> None:
+        arrays: dict[str, npt.NDArray[np.generic]] = {"head": np.array([self.frequency, self.residual])}
+        for i, r in enumerate(self.responses):
+            arrays |= {f"{i}c": r.contributions, f"{i}s": r.supplied, f"{i}a": r.absorbed}
+            arrays[f"{i}r"] = np.array([r.residual, r.closure])
+            if r.field is not None:
+                arrays[f"{i}f"] = r.field
+        np.savez(stream, **arrays)  # type: ignore[arg-type]
+
+    @classmethod
+    def load(cls, path: Path) -> Line:
+        with np.load(path) as held:
+            count = sum(1 for key in held.files if key.endswith("c"))
+            responses = []
+            for i in range(count):
+                residual, closure = (float(v) for v in held[f"{i}r"])
+                field = held[f"{i}f"] if f"{i}f" in held.files else None
+                arrays = held[f"{i}c"], held[f"{i}s"], held[f"{i}a"]
+                responses.append(Response(*arrays, residual, closure, field))
+            f, worst = (float(v) for v in held["head"])
+        return cls(f, tuple(responses), worst)
+
+
+@dataclass(frozen=True, eq=False)
+class LoadCaseResult:
+    """One load case over the sweep.
+
+    contributions (nf, samples, loads) [Pa]; supplied (nf, loads) and absorbed (nf, labels) [W per line]; residual and
+    closure (nf,); fields (k, unknowns, r) at the field frequencies: r solutions whose mean squares add.
+    """
+
+    name: str
+    loads: tuple[str, ...]
+    contributions: Complex
+    supplied: Floats
+    absorbed: Floats
+    residual: Floats
+    closure: Floats
+    fields: Complex
+
+
+@dataclass(frozen=True, eq=False)
+class Result:
+    """A solved case."""
+
+    case: Case
+    order: int
+    frequencies: Floats
+    sample_receiver: Ints
+    sample_weight: Floats
+    power_labels: tuple[str, ...]
+    load_cases: tuple[LoadCaseResult, ...]
+    provenance: dict[str, str]
+
+    @classmethod
+    def of(
+        cls,
+        case: Case,
+        order: int,
+        samples: Samples,
+        labels: tuple[str, ...],
+        lines: list[Line],
+        provenance: dict[str, str],
+    ) -> Result:
+        """Stack the lines of a sweep."""
+        gathered = []
+        for i, load_case in enumerate(case.load_cases):
+            rows = [line.responses[i] for line in lines]
+            fields = [row.field for row in rows if row.field is not None]
+            gathered.append(
+                LoadCaseResult(
+                    load_case.name,
+                    tuple(load.name for load in load_case.loads),
+                    np.stack([row.contributions for row in rows]),
+                    np.stack([row.supplied for row in rows]),
+                    np.stack([row.absorbed for row in rows]),
+                    np.array([max(row.residual, line.residual) for row, line in zip(rows, lines, strict=True)]),
+                    np.array([row.closure for row in rows]),
+                    np.stack(fields) if fields else np.empty((0, 0, 0), dtype=np.complex128),
+                )
+            )
+        frequencies = np.array([line.frequency for line in lines])
+        return cls(
+            case, order, frequencies, samples.receiver, samples.weight, labels, tuple(gathered), provenance
+        )
+
+    def load_case(self, name: str = "") -> LoadCaseResult:
+        """The load case called `name`; the first one if no name is given."""
+        for held in self.load_cases:
+            if name in ("", held.name):
+                return held
+        raise ResultError(f"the result has no load case '{name}'; {nearest(name, [h.name for h in self.load_cases])}")
+
+    def receiver(self, name: str) -> int:
+        """Index of the receiver called `name`."""
+        names = [receiver.name for receiver in self.case.receivers]
+        if name not in names:
+            raise ResultError(f"the result has no receiver '{name}'; {nearest(name, names)}")
+        return names.index(name)
+
+    def samples(self, receiver: str) -> Ints:
+        """Indices of the sample points of a receiver."""
+        return np.flatnonzero(self.sample_receiver == self.receiver(receiver))
+
+    def combination(self, load_case: str = "") -> Complex:
+        """G (nf, loads, loads) of a load case."""
+        held = self.case.load_case(load_case or self.load_cases[0].name)
+        return held.combination.matrix(self.frequencies, len(held.loads))
+
+    def mean_square(self, receiver: str, load_case: str = "") -> Floats:
+        """(1/2) sum_ij G_ij p_i conj(p_j), averaged over the receiver's samples: (nf,) [Pa2], per hertz for a density."""
+        return np.asarray(self.shares(receiver, load_case).sum(axis=1))
+
+    def shares(self, receiver: str, load_case: str = "") -> Floats:
+        """Mean square that belongs to each load, (1/2) Re sum_j G_ij p_i conj(p_j): (nf, loads), summing to the total."""
+        held, index = self.load_case(load_case), self.samples(receiver)
+        p, g = held.contributions[:, index], self.combination(load_case)
+        pairs = np.real(p * np.einsum("fij,fsj->fsi", g, p.conj()))
+        return np.asarray(0.5 * np.einsum("s,fsi->fi", self.sample_weight[index], pairs) / self._bandwidth(load_case))
+
+    def pair_squares(self, receiver: str, load_case: str = "") -> Floats:
+        """Re of the terms (1/2) G_ij p_i conj(p_j), averaged over samples: (nf, loads, loads)."""
+        held, index = self.load_case(load_case), self.samples(receiver)
+        p, g = held.contributions[:, index], self.combination(load_case)
+        mean = np.einsum("s,fsi,fsj->fij", self.sample_weight[index], p, p.conj())
+        return np.asarray(0.5 * np.real(g * mean) / self._bandwidth(load_case))
+
+    def _bandwidth(self, load_case: str) -> float:
+        case = self.load_case_of(load_case)
+        return case.bandwidth if case.spectrum == "density" else 1.0
+
+    def load_case_of(self, load_case: str = "") -> LoadCase:
+        """The declaration behind a load case's result."""
+        return self.case.load_case(load_case or self.load_cases[0].name)
+
+    @cached_property
+    def space(self) -> Space:
+        """The discretised case, rebuilt on first use (for maps and cuts)."""
+        return discretise(self.case, self.order)
+
+    @property
+    def field_frequencies(self) -> Floats:
+        """Lines whose whole field is kept."""
+        wanted = self.case.sweep.field_frequencies
+        return self.frequencies[[np.any(np.isclose(f, wanted, rtol=1e-9)) for f in self.frequencies]]
+
+    def field(self, frequency: float, load_case: str = "") -> Complex:
+        """Unknowns (n, r) of the field kept nearest to `frequency`; ResultError if none is kept within 0.1 %."""
+        lines = self.field_frequencies
+        if not len(lines) or np.abs(lines - frequency).min() > 1e-3 * frequency:
+            kept = ", ".join(f"{f:g}" for f in lines) or "none"
+            raise ResultError(f"no field is kept at {frequency:g} Hz (kept: {kept} Hz); add it to field_frequencies")
+        return np.asarray(self.load_case(load_case).fields[int(np.abs(lines - frequency).argmin())])
+
+    def pressure_at(self, points: Floats, frequency: float, load_case: str = "") -> Complex:
+        """Pressure (k, r) [Pa] at points (k, 3) from the elements themselves; nan outside the fluid."""
+        tet, bary = self.space.geometry.locate(points)
+        inside = tet >= 0
+        field = self.field(frequency, load_case)
+        values = np.full((len(points), field.shape[1]), complex(np.nan, np.nan))
+        values[inside] = evaluate(self.space.geometry, self.space.dofs, tet[inside], bary[inside]) @ field
+        return values
+
+    def imbalance(self, load_case: str = "") -> Floats:
+        """(input - taken) / input over the sweep, (nf,); 0 where nothing is put in."""
+        held = self.load_case(load_case)
+        supplied, taken = held.supplied.sum(axis=1), held.absorbed.sum(axis=1)
+        scale = np.maximum(np.abs(held.supplied).sum(axis=1), 1e-300)
+        return np.asarray((supplied - taken) / scale)
+
+
+# ---------------------------------------------------------------------------------------------------------------------
+# the file
+
+
+def write_result(result: Result, path: str | Path) -> None:
+    """Write `result` to `path` atomically."""
+    write_atomically(Path(path), lambda file: _write(result, file))
+
+
+def read_result(path: str | Path) -> Result:
+    """The result in `path`; FormatError for a file that is truncated, foreign, newer or inconsistent."""
+    with open_hdf5(path) as file:
+        try:
+            return _read(file)
+        except MurmeshError as error:
+            raise type(error)(f"{path}: {error}") from None
+        except (KeyError, OSError, RuntimeError) as error:
+            raise FormatError(f"{path}: the result is incomplete ({error}); solve the case again") from None
+
+
+_ARRAYS = ("contributions", "supplied", "absorbed", "residual", "closure", "fields")
+
+
+def _write(result: Result, file: h5py.File) -> None:
+    file.attrs["format"], file.attrs["version"] = FORMAT, VERSION
+    file.attrs["order"] = result.order
+    file.attrs["provenance"] = json.dumps(result.provenance)
+    file.attrs["power_labels"] = json.dumps(result.power_labels)
+    write_case_group(result.case, file.create_group("case"))
+    file["frequencies"] = result.frequencies
+    file["sample_receiver"] = result.sample_receiver
+    file["sample_weight"] = result.sample_weight
+    for index, held in enumerate(result.load_cases):
+        group = file.create_group(f"load_cases/{index:04d}")
+        group.attrs["name"], group.attrs["loads"] = held.name, json.dumps(held.loads)
+        for name in _ARRAYS:
+            group.create_dataset(name, data=getattr(held, name))
+
+
+def _read(file: h5py.File) -> Result:
+    check_header(file, FORMAT, VERSION)
+    case = read_case_group(cast(h5py.Group, file["case"]))
+    stored = str(file["case"].attrs.get("checksum", ""))
+    provenance = json.loads(file.attrs["provenance"])
+    if case.checksum != provenance.get("case_checksum") or stored != case.checksum:
+        raise FormatError("the case inside the result is not the one that was solved (its checksum differs); solve it again")
+    text: Callable[[str], tuple[str, ...]] = lambda value: tuple(json.loads(value))  # noqa: E731
+    held = []
+    for key in sorted(file["load_cases"]) if "load_cases" in file else ():
+        group = file["load_cases"][key]
+        arrays = [group[name][()] for name in _ARRAYS]
+        held.append(LoadCaseResult(str(group.attrs["name"]), text(group.attrs["loads"]), *arrays))
+    return Result(
+        case,
+        int(file.attrs["order"]),
+        file["frequencies"][()],
+        file["sample_receiver"][()],
+        file["sample_weight"][()],
+        text(file.attrs["power_labels"]),
+        tuple(held),
+        provenance,
+    )

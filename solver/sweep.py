@@ -1,0 +1,204 @@
+"""A frequency sweep: one factorisation per line serves every load case and every receiver's adjoint.
+
+    A z_r = e_r                     adjoint of receiver r (A is symmetric)
+    p_{r,l} = z_r^T f_l             contribution of load l; they add up to p_r
+    A x = sum_l f_l g_l             field of the load case, for power, maps and a check of the contributions
+
+Every finished line is kept in a journal beside the result, so that an interrupted sweep goes on where it stopped.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import shutil
+import time
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import numpy.typing as npt
+import scipy
+
+from murmesh.solver.case.model import Case
+from murmesh.solver.errors import ResultError
+from murmesh.solver.linalg import Analysis, Factor, analyse, solve_refined
+from murmesh.solver.power import absorbed_power, input_power, power_labels
+from murmesh.solver.receiver_points import Samples, locate_receivers
+from murmesh.solver.result import Line, Response, Result
+from murmesh.solver.space import discretise
+from murmesh.solver.system import LoadSet, System, build_system
+
+Floats = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
+
+
+@dataclass(frozen=True)
+class Progress:
+    """How far a sweep is: lines done of all lines, how many came from the journal, seconds left at the present pace."""
+
+    done: int
+    total: int
+    resumed: int
+    frequency: float
+    seconds_left: float
+
+
+Report = Callable[[Progress], None]
+
+
+def solve(
+    case: Case,
+    journal: Path | None = None,
+    *,
+    report: Report | None = None,
+    order: int = 0,
+    solver: str = "default",
+) -> Result:
+    """Solve `case` on every line of its sweep.
+
+    `journal` is a folder for finished lines; it is read first, and removed by `forget` once the result is safe.
+    Raises CaseError, MeshError or SolveError; an interrupt leaves the journal as it is.
+    """
+    space = discretise(case, order)
+    samples = locate_receivers(case, space.geometry)
+    system = build_system(space, samples)
+    _check_ranges(system)
+    book = Journal.open(journal, case, space.order, system.size) if journal else None
+    engine = _Engine.of(system, solver)
+    lines = _run(engine, case.sweep.frequencies, book, report)
+    return _collect(case, engine, samples, lines)
+
+
+@dataclass(frozen=True)
+class Journal:
+    """A folder with one file per finished line, each written beside and renamed."""
+
+    folder: Path
+
+    @classmethod
+    def open(cls, folder: Path, case: Case, order: int, size: int) -> Journal:
+        """Open or make the folder; ResultError if it belongs to another case."""
+        folder = Path(folder)
+        key = hashlib.sha256(f"{case.checksum} order {order} size {size}".encode()).hexdigest()
+        stamp = folder / "case"
+        if stamp.is_file() and stamp.read_text() != key:
+            raise ResultError(
+                f"'{folder}' holds finished lines of another case or order; remove the folder to start afresh, or go back "
+                "to the case it belongs to"
+            )
+        folder.mkdir(parents=True, exist_ok=True)
+        if not stamp.is_file():
+            part = folder / "case.part"
+            part.write_text(key)
+            part.replace(stamp)
+        return cls(folder)
+
+    def _path(self, index: int) -> Path:
+        return self.folder / f"line{index:06d}.npz"
+
+    def read(self, index: int) -> Line | None:
+        path = self._path(index)
+        return Line.load(path) if path.is_file() else None
+
+    def write(self, index: int, line: Line) -> None:
+        part = self._path(index).with_suffix(".part")
+        with part.open("wb") as stream:
+            line.save(stream)
+        part.replace(self._path(index))
+
+    def forget(self) -> None:
+        """Remove the folder, once what it holds is safe elsewhere."""
+        shutil.rmtree(self.folder, ignore_errors=True)
+
+
+@dataclass(frozen=True, eq=False)
+class _Engine:
+    """What every line needs, computed once."""
+
+    system: System
+    analysis: Analysis
+    phi: Complex
+    free: npt.NDArray[np.bool_]
+    labels: tuple[str, ...]
+
+    @classmethod
+    def of(cls, system: System, solver: str) -> _Engine:
+        phi = system.coefficients(system.space.case.sweep.frequencies)
+        analysis = analyse(system.pattern.lower, solver)
+        return cls(system, analysis, phi, ~system.fixed, power_labels(system))
+
+    def line(self, index: int, f: float) -> Line:
+        """Solve one frequency for all load cases and receivers."""
+        phi, free = self.phi[index], self.free
+        matrix = self.system.matrix(phi)
+        factor = self.analysis.factor(matrix.data[self.system.pattern.lower_slots])
+        inner = matrix if free.all() else matrix[free][:, free]
+        outputs = self.system.receivers.T.tocsc()[free].toarray().astype(np.complex128)
+        adjoint, residual = solve_refined(factor, inner, outputs) if outputs.shape[1] else (outputs, 0.0)
+        responses = [self._respond(s, matrix, inner, factor, adjoint, phi, f) for s in self.system.load_sets]
+        return Line.of(f, responses, residual)
+
+    def _respond(
+        self, loads: LoadSet, matrix: object, inner: object, factor: Factor, adjoint: Complex, phi: Complex, f: float
+    ) -> Response:
+        system, free = self.system, self.free
+        forces, given = loads.vectors(f)
+        inside = forces[free] - (matrix @ given)[free] if np.any(given) else forces[free]  # type: ignore[operator]
+        contributions = adjoint.T @ inside + system.receivers @ given
+        case = system.space.case.load_case(loads.name)
+        mix = case.combination.factors(np.array([f]), len(loads.loads))[0]
+        field = given @ mix
+        solution, residual = solve_refined(factor, inner, inside @ mix)  # type: ignore[arg-type]
+        field[free] += solution
+        closure = _relative(system.receivers @ field, contributions @ mix)
+        reaction = matrix @ field - forces @ mix if not free.all() else None  # type: ignore[operator]
+        supplied = input_power(f, forces, given, reaction, field, mix)
+        kept = field if np.any(np.isclose(f, system.space.case.sweep.field_frequencies, rtol=1e-9)) else None
+        return Response(contributions, supplied, absorbed_power(system, phi, f, field, self.labels), residual, closure, kept)
+
+
+def _relative(direct: Complex, summed: Complex) -> float:
+    scale = float(np.abs(direct).max(initial=0.0))
+    return float(np.abs(direct - summed).max(initial=0.0)) / scale if scale > 0 else 0.0
+
+
+def _check_ranges(system: System) -> None:
+    """Ask every coefficient for every line before the first factorisation: a table that ends too early ends here."""
+    frequencies = system.space.case.sweep.frequencies
+    system.coefficients(frequencies)
+    for loads in system.load_sets:
+        for term in loads.terms:
+            term.psi(frequencies)
+        system.space.case.load_case(loads.name).combination.factors(frequencies, len(loads.loads))
+
+
+def _run(engine: _Engine, frequencies: Floats, book: Journal | None, report: Report | None) -> list[Line]:
+    lines: list[Line] = []
+    resumed, started = 0, time.monotonic()
+    for index, f in enumerate(frequencies):
+        line = book.read(index) if book else None
+        if line is not None:
+            resumed += 1
+        else:
+            line = engine.line(index, float(f))
+            if book:
+                book.write(index, line)
+        lines.append(line)
+        if report:
+            solved = index + 1 - resumed
+            pace = (time.monotonic() - started) / solved if solved else 0.0
+            report(Progress(index + 1, len(frequencies), resumed, float(f), pace * (len(frequencies) - index - 1)))
+    return lines
+
+
+def _collect(case: Case, engine: _Engine, samples: Samples, lines: list[Line]) -> Result:
+    provenance = {
+        "case_checksum": case.checksum,
+        "order": str(engine.system.space.order),
+        "unknowns": str(engine.system.size),
+        "linear_solver": engine.analysis.name,
+        "numpy": np.__version__,
+        "scipy": scipy.__version__,
+    }
+    return Result.of(case, engine.system.space.order, samples, engine.labels, lines, provenance)
