@@ -1,0 +1,71 @@
+"""murmesh rank: which panel is heard."""
+
+from __future__ import annotations
+
+import argparse
+
+from murmesh.plugin.cli.command import DONE, Command, answer, answer_json, band_argument, register, table
+from murmesh.plugin.summary import shown
+from murmesh.solver.contribution import Ranking, rank
+from murmesh.solver.result import read_result
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("result", help="result file")
+    parser.add_argument("--receiver", action="append", default=[], help="receiver; repeat for a sum over several (default: all)")
+    parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz (default: the whole sweep)")
+    parser.add_argument("--weighting", choices=("A", "C", "Z"), default="A", help="frequency weighting (default A)")
+    parser.add_argument("--load-case", default="", help="load case (default: the first)")
+    parser.add_argument("--json", action="store_true", help="print JSON")
+
+
+def run(args: argparse.Namespace) -> int:
+    ranking = rank(read_result(args.result), args.receiver, args.band, args.weighting, args.load_case)
+    if args.json:
+        answer_json(tree(ranking))
+    else:
+        answer(text(ranking))
+    return DONE
+
+
+def text(ranking: Ranking) -> str:
+    """The ranking as a table, with what it means and what it does not."""
+    unit = f"dB({ranking.weighting})" if ranking.weighting != "Z" else "dB"
+    head = (
+        f"Participation at {', '.join(ranking.receivers)}: {ranking.band[0]:g} .. {ranking.band[1]:g} Hz, load case "
+        f"'{ranking.load_case}', mean level {shown(ranking.total_db)} {unit} re 20 uPa"
+    )
+    rows = [
+        (row.panel, f"{100 * row.share:+.1f} %", shown(row.own_db), f"{row.removal_db:+.1f}") for row in ranking.rows
+    ]
+    body = table(("panel", "share of mean square", f"alone [{unit}]", "if silent [dB]"), rows)
+    total = sum(row.share for row in ranking.rows)
+    return f"{head}\n{body}\nShares add up to {100 * total:.6f} % (closure {ranking.closure:.0e}).\n{ranking.words}"
+
+
+def tree(ranking: Ranking) -> dict[str, object]:
+    """The ranking as JSON."""
+    return {
+        "meaning": ranking.words,
+        "receivers": list(ranking.receivers),
+        "load_case": ranking.load_case,
+        "band_hz": list(ranking.band),
+        "weighting": ranking.weighting,
+        "level_db": round(ranking.total_db, 3),
+        "closure": ranking.closure,
+        "panels": [
+            {"panel": r.panel, "share": r.share, "alone_db": round(r.own_db, 3), "if_silent_db": round(r.removal_db, 3)}
+            for r in ranking.rows
+        ],
+    }
+
+
+register(
+    Command(
+        "rank",
+        "Rank the panels by what quietening them would do (not by what treating them would).",
+        "  murmesh rank cab_result.h5 --receiver left_ear --band 80:160",
+        arguments,
+        run,
+    )
+)
