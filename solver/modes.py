@@ -54,7 +54,7 @@ def _matrices(space: Space, f: float) -> tuple[sp.csr_matrix, sp.csr_matrix]:
     mass = stiffness.copy()
     for index, region in enumerate(space.case.regions):
         at = np.array([f])
-        rho, c = float(region.medium.density(at)[0].real), float(region.medium.speed(at)[0].real)
+        rho, c = float(region.medium.rho(at)[0].real), float(region.medium.c(at)[0].real)
         k, m = volume_matrices(space.geometry, space.dofs, np.flatnonzero(space.case.mesh.tet_region == index))
         stiffness, mass = stiffness + k / rho, mass + m / (rho * c**2)
     return stiffness, mass

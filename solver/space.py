@@ -99,7 +99,7 @@ def mean_edges(case: Case) -> Floats:
 def elements_kh(case: Case) -> Floats:
     """|k| h at the highest frequency for every tetrahedron, (t,)."""
     top = case.sweep.frequencies[-1:]
-    k = np.array([np.abs(2 * np.pi * top[0] / region.medium.speed(top)[0]) for region in case.regions])
+    k = np.array([np.abs(2 * np.pi * top[0] / region.medium.c(top)[0]) for region in case.regions])
     return np.asarray(k[case.mesh.tet_region] * mean_edges(case))
 
 
