@@ -34,4 +34,4 @@ def _rows(result: Result, receivers: tuple[str, ...], load_case: str, weighting:
             yield case, receiver, weight, "overall", low, high, decibels(found.overall), "1.00"
             for band, value, part in zip(found.bands, found.band_levels, found.coverage, strict=True):
                 edges = f"{band.lower:.6g}", f"{band.upper:.6g}"
-                yield case, receiver, weight, f"{band.nominal:g}", *edges, decibels(value), f"{part:.2f}"
+                yield case, receiver, weight, band.nominal, *edges, decibels(value), f"{part:.2f}"

@@ -17,6 +17,7 @@ list of trees or tree; a member of a family carries its name under the key "kind
 from __future__ import annotations
 
 import dataclasses
+import functools
 import math
 import types
 import typing
@@ -62,6 +63,7 @@ class Declared:
 
     def __post_init__(self) -> None:
         for field in dataclasses.fields(cast(Any, self)):
+            _settle_number(self, field.name)
             _check_bounds(self, field)
         self.validate()
 
@@ -100,6 +102,26 @@ def kind(name: str) -> Callable[[C], C]:
 def record(cls: C) -> C:
     """Make the class a frozen dataclass that belongs to no family (a part of the case with a single shape)."""
     return cast(C, dataclasses.dataclass(frozen=True, eq=False)(cls))
+
+
+@functools.cache
+def _hints(cls: type) -> dict[str, Any]:
+    return typing.get_type_hints(cls)
+
+
+def _settle_number(owner: object, name: str) -> None:
+    """Give plain numbers and arrays the declared type, so that equal cases have equal checksums."""
+    value, target = getattr(owner, name), _hints(type(owner))[name]
+    options = typing.get_args(target) if typing.get_origin(target) in (Union, types.UnionType) else (target,)
+    settled: Any = value
+    if isinstance(value, int | float | np.number) and not isinstance(value, bool):
+        settled = complex(value) if complex in options else float(value) if float in options else value
+    elif isinstance(value, tuple) and any(typing.get_args(option)[:1] == (float,) for option in options):
+        settled = tuple(float(item) for item in value)
+    elif isinstance(value, np.ndarray):
+        settled = _array(target, value, f"{_label(type(owner))}.{name}")
+    if settled is not value:
+        object.__setattr__(owner, name, settled)
 
 
 def _check_bounds(owner: object, field: dataclasses.Field[Any]) -> None:
@@ -176,7 +198,7 @@ def _construct(cls: type[Any], entries: Tree, where: str) -> Any:
     for key in entries:
         if key not in fields:
             raise FieldError(f"{where}: unknown key '{key}'; {nearest(key, fields)}")
-    types_ = typing.get_type_hints(cls)
+    types_ = _hints(cls)
     for name, field in fields.items():
         required = field.default is dataclasses.MISSING and field.default_factory is dataclasses.MISSING
         if required and name not in entries:
