@@ -24,7 +24,7 @@ Complex = npt.NDArray[np.complex128]
 Ints = npt.NDArray[np.int64]
 UNNAMED = -1
 _MOST_TRIANGLES = 400_000  # more are no longer seen at 1400 px
-_TET10_EDGES = np.array([[0, 1], [1, 2], [0, 2], [0, 3], [1, 3], [2, 3]])
+_CHUNK = 50_000  # points evaluated at a time
 
 
 @dataclass(frozen=True, eq=False)
@@ -182,18 +182,14 @@ def _cloud(space: Space, tets: Ints, n: int) -> tuple[Cloud, Ints]:
     tet = tets[row]
     bary = np.zeros((len(tet), 4))
     np.put_along_axis(bary, space.topology.sorted_vertices[tet], lattice(n)[local] / n, axis=1)
-    return Cloud(_places(space, tet, bary), tet, bary), nodes.reshape(numbers.shape)
-
-
-def _places(space: Space, tet: Ints, bary: Floats) -> Floats:
-    """x = sum lambda_a x_a, or for ten nodes sum lambda_a (2 lambda_a - 1) x_a + sum 4 lambda_a lambda_b x_ab."""
-    shape = bary
-    if space.case.mesh.tets.shape[1] == 10:
-        a, b = _TET10_EDGES.T
-        shape = np.hstack([bary * (2 * bary - 1), 4 * bary[:, a] * bary[:, b]])
-    return np.asarray(np.einsum("ka,kad->kd", shape, space.case.mesh.nodes[space.case.mesh.tets[tet]]))
+    points = space.geometry.map(tet, bary)
+    return Cloud(points, tet, bary), nodes.reshape(numbers.shape)
 
 
 def values_on(space: Space, cloud: Cloud, unknowns: npt.NDArray[np.generic]) -> npt.NDArray[np.generic]:
     """The field of `unknowns` (n,) or (n, r) at the points of a cloud, (k,) or (k, r)."""
-    return np.asarray(evaluate(space.geometry, space.dofs, cloud.tet, cloud.bary) @ unknowns)
+    parts = []
+    for start in range(0, len(cloud.tet), _CHUNK):
+        piece = slice(start, start + _CHUNK)
+        parts.append(evaluate(space.geometry, space.dofs, cloud.tet[piece], cloud.bary[piece]) @ unknowns)
+    return np.concatenate(parts)

@@ -45,7 +45,7 @@ def modes(case: Case, count: int, near: float = 0.0, order: int = 0) -> Modes:
     values, vectors = _nearest(stiffness, mass, count, near)
     shapes = np.zeros((space.dofs.n_dofs, count))
     shapes[free] = vectors
-    peaks = np.abs(shapes[: space.dofs.n_vertex_dofs]).max(axis=0)
+    peaks = np.abs(shapes[: space.topology.n_vertices]).max(axis=0)
     return Modes(space, np.sqrt(np.maximum(values, 0.0)) / (2 * np.pi), shapes / np.where(peaks > 0, peaks, 1.0))
 
 

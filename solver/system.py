@@ -21,6 +21,7 @@ import scipy.sparse as sp
 
 from murmesh.solver.assembly import (
     evaluate,
+    face_dofs,
     surface_cross_mass,
     surface_load,
     surface_mass,
@@ -240,7 +241,7 @@ def pressure_fixed(space: Space) -> npt.NDArray[np.bool_]:
     fixed = np.zeros(space.dofs.n_dofs, dtype=bool)
     for side in space.sides:
         if side.boundary.fixes_pressure:
-            fixed[space.dofs.face_dofs(side.tet, side.face)] = True
+            fixed[face_dofs(space.dofs, side.tet, side.face)] = True
     return fixed
 
 
@@ -321,8 +322,8 @@ def _pressure_terms(space: Space, load: SurfacePressure) -> list[LoadTerm]:
     """A uniform pressure is carried by the vertex unknowns alone: they sum to one, the others vanish at vertices."""
     ones = np.zeros(space.dofs.n_dofs)
     for side in _loaded_sides(space, load):
-        dofs = space.dofs.face_dofs(side.tet, side.face)
-        ones[dofs[dofs < space.dofs.n_vertex_dofs]] = 1.0
+        dofs = face_dofs(space.dofs, side.tet, side.face)
+        ones[dofs[dofs < space.topology.n_vertices]] = 1.0
     return [LoadTerm(load.name, _column(ones), lambda f: as_spectrum(load.pressure).at(f)[:, None], fixes=True)]
 
 

@@ -23,7 +23,7 @@ from murmesh.plugin.describe import (
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.style import ACCENT, INK, LINES, Page, frequency_axis, look, page, save
 from murmesh.plugin.summary import PARTIAL, Levels, levels
-from murmesh.solver.case.model import Receiver
+from murmesh.solver.case.model import Measured, Receiver
 from murmesh.solver.levels import level
 from murmesh.solver.levels import weighting as weighting_db
 from murmesh.solver.result import Result
@@ -71,7 +71,7 @@ def figure(
     sheet = page("Sound pressure level at the receivers", facts, notes, len(found) * (_HEADING + _ROW + _UNDER))
     curves = [np.asarray(level(result.mean_square(item.receiver, load_case))) for item in found]
     curves = [curve + weighting_db(weighting, result.frequencies) for curve in curves]
-    measured = [_measured(r, weighting)[1] for r in chosen if r.measured]
+    measured = [_weighted(r.measured, weighting) for r in chosen if r.measured]
     scale = limits or _scale(np.concatenate([*curves, *measured]), RANGE)
     bars = _scale(np.concatenate([item.band_levels for item in found]), 50.0)
     for i, (item, curve) in enumerate(zip(found, curves, strict=True)):
@@ -120,7 +120,7 @@ def _narrow(
         if heard.sum() <= _MOST_LABELS:
             _label_tones(axes, f[heard], curve[heard], scale)
     if receiver.measured is not None:
-        axes.plot(*_measured(receiver, item.weighting), color=ACCENT, linestyle=(0, (5, 2)), linewidth=1.3, label="measured")
+        axes.plot(receiver.measured.frequencies, _weighted(receiver.measured, item.weighting), color=ACCENT, linestyle=(0, (5, 2)), linewidth=1.3, label="measured")
         axes.legend(loc="upper right", ncols=2, bbox_to_anchor=(1.0, 1.15), borderaxespad=0.0)
     low, high = (float(f[0]), float(f[-1])) if len(f) > 1 else (0.8 * float(f[0]), 1.25 * float(f[0]))
     pad = 1.0 if density else 1.04
@@ -133,11 +133,8 @@ def _narrow(
     axes.set_title(item.receiver, loc="left", fontweight="bold", fontsize=12)
 
 
-def _measured(receiver: Receiver, weighting: str) -> tuple[Floats, Floats]:
-    """Frequencies and weighted levels of the measured spectrum."""
-    assert receiver.measured is not None
-    f = receiver.measured.frequencies
-    return f, receiver.measured.levels + weighting_db(weighting, f)
+def _weighted(measured: Measured, weighting: str) -> Floats:
+    return measured.levels + weighting_db(weighting, measured.frequencies)
 
 
 def _label_tones(axes: Axes, f: Floats, curve: Floats, scale: tuple[float, float]) -> None:

@@ -10,9 +10,9 @@ from __future__ import annotations
 import textwrap
 from collections.abc import Sequence
 from contextlib import AbstractContextManager
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import matplotlib
 import numpy as np
@@ -84,6 +84,15 @@ class Page:
             ((self.left + left) / w, (self.bottom + bottom) / h, width / w, height / h)
         )
 
+    def narrowed(self, inches: float) -> Page:
+        """The same page with less free width, from the right."""
+        return replace(self, right=self.right - inches)
+
+    @staticmethod
+    def full_width() -> float:
+        """Free width of every page, inches."""
+        return WIDTH - 2 * _MARGIN
+
     @property
     def width(self) -> float:
         return self.right - self.left
@@ -137,20 +146,29 @@ def level_limits(levels: Floats, limits: tuple[float, float] | None = None) -> t
 
 
 def colour_bar(
-    axes: Axes, limits: tuple[float, float], label: str, *, colours: str = LEVEL_MAP, step: float = 5.0
+    axes: Axes,
+    limits: tuple[float, float],
+    label: str,
+    *,
+    colours: str = LEVEL_MAP,
+    step: float = 5.0,
+    upright: bool = True,
 ) -> None:
-    """A vertical colour bar that fills `axes`, with arrows where the scale clips what it shows."""
-    norm = Normalize(*limits)
-    bar = axes.figure.colorbar(ScalarMappable(norm, matplotlib.colormaps[colours]), cax=axes, extend="both")
+    """A colour bar that fills `axes`, with arrows where the scale clips what it shows."""
+    mappable = ScalarMappable(Normalize(*limits), matplotlib.colormaps[colours])
+    way: Literal["vertical", "horizontal"] = "vertical" if upright else "horizontal"
+    bar = axes.figure.colorbar(mappable, cax=axes, extend="both", orientation=way)
     bar.set_ticks(np.arange(np.ceil(limits[0] / step) * step, limits[1] + step / 1e3, step).tolist())
     bar.outline.set_edgecolor(QUIET)  # type: ignore[operator]
     bar.set_label(label)
 
 
 def frequency_axis(axes: Axes, low: float, high: float) -> None:
-    """A logarithmic axis of frequency, ticked at the nominal third octaves, or octaves where those are too many."""
-    axes.set_xscale("log")
+    """A logarithmic axis of frequency, ticked at nominal third octaves (or octaves); a linear one over a short range."""
     axes.set_xlim(low, high)
+    if high < 1.6 * low:
+        return
+    axes.set_xscale("log")
     bands = third_octaves(low, high)
     bands = octaves(low, high) if len(bands) > _MOST_TICKS else bands
     inside = [(float(b.nominal), b.nominal) for b in bands if low <= float(b.nominal) <= high]

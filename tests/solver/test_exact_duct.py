@@ -60,7 +60,7 @@ def test_piston_and_impedance_a06() -> None:
         _balanced(result)
         for f, x, p_re, p_im in zip(*(table[k][rows] for k in ("f_Hz", "x_m", "p_re_Pa", "p_im_Pa")), strict=True):
             exact = complex(p_re, p_im)
-            assert abs(_pressures(result, f)[places.index(x)] - exact) < 1e-5 * abs(exact)
+            assert abs(_pressures(result, f)[places.index(x)] - exact) < 1e-4 * abs(exact)
 
 
 def test_order_one_is_not_exact_a06() -> None:

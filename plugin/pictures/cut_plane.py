@@ -1,0 +1,223 @@
+"""Level on planes through the model, sampled from the elements, with the outline of what the plane cuts.
+
+The default planes go through the receivers' mean position, square to the three axes. All planes of one picture share one
+scale of colours and one scale of lengths.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+import matplotlib
+import numpy as np
+import numpy.typing as npt
+from matplotlib.axes import Axes
+from matplotlib.collections import LineCollection
+from matplotlib.figure import Figure
+
+from murmesh.plugin.describe import CONVENTION, hertz, is_density, level_unit, load_case_words, origin
+from murmesh.plugin.fields import field_levels, kept_line
+from murmesh.plugin.pictures import PICTURES
+from murmesh.plugin.pictures.labels import receiver_dots
+from murmesh.plugin.pictures.style import INK, LEVEL_MAP, Page, colour_bar, level_limits, look, page, save
+from murmesh.plugin.sampling import Skin, sample_skin
+from murmesh.solver.case.model import Case
+from murmesh.solver.errors import ResultError
+from murmesh.solver.result import Result
+
+Floats = npt.NDArray[np.float64]
+Vector = tuple[float, float, float]
+
+_CELLS = 250  # along the longer edge of a cut
+_NEAR = 0.05  # metres: a receiver farther from the plane is drawn hollow
+_BAR, _LABELS, _ABOVE, _UNDER = 1.35, 0.8, 0.35, 0.62  # inches: colour bar, room left of, above and below a cut
+_MOST_HEIGHT = 9.0  # inches
+
+
+@dataclass(frozen=True, eq=False)
+class Plane:
+    """A plane with its axes on the page; names of the axes as they are written there."""
+
+    origin: Floats
+    across: Floats
+    up: Floats
+    title: str
+    axes: tuple[str, str]
+
+    @classmethod
+    def of(cls, origin: Vector, normal: Vector) -> Plane:
+        """The plane through `origin` [m] square to `normal`; up is z, or y seen along z."""
+        n = np.asarray(normal, dtype=np.float64)
+        if not np.linalg.norm(n) > 0:
+            raise ResultError(f"a cut needs a normal, got {tuple(normal)}; give a direction such as (0, 0, 1)")
+        n = n / np.linalg.norm(n)
+        at = np.asarray(origin, dtype=np.float64)
+        axis = int(np.argmax(np.abs(n)))
+        if np.abs(n[axis]) > 1 - 1e-12:
+            i, j = [k for k in range(3) if k != axis]
+            unit = np.eye(3)
+            return cls(at, unit[i], unit[j], f"{'xyz'[axis]} = {at[axis]:.3g} m", ("xyz"[i], "xyz"[j]))
+        across = np.cross([0.0, 0.0, 1.0], n)
+        across = across / np.linalg.norm(across)
+        where, which = (", ".join(f"{v:.3g}" for v in part) for part in (at, n))
+        return cls(at, across, np.cross(n, across), f"through ({where}) m, normal ({which})", ("across", "up"))
+
+    @property
+    def normal(self) -> Floats:
+        return np.cross(self.across, self.up)
+
+    def flat(self, points: Floats) -> Floats:
+        """Points (..., 3) on the plane's own axes (..., 2) [m]."""
+        return np.asarray(self._shifted(points) @ np.stack([self.across, self.up], axis=1))
+
+    def _shifted(self, points: Floats) -> Floats:
+        # along coordinate axes the page shows the coordinates themselves
+        aligned = self.axes != ("across", "up")
+        return points - np.where(aligned, 0.0, self.origin)
+
+    def place(self, flat: Floats) -> Floats:
+        """Points (k, 3) in space of points (k, 2) on the page."""
+        offset = self.flat(self.origin)
+        return np.asarray(self.origin + (flat - offset) @ np.stack([self.across, self.up]))
+
+
+@dataclass(frozen=True, eq=False)
+class Cut:
+    """A plane, the outline of the fluid on it as segments (k, 2, 2), and pressures (rows, columns, r) on a grid."""
+
+    plane: Plane
+    outline: Floats
+    low: Floats
+    high: Floats
+    pressure: npt.NDArray[np.complex128]
+
+    @property
+    def size(self) -> Floats:
+        """Width and height [m]."""
+        return self.high - self.low
+
+
+@PICTURES.member("cut_plane", ".png", "level on planes through the receivers at one frequency")
+def draw(
+    result: Result,
+    path: Path,
+    *,
+    frequency: float | None = None,
+    load_case: str = "",
+    planes: Sequence[tuple[Vector, Vector]] = (),
+    limits: tuple[float, float] | None = None,
+) -> Path:
+    """Draw the field kept at `frequency` (None: the loudest at the receivers) on `planes`, (origin [m], normal) each.
+
+    Raises ResultError if no field is kept there or a plane misses the fluid.
+    """
+    with look():
+        return save(figure(result, frequency, load_case, planes, limits), path)
+
+
+def figure(
+    result: Result,
+    frequency: float | None = None,
+    load_case: str = "",
+    planes: Sequence[tuple[Vector, Vector]] = (),
+    limits: tuple[float, float] | None = None,
+) -> Figure:
+    """The figure, for further work."""
+    line = kept_line(result, frequency, load_case)
+    skin = sample_skin(result.space, 1 if result.case.mesh.tets.shape[1] == 4 else 0)
+    cuts = [_cut(result, skin, Plane.of(*plane), line, load_case) for plane in planes or default_planes(result.case)]
+    levels = [field_levels(result, cut.pressure.reshape(-1, cut.pressure.shape[2]), load_case) for cut in cuts]
+    scale = level_limits(np.concatenate(levels), limits)
+    facts = [
+        f"{hertz(line)} · no frequency weighting · highest on these planes {np.nanmax(np.concatenate(levels)):.1f} dB",
+        load_case_words(result.load_case_of(load_case)),
+    ]
+    notes = [
+        f"Sampled from the elements on a grid. A hollow dot is a receiver more than {1000 * _NEAR:.0f} mm off the plane.",
+        f"Convention: {CONVENTION}. {origin(result)}.",
+    ]
+    layout = Arrangement.of(cuts)
+    sheet = page("Sound pressure level on cut planes", facts, notes, layout.height)
+    for (left, bottom), cut, values in zip(layout.corners, cuts, levels, strict=True):
+        axes = sheet.axes(left, bottom, *(cut.size * layout.scale))
+        _draw(axes, result.case, cut, values.reshape(cut.pressure.shape[:2]), scale)
+    high = min(layout.height - 0.6, 4.2)
+    bar = sheet.axes(sheet.width - _BAR + 0.3, (layout.height - high) / 2, 0.24, high)
+    colour_bar(bar, scale, f"level [{level_unit('Z', is_density(result, load_case))}]")
+    return sheet.figure
+
+
+def default_planes(case: Case) -> list[tuple[Vector, Vector]]:
+    """Square to x, y and z through the mean of the receivers, or through the middle of the model."""
+    points = np.array([receiver.position for receiver in case.receivers])
+    middle = points.mean(axis=0) if len(points) else (case.mesh.nodes.min(axis=0) + case.mesh.nodes.max(axis=0)) / 2
+    x, y, z = (float(v) for v in middle)
+    return [((x, y, z), (1.0, 0.0, 0.0)), ((x, y, z), (0.0, 1.0, 0.0)), ((x, y, z), (0.0, 0.0, 1.0))]
+
+
+@dataclass(frozen=True)
+class Arrangement:
+    """Where each cut goes: in a row or in a column, whichever shows them larger; `scale` is inches per metre."""
+
+    scale: float
+    height: float
+    corners: tuple[tuple[float, float], ...]
+
+    @classmethod
+    def of(cls, cuts: Sequence[Cut]) -> Arrangement:
+        size, free = np.array([cut.size for cut in cuts]), Page.full_width() - _BAR
+        count, room = len(cuts), _ABOVE + _UNDER
+        row = min((free - count * _LABELS) / size[:, 0].sum(), (_MOST_HEIGHT - room) / size[:, 1].max())
+        column = min((free - _LABELS) / size[:, 0].max(), (_MOST_HEIGHT - count * room) / size[:, 1].sum())
+        if row >= column:
+            lefts = _LABELS * np.arange(1, count + 1) + row * np.concatenate([[0], np.cumsum(size[:-1, 0])])
+            return cls(row, float(row * size[:, 1].max() + room), tuple((float(x), _UNDER) for x in lefts))
+        height = float(column * size[:, 1].sum() + count * room)
+        tops = room * np.arange(count) + column * np.concatenate([[0], np.cumsum(size[:-1, 1])])
+        bottoms = height - tops - _ABOVE - column * size[:, 1]
+        return cls(column, height, tuple((_LABELS, float(y)) for y in bottoms))
+
+
+def _cut(result: Result, skin: Skin, plane: Plane, frequency: float, load_case: str) -> Cut:
+    segments = plane.flat(crossings(skin, plane.origin, plane.normal))
+    if not len(segments):
+        raise ResultError(f"the plane {plane.title} misses the fluid; choose another origin or normal")
+    low, high = segments.min(axis=(0, 1)), segments.max(axis=(0, 1))
+    step = float((high - low).max()) / _CELLS
+    counts = np.maximum(np.ceil((high - low) / step), 1).astype(int)
+    u, v = (low[k] + (np.arange(counts[k]) + 0.5) / counts[k] * (high - low)[k] for k in (0, 1))
+    grid = np.stack(np.meshgrid(u, v), axis=-1)
+    pressure = result.pressure_at(plane.place(grid.reshape(-1, 2)), frequency, load_case)
+    return Cut(plane, segments, low, high, pressure.reshape(*grid.shape[:2], -1))
+
+
+def crossings(skin: Skin, origin: Floats, normal: Floats) -> Floats:
+    """Segments (k, 2, 3) [m] in which a plane cuts the triangles of a skin."""
+    height = (skin.cloud.points - origin) @ normal
+    extent = float(np.ptp(skin.cloud.points, axis=0).max())
+    height = np.where(np.abs(height) < 1e-9 * extent, 1e-9 * extent, height)  # a plane through nodes passes beside them
+    h, x = height[skin.triangles], skin.cloud.points[skin.triangles]
+    follow = [1, 2, 0]
+    crosses = (h > 0) != (h[:, follow] > 0)
+    part = np.divide(h, h - h[:, follow], out=np.zeros_like(h), where=crosses)
+    at = x + part[:, :, None] * (x[:, follow] - x)
+    hit = crosses.any(axis=1)
+    return np.asarray(at[hit][crosses[hit]].reshape(-1, 2, 3))
+
+
+def _draw(axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, float]) -> None:
+    extent = (cut.low[0], cut.high[0], cut.low[1], cut.high[1])
+    colours = matplotlib.colormaps[LEVEL_MAP]
+    axes.imshow(levels, origin="lower", extent=extent, cmap=colours, vmin=scale[0], vmax=scale[1], interpolation="nearest")
+    axes.add_collection(LineCollection(list(cut.outline), colors=INK, linewidths=1.2, clip_on=False))
+    for side in axes.spines.values():
+        side.set_visible(False)
+    axes.set_xlabel(f"{cut.plane.axes[0]} [m]")
+    axes.set_ylabel(f"{cut.plane.axes[1]} [m]")
+    axes.set_title(cut.plane.title, loc="left", fontsize=11)
+    axes.set_aspect("equal")
+    points = np.array([receiver.position for receiver in case.receivers]).reshape(-1, 3)
+    near = np.abs((points - cut.plane.origin) @ cut.plane.normal) <= _NEAR
+    receiver_dots(axes, case.receivers, cut.plane.flat(points), near.tolist())
