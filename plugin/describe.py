@@ -71,6 +71,11 @@ def names(items: Iterable[str], most: int = 4) -> str:
     return ", ".join(listed) if len(listed) <= most else f"{', '.join(listed[:most])} and {len(listed) - most} more"
 
 
+def short(name: str, most: int) -> str:
+    """A name in at most so many letters, its middle left out where it is longer."""
+    return name if len(name) <= most else f"{name[: most - most // 2 - 1]}…{name[-(most // 2) :]}"
+
+
 def origin(result: Result) -> str:
     """Where a number comes from: the case, its checksum, the order of the elements."""
     title = result.case.title or "untitled case"

@@ -1,4 +1,4 @@
-"""gmsh opened and closed around a piece of work; geometry and scripts loaded and meshed. gmsh is imported here, lazily."""
+"""gmsh opened and closed around a piece of work; geometry and scripts loaded and meshed. gmsh is imported late."""
 
 from __future__ import annotations
 
@@ -24,7 +24,9 @@ def current_gmsh() -> Any:
     import gmsh
 
     if not gmsh.isInitialized():
-        raise MeshError("gmsh is not initialised, so there is no current model; call gmsh.initialize() and make a model")
+        raise MeshError(
+            "gmsh is not initialised, so there is no current model; call gmsh.initialize() and make a model"
+        )
     return gmsh
 
 
@@ -97,7 +99,7 @@ def step_unit(path: Path) -> float:
 
 
 def run_script(path: Path) -> None:
-    """Run the user's own gmsh script in this process; its last current model stays open. What it prints goes to stderr."""
+    """Run the user's own gmsh script in this process; its current model stays open, what it prints goes to stderr."""
     gmsh = current_gmsh()
     argv, folder = sys.argv, str(path.resolve().parent)
     sys.argv = [str(path)]
@@ -144,7 +146,9 @@ def generate(path: Path, size: float | None, order: int) -> None:
     if any(len(found) for found in gmsh.model.mesh.getElements(3)[1]):
         return
     if not gmsh.model.getEntities(3) or not gmsh.model.getEntities(2):
-        raise MeshError(f"'{path}' holds no volume and no tetrahedra; make a volume of the air, not only of its surfaces")
+        raise MeshError(
+            f"'{path}' holds no volume and no tetrahedra; make a volume of the air, not only of its surfaces"
+        )
     try:
         if size is not None:
             gmsh.option.setNumber("Mesh.MeshSizeMax", size)

@@ -57,7 +57,9 @@ class Rule(Declared):
     inside: tuple[Vector, Vector] | None = quantity(
         help="two opposite corners of a box that holds the centroid of every triangle", unit="m", default=None
     )
-    facing: Vector | None = quantity(help="direction of the normal out of the air, e.g. [0, 0, 1] for a roof", default=None)
+    facing: Vector | None = quantity(
+        help="direction of the normal out of the air, e.g. [0, 0, 1] for a roof", default=None
+    )
     within_deg: float = quantity(help="largest angle to `facing`", unit="deg", low=0.0, high=180.0, default=30.0)
     of: str = quantity(help="only triangles of these groups (name or glob); default: the outer boundary", default="")
 
@@ -76,7 +78,9 @@ class MeshFile(Declared):
     unit: str | None = quantity(help="unit of its coordinates (default: metres, or the file's own)", default=None)
     size: float | None = quantity(help="largest element size", unit="m", positive=True, default=None)
     size_from: str = quantity(
-        help="'frequency': element size from the highest frequency, order and accuracy", choices=("", "frequency"), default=""
+        help="'frequency': element size from the highest frequency, order and accuracy",
+        choices=("", "frequency"),
+        default="",
     )
     geometry_order: int = quantity(
         help="1 straight, 2 curved elements where murmesh meshes; 0: 2 if a surface is curved", low=0, high=2, default=0
@@ -117,7 +121,9 @@ class LoadSet(Declared):
     """The load case "default", to which the loads named beside surfaces go."""
 
     spectrum: str = quantity(help="line spectrum or density", choices=("tones", "density"), default="density")
-    bandwidth: float = quantity(help="bandwidth the amplitudes of a density hold in", unit="Hz", positive=True, default=1.0)
+    bandwidth: float = quantity(
+        help="bandwidth the amplitudes of a density hold in", unit="Hz", positive=True, default=1.0
+    )
     combination: Combination = quantity(help="how the loads act together", default=Coherent())
     loads: tuple[Load, ...] = quantity(help="loads; a surface may be a glob", default=())
 
@@ -131,7 +137,7 @@ class Job(Declared):
     regions: tuple[RegionEntry, ...] = quantity(help="volumes", default=())
     surfaces: tuple[SurfaceEntry, ...] = quantity(help="surfaces", default=())
     default_boundary: str = quantity(
-        help="'rigid': outer triangles that no entry names become the rigid surface 'unnamed_walls'; '': they are an error",
+        help="'rigid': outer triangles named nowhere become the rigid surface 'unnamed_walls'; '': an error",
         choices=("", "rigid"), default="",
     )  # fmt: skip
     loads: LoadSet = quantity(help="the load case 'default'", default=LoadSet())
@@ -292,7 +298,9 @@ def as_motion(given: Motion | Spectrum | complex, measure: str = "velocity") -> 
     if not isinstance(given, Motion):
         return Uniform(given, measure)
     if given.measure != measure:
-        raise FieldError(f"a motion of measure '{given.measure}' was given as {measure}; use {given.measure} = ... for it")
+        raise FieldError(
+            f"a motion of measure '{given.measure}' was given as {measure}; use {given.measure} = ... for it"
+        )
     return given
 
 

@@ -1,4 +1,4 @@
-"""Files named in a job file become numbers: spectra, scans, cross-spectral matrices; units and amplitudes must be said."""
+"""Files named in a job become numbers: spectra, scans, cross-spectral matrices; units and amplitudes must be said."""
 
 from __future__ import annotations
 
@@ -9,7 +9,7 @@ from functools import cache
 from pathlib import Path
 from typing import Any, cast
 
-from murmesh.plugin.tables import Column, read_arrays, read_column, read_scan
+from murmesh.plugin.tables import UNITS, Column, read_arrays, read_column, read_scan
 from murmesh.solver.case.fields import Declared, Tree
 from murmesh.solver.case.motion import Motion
 from murmesh.solver.case.spectrum import Spectrum
@@ -27,11 +27,13 @@ def motion_tree(value: object, measure: str, where: str) -> object:
         tree["kind"] = "shape" if "expression" in tree else "autospectrum" if "form" in tree else "uniform"
         if "csv" in tree and not tree.keys() & {"amplitude", "form"}:
             raise FieldError(
-                f"{where}: say what '{tree['csv']}' holds: amplitude = \"peak\" or \"rms\" for complex values, or "
+                f'{where}: say what \'{tree["csv"]}\' holds: amplitude = "peak" or "rms" for complex values, or '
                 'form = "peak", "rms" or "psd" for an autospectrum without phase'
             )
     if measure and tree.setdefault("measure", measure) != measure:
-        raise FieldError(f"{where}: measure = '{tree['measure']}' contradicts the key; use {tree['measure']} = ... for it")
+        raise FieldError(
+            f"{where}: measure = '{tree['measure']}' contradicts the key; use {tree['measure']} = ... for it"
+        )
     return tree
 
 
@@ -64,6 +66,7 @@ def filled(table: Mapping[str, Any], known: Iterable[str], where: str) -> None:
 def _from_file(table: Tree, folder: Path) -> Tree:
     kind = str(table.get("kind", "table"))
     own = _fields_of(kind)
+    filled(table, {"kind", *own, *_READER_KEYS} if own else table, f"kind '{kind}' from a file")
     reader = {key: table.pop(key) for key in _READER_KEYS if key in table and (key not in own or key == "csv")}
     path = folder / str(reader.get("csv", reader.get("hdf5")))
     if kind == "scan":
@@ -95,28 +98,30 @@ def _spectrum(kind: str, column: Column, reader: Tree) -> Tree:
 def _scan(table: Tree, reader: Tree, path: Path) -> Tree:
     points, frequencies, values, unit = read_scan(path, str(reader.get("unit", "")), str(reader.get("time_sign", "+")))
     if "amplitude" not in table:
-        raise FieldError(f"'{path.name}': say amplitude = \"peak\" or \"rms\"; a scan holds complex values")
+        raise FieldError(f'\'{path.name}\': say amplitude = "peak" or "rms"; a scan holds complex values')
     _settle_motion(table, unit, _measures(unit), path.name)
     return {**table, "points": points, "frequencies": frequencies, "values": values}
 
 
 def _measures(unit: str) -> str:
-    from murmesh.plugin.tables import UNITS
-
     return UNITS[unit][1] if unit else ""
 
 
 def _settle_motion(table: Tree, unit: str, measures: str, name: str) -> None:
     """A motion from a file says its unit, and the unit says whether it is a velocity, an acceleration, or a density."""
     if not unit:
-        raise FieldError(f"'{name}': the unit is not said; write it behind the column, roof_re [mm/s], or as unit = \"mm/s\"")
+        raise FieldError(
+            f"'{name}': the unit is not said; write it behind the column, roof_re [mm/s], or as unit = \"mm/s\""
+        )
     what, density = measures.removesuffix(" psd"), measures.endswith(" psd")
     if what not in ("velocity", "acceleration"):
         raise FieldError(f"'{name}': the unit {unit} is that of a {measures}, not of a velocity or an acceleration")
     if table.setdefault("measure", what) != what:
         raise FieldError(f"'{name}': the unit {unit} is that of a {what}, but measure = '{table['measure']}'; mend one")
     if density != (table.get("form") == "psd"):
-        raise FieldError(f"'{name}': the unit {unit} and form = '{table.get('form', '')}' contradict each other; mend one")
+        raise FieldError(
+            f"'{name}': the unit {unit} and form = '{table.get('form', '')}' contradict each other; mend one"
+        )
 
 
 def _settle_unit(table: Tree, own: frozenset[str], column: Column, name: str) -> None:

@@ -2,8 +2,8 @@
 
 The keys are the fields of the declared records, so a new kind needs nothing here. On top of the fields stand:
 
-    [surfaces.NAME]  the keys of the kind, and velocity, acceleration, pressure, wave (a load for the case "default"), where
-    {csv = "f.csv", column = "roof", unit = "mm/s"}      wherever a spectrum, a motion or a wall law over frequency stands
+    [surfaces.NAME]  the keys of the kind, where, and velocity, acceleration, pressure, wave (a load of "default")
+    {csv = "f.csv", column = "roof", unit = "mm/s"}      wherever a spectrum, a motion or a wall law may stand
     {kind = "scan", csv | hdf5 = ...}, {kind = "cross_spectrum", hdf5 = ...}
     panels = {csv = "panels.csv", ...}                   in a load case: one surface velocity per column
     [sweep] start, stop, step, extra                     instead of frequencies
@@ -30,8 +30,8 @@ from murmesh.solver.case.model import Sweep
 from murmesh.solver.errors import CaseError, FieldError, FormatError, nearest
 
 HEADER = """\
-# A murmesh job. Units: SI (m, s, kg, Pa, m/s, Hz; temperatures in degrees Celsius). Time factor e^{+iwt}; complex numbers
-# are {re, im}; amplitudes are peak unless a motion says rms or psd; positive = the surface moves into the air.
+# A murmesh job. Units: SI (m, s, kg, Pa, m/s, Hz; temperatures in degrees Celsius). Time factor e^{+iwt}; complex
+# numbers are {re, im}; amplitudes are peak unless a motion says rms or psd; positive = the surface moves into the air.
 # Impedance Z = p / (velocity into the wall), its unit stated. Levels: dB re 20 uPa, rms.
 """
 _LOAD_KEYS = ("velocity", "acceleration", "pressure", "wave")

@@ -124,9 +124,9 @@ def _flat_pieces(n: int) -> Ints:
     return np.array(pieces)
 
 
-def fine_enough(space: Space, faces: int) -> int:
-    """Pieces per edge for a picture: two more than the order, fewer where the mesh is already fine."""
-    return max(1, min(MAX_ORDER, space.order + 2, int(np.sqrt(_MOST_TRIANGLES / max(faces, 1)))))
+def fine_enough(faces: int) -> int:
+    """Pieces per edge for a picture: as many as the lattice allows, fewer where the mesh is already fine."""
+    return max(1, min(MAX_ORDER, int(np.sqrt(_MOST_TRIANGLES / max(faces, 1)))))
 
 
 def sample_volume(space: Space, n: int) -> Volume:
@@ -139,7 +139,7 @@ def sample_volume(space: Space, n: int) -> Volume:
 def sample_skin(space: Space, n: int = 0) -> Skin:
     """All sides of all surfaces and the unnamed rest of the outer skin, each face in n^2 triangles (0: fine enough)."""
     tet, face, surface, sign = _all_faces(space)
-    n = n or fine_enough(space, len(tet))
+    n = n or fine_enough(len(tet))
     slot = np.argmax(space.topology.sorted_vertices[tet] == face[:, None], axis=1)
     used, row = np.unique(tet, return_inverse=True)
     cloud, nodes = _cloud(space, used, n)

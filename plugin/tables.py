@@ -90,14 +90,15 @@ def read_csv(path: str | Path) -> Sheet:
         text = path.read_text(encoding="utf-8-sig")
     except UnicodeDecodeError:
         raise FormatError(f"'{path}' is not a text file in UTF-8; export it as CSV (UTF-8)") from None
-    lines = [(n, line) for n, line in enumerate(text.splitlines(), 1) if line.strip() and not line.lstrip().startswith("#")]
+    numbered = enumerate(text.splitlines(), 1)
+    lines = [(number, line) for number, line in numbered if line.strip() and not line.lstrip().startswith("#")]
     if len(lines) < 2:
         raise FormatError(f"'{path}' has no header with rows below it; write one, e.g. frequency, re, im")
     mark = next((m for m in (";", "\t", ",") if m in lines[0][1]), ",")
     header = [_header(cell, path) for cell in next(csv.reader([lines[0][1]], delimiter=mark))]
-    rows = [_row(path, n, next(csv.reader([line], delimiter=mark)), [h for h, _ in header], mark) for n, line in lines[1:]]
-    table = np.array(rows, dtype=np.float64)
     names = [name for name, _ in header]
+    rows = [_row(path, number, next(csv.reader([line], delimiter=mark)), names, mark) for number, line in lines[1:]]
+    table = np.array(rows, dtype=np.float64)
     if len(set(names)) < len(names):
         raise FormatError(f"'{path}' has two columns of the same name; rename one. Columns: {', '.join(names)}")
     return Sheet(path, {name: table[:, i] for i, name in enumerate(names)}, dict(header))
@@ -115,7 +116,9 @@ def _header(cell: str, path: Path) -> tuple[str, str]:
 
 def _row(path: Path, number: int, cells: list[str], names: list[str], mark: str) -> list[float]:
     if len(cells) != len(names):
-        raise FormatError(f"'{path}', line {number}: {len(cells)} fields, but the header has {len(names)}; complete the row")
+        raise FormatError(
+            f"'{path}', line {number}: {len(cells)} fields, the header has {len(names)}; complete the row"
+        )
     values = []
     for name, cell in zip(names, cells, strict=True):
         try:
@@ -167,7 +170,7 @@ def read_column(path: str | Path, column: str = "", unit: str = "", time_sign: s
     at = sheet.find(_FREQUENCY, "frequency")
     frequencies = sheet.scaled(at, "Hz")
     if np.any(frequencies <= 0) or np.any(np.diff(frequencies) <= 0):
-        raise FormatError(f"'{path}': the column '{at}' must rise strictly from above 0 Hz; sort it and drop duplicates")
+        raise FormatError(f"'{path}': the column '{at}' must rise strictly from above 0; sort it and drop duplicates")
     own = _unit(sheet, parts, unit)
     values = _combine(sheet, parts, column) * (UNITS[own][0] if own else 1.0)
     if time_sign not in ("+", "-"):
@@ -181,7 +184,7 @@ def _unit(sheet: Sheet, parts: Mapping[str, str], stated: str) -> str:
     written = {sheet.units[header] for part, header in parts.items() if not part.startswith("phase")} - {""}
     if len(written | ({stated} - {""})) > 1:
         both = ", ".join(sorted(written | {stated} - {""}))
-        raise FieldError(f"'{sheet.path}': the units of {', '.join(parts.values())} contradict each other ({both}); say one")
+        raise FieldError(f"'{sheet.path}': the units of {', '.join(parts.values())} contradict ({both}); say one")
     return stated or next(iter(written), "")
 
 
@@ -198,8 +201,8 @@ def _combine(sheet: Sheet, parts: Mapping[str, str], column: str) -> Complex:
             values = held["value"]
         case _:
             raise FormatError(
-                f"'{sheet.path}': quantity '{column}' has the columns {', '.join(sorted(parts.values()))}; expected re and "
-                "im, magnitude and phase_deg, or a single column"
+                f"'{sheet.path}': quantity '{column}' has the columns {', '.join(sorted(parts.values()))}; expected re "
+                "and im, magnitude and phase_deg, or a single column"
             )
     return np.asarray(values, dtype=np.complex128)
 
@@ -238,8 +241,8 @@ def _scan_csv(path: Path, unit: str) -> tuple[Floats, Floats, Complex, str]:
         f, p = np.argwhere(count != 1)[0]
         x, y, z = points[p]
         raise FormatError(
-            f"'{path}': the point ({x:g}, {y:g}, {z:g}) m has {count[f, p]} rows at {frequencies[f]:g} Hz, expected one; "
-            "every point needs every frequency once"
+            f"'{path}': the point ({x:g}, {y:g}, {z:g}) m has {count[f, p]} rows at {frequencies[f]:g} Hz, expected one"
+            "; every point needs every frequency once"
         )
     values = np.empty(count.shape, dtype=np.complex128)
     values[line, point.reshape(-1)] = given
@@ -268,5 +271,7 @@ def read_arrays(path: str | Path, names: tuple[str, ...]) -> dict[str, tuple[npt
             elif name in file:
                 found[name] = file[name][()], str(file[name].attrs.get("unit", ""))
             else:
-                raise FormatError(f"'{path}' has no dataset '{name}'; expected {', '.join(names)}. It has: {', '.join(file)}")
+                raise FormatError(
+                    f"'{path}' has no dataset '{name}'; expected {', '.join(names)}. It has: {', '.join(file)}"
+                )
         return found

@@ -26,6 +26,7 @@ Ints = npt.NDArray[np.int64]
 Sides = tuple[npt.ArrayLike, npt.ArrayLike]
 
 _CHUNK = 4_000_000  # numbers held at once in a temporary
+_BENT_MARGIN = 6  # added degree on curved faces, whose area element is no polynomial
 
 
 @dataclass(frozen=True)
@@ -66,9 +67,9 @@ def surface_points(
     return found.points.reshape(-1, 3), found.weights.ravel(), found.normals.reshape(-1, 3)
 
 
-def surface_area(geometry: Geometry, tet: npt.ArrayLike, local_face: npt.ArrayLike) -> Floats:
-    """Area (m,) [m2] of each face; curved ones by a rule of degree 8."""
-    return np.asarray(face_points(geometry, tet, local_face, 8).weights.sum(axis=1))
+def surface_area(geometry: Geometry, tet: npt.ArrayLike, local_face: npt.ArrayLike) -> float:
+    """S = int dS [m2] of the faces together; curved ones by a rule of degree 8."""
+    return float(face_points(geometry, tet, local_face, 8).weights.sum())
 
 
 def surface_normals(geometry: Geometry, tet: npt.ArrayLike, local_face: npt.ArrayLike) -> Floats:
@@ -78,9 +79,7 @@ def surface_normals(geometry: Geometry, tet: npt.ArrayLike, local_face: npt.Arra
     return np.asarray(mean / np.linalg.norm(mean, axis=1, keepdims=True))
 
 
-def surface_mass(
-    geometry: Geometry, dofmap: DofMap, tet: npt.ArrayLike, local_face: npt.ArrayLike
-) -> sp.csr_matrix:
+def surface_mass(geometry: Geometry, dofmap: DofMap, tet: npt.ArrayLike, local_face: npt.ArrayLike) -> sp.csr_matrix:
     """B = int q p dS (n_dofs, n_dofs) [m2] over the given faces, real symmetric."""
     return surface_cross_mass(geometry, dofmap, (tet, local_face), (tet, local_face))
 
@@ -95,8 +94,8 @@ def surface_cross_mass(geometry: Geometry, dofmap: DofMap, side_a: Sides, side_b
     n = dofmap.n_dofs
     out = sp.csr_matrix((n, n))
     for part, order in _pieces(dofmap, tet_a, tet_b):
-        rows = face_dofs(dofmap, tet_a[part], face_a[part], order)
-        cols = face_dofs(dofmap, tet_b[part], face_b[part], order)
+        rows = _trace_dofs(dofmap, tet_a[part], face_a[part], order)
+        cols = _trace_dofs(dofmap, tet_b[part], face_b[part], order)
         values = _face_matrices(geometry, tet_a[part], face_a[part], order)
         keep = (rows >= 0)[:, :, None] & (cols >= 0)[:, None, :]
         i, j = np.broadcast_arrays(rows[:, :, None], cols[:, None, :])
@@ -115,29 +114,33 @@ def surface_load(
     """f = int q g dS over the given faces: (n_dofs,) for g of shape (k,), (n_dofs, m) for g of shape (k, m).
 
     values: g at points (k, 3), called once per chunk of points; None is g = 1.  degree: of the quadrature, default
-    2 p + 2 (exact for g of degree p + 2 on straight faces).
+    2 p + 2 (exact for g of degree p + 2) on straight faces, 2 p + 6 where a tetrahedron is curved.
     """
     which, face = _checked(tet, local_face)
-    total: npt.NDArray[np.inexact] | None = None
+    total = np.zeros((dofmap.n_dofs, *_columns(values)))
     for part, order in _pieces(dofmap, which, which):
-        rule = 2 * order + 2 if degree is None else degree
+        rule = _load_degree(geometry, which[part], order) if degree is None else degree
         found = face_points(geometry, which[part], face[part], rule)
         traces = triangle_basis(order, triangle_rule(rule)[0])
-        g = _sampled(values, found.points)
-        each = np.einsum("qn,mq,mqc->mnc", traces, found.weights, g, optimize=True)
-        dofs = face_dofs(dofmap, which[part], face[part], order).ravel()
-        there = np.flatnonzero(dofs >= 0)
-        add = sp.csr_matrix((np.ones(len(there)), (dofs[there], there)), shape=(dofmap.n_dofs, len(dofs)))
-        piece = add @ each.reshape(len(dofs), -1)
-        piece = piece[:, 0] if values is None or _is_scalar(values, found.points) else piece
-        total = piece if total is None else total + piece
-    if total is None:
-        shape = () if values is None else np.shape(values(np.zeros((0, 3))))[1:]
-        return np.zeros((dofmap.n_dofs, *shape))
+        g = np.ones(found.weights.size) if values is None else np.asarray(values(found.points.reshape(-1, 3)))
+        weighted = found.weights[..., None] * g.reshape(*found.weights.shape, -1)
+        each = np.einsum("qn,mqc->mnc", traces, weighted, optimize=True)
+        dofs = _trace_dofs(dofmap, which[part], face[part], order)
+        there = dofs >= 0
+        count = int(np.count_nonzero(there))
+        add = sp.csr_matrix((np.ones(count), (dofs[there], np.arange(count))), shape=(dofmap.n_dofs, count))
+        total = total + (add @ each[there]).reshape(-1, *g.shape[1:])
     return total
 
 
-def face_dofs(dofmap: DofMap, tet: Ints, local_face: Ints, order: int) -> Ints:
+def face_dofs(dofmap: DofMap, tet: npt.ArrayLike, local_face: npt.ArrayLike) -> Ints:
+    """(k,): the unknowns that do not vanish on the faces, each once, ascending."""
+    which, face = _checked(tet, local_face)
+    found = _trace_dofs(dofmap, which, face, dofmap.max_order)
+    return np.unique(found[found >= 0])
+
+
+def _trace_dofs(dofmap: DofMap, tet: Ints, local_face: Ints, order: int) -> Ints:
     """(m, nface(order)): unknowns of the traces on faces, -1 for those that do not exist."""
     slot = np.argmax(dofmap.topology.sorted_vertices[tet] == local_face[:, None], axis=1)
     table = np.stack([face_functions(order, i) for i in range(4)])
@@ -150,7 +153,7 @@ def _face_matrices(geometry: Geometry, tet: Ints, face: Ints, order: int) -> Flo
     out = np.asarray(twice_area[:, None, None] * reference_face_mass(order))
     bent = geometry.curved[tet]
     if np.any(bent):
-        degree = 2 * order + 4
+        degree = 2 * order + _BENT_MARGIN
         weights = face_points(geometry, tet[bent], face[bent], degree).weights
         traces = triangle_basis(order, triangle_rule(degree)[0])
         out[bent] = np.matmul(traces.T, weights[:, :, None] * traces)
@@ -178,8 +181,8 @@ def _checked(tet: npt.ArrayLike, local_face: npt.ArrayLike) -> tuple[Ints, Ints]
     which, face = np.asarray(tet, dtype=np.int64), np.asarray(local_face, dtype=np.int64)
     if which.shape != face.shape or which.ndim != 1 or np.any(which < 0) or np.any((face < 0) | (face > 3)):
         raise MeshError(
-            f"faces were given as arrays of shapes {which.shape} and {face.shape}; expected two arrays (m,) of tetrahedra "
-            ">= 0 and local faces 0..3: leave out the sides that `sides_of` marks with -1"
+            f"faces were given as arrays of shapes {which.shape} and {face.shape}; expected two arrays (m,) of "
+            "tetrahedra >= 0 and local faces 0..3: leave out the sides that `sides_of` marks with -1"
         )
     return which, face
 
@@ -195,9 +198,10 @@ def _require_same(geometry: Geometry, side_a: tuple[Ints, Ints], side_b: tuple[I
     )
 
 
-def _sampled(values: Callable[[Floats], npt.NDArray[np.inexact]] | None, points: Floats) -> npt.NDArray[np.inexact]:
-    """g at points (m, q, 3) as (m, q, columns)."""
-    if values is None:
-        return np.ones((*points.shape[:2], 1))
-    g = np.asarray(values(points.reshape(-1, 3)))
-    return g.reshape(*points.shape[:2], -1)
+def _load_degree(geometry: Geometry, tet: Ints, order: int) -> int:
+    return 2 * order + (_BENT_MARGIN if np.any(geometry.curved[tet]) else 2)
+
+
+def _columns(values: Callable[[Floats], npt.NDArray[np.inexact]] | None) -> tuple[int, ...]:
+    """The shape of g at one point."""
+    return () if values is None else np.shape(values(np.zeros((1, 3))))[1:]

@@ -7,7 +7,7 @@ Weightings: IEC 61672-1:2013, annex E. Bands: IEC 61260-1:2014, base ten. Refere
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -35,8 +35,8 @@ def power_level(power: npt.ArrayLike) -> Float:
 
 
 def sum_levels(levels: npt.ArrayLike) -> float:
-    """10 lg sum 10^(L/10) [dB]."""
-    return float(10 * np.log10(np.sum(10 ** (np.asarray(levels, dtype=np.float64) / 10))))
+    """10 lg sum 10^(L/10) [dB]; -inf for nothing, or for silences."""
+    return float(level(np.sum(10 ** (np.asarray(levels, dtype=np.float64) / 10)), 1.0))
 
 
 def A_weighting(f: npt.ArrayLike) -> Float:
@@ -57,9 +57,13 @@ def _a(f: Float) -> Float:
     return np.asarray(_c(f) + 20 * np.log10(f**2 / np.sqrt((f**2 + _F2**2) * (f**2 + _F3**2))))
 
 
+def _none(f: npt.ArrayLike) -> Float:
+    return np.zeros(np.shape(f))
+
+
 def weighting(name: str, f: npt.ArrayLike) -> Float:
     """The weighting called A, C or Z [dB]."""
-    known = {"A": A_weighting, "C": C_weighting, "Z": lambda g: np.zeros(np.shape(g))}
+    known: dict[str, Callable[[npt.ArrayLike], Float]] = {"A": A_weighting, "C": C_weighting, "Z": _none}
     if name not in known:
         raise FieldError(f"no frequency weighting is called '{name}'; {nearest(name, known)}")
     return known[name](f)
@@ -119,6 +123,14 @@ def band_energy(
     low, high = frequencies[0], frequencies[-1]
     covered = [max(min(high, b.upper) - max(low, b.lower), 0.0) / (b.upper - b.lower) for b in bands]
     return np.asarray(energy, dtype=np.float64), np.asarray(covered)
+
+
+def overall_energy(frequencies: Float, mean_square: Float, spectrum: str, weighting_name: str = "Z") -> float:
+    """Weighted mean square over the whole sweep [Pa2]; `spectrum` as in `band_energy`."""
+    low, high = float(frequencies[0]), float(frequencies[-1])
+    # the upper edge of a band is not part of it, the last line of the sweep is
+    whole = Band("overall", float(np.sqrt(low * high)), low, high * (1 + 1e-9))
+    return float(band_energy(frequencies, mean_square, [whole], spectrum, weighting_name)[0][0])
 
 
 def _integral(f: Float, density: Float, band: Band) -> float:

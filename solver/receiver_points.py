@@ -1,8 +1,8 @@
 """Where the pressure is read: receivers as sample points inside elements.
 
-A receiver with a radius is sampled at its centre and at the vertices of an icosahedron on the sphere, with weights that
-integrate quadratic functions over the ball exactly: w_0 = 2/5 at the centre, the rest shared by the 12 vertices (the
-mean of r^2 over a ball is 3/5 of its radius squared, and the icosahedron is a spherical 5-design).
+A receiver with a radius is sampled at its centre and at the six points of the sphere on the axes, with weights that
+average cubic functions over the ball exactly: 2/5 at the centre, 1/10 at each of the others (the mean of r^2 over a ball
+is 3/5 of its radius squared, and the octahedron is a spherical 3-design).
 """
 
 from __future__ import annotations
@@ -31,20 +31,13 @@ class Samples:
     bary: Floats
 
 
-def _icosahedron() -> Floats:
-    g = (1 + np.sqrt(5)) / 2
-    corners = [(0.0, s, t * g) for s in (-1, 1) for t in (-1, 1)]
-    points = np.array([np.roll(corner, shift) for corner in corners for shift in range(3)])
-    return points / np.linalg.norm(points, axis=1)[:, None]
-
-
 def sphere_points(receiver: Receiver) -> tuple[Floats, Floats]:
     """Sample points (s, 3) and weights (s,) of one receiver."""
     centre = np.array([receiver.position])
     if receiver.radius == 0.0:
         return centre, np.ones(1)
-    points = np.vstack([centre, centre + receiver.radius * _icosahedron()])
-    return points, np.concatenate([[0.4], np.full(12, 0.05)])
+    axes = receiver.radius * np.vstack([np.eye(3), -np.eye(3)])
+    return np.vstack([centre, centre + axes]), np.concatenate([[0.4], np.full(6, 0.1)])
 
 
 def locate_receivers(case: Case, geometry: Geometry) -> Samples:

@@ -39,7 +39,6 @@ class Response:
     contributions: Complex
     supplied: Floats
     absorbed: Floats
-    residual: float
     closure: float
     field: Complex | None
 
@@ -52,15 +51,11 @@ class Line:
     responses: tuple[Response, ...]
     residual: float
 
-    @classmethod
-    def of(cls, f: float, responses: list[Response], residual: float) -> Line:
-        return cls(f, tuple(responses), residual)
-
     def save(self, stream: IO[bytes]) -> None:
         arrays: dict[str, npt.NDArray[np.generic]] = {"head": np.array([self.frequency, self.residual])}
         for i, r in enumerate(self.responses):
             arrays |= {f"{i}c": r.contributions, f"{i}s": r.supplied, f"{i}a": r.absorbed}
-            arrays[f"{i}r"] = np.array([r.residual, r.closure])
+            arrays[f"{i}r"] = np.array([r.closure])
             if r.field is not None:
                 arrays[f"{i}f"] = r.field
         np.savez(stream, **arrays)  # type: ignore[arg-type]
@@ -71,10 +66,9 @@ class Line:
             count = sum(1 for key in held.files if key.endswith("c"))
             responses = []
             for i in range(count):
-                residual, closure = (float(v) for v in held[f"{i}r"])
                 field = held[f"{i}f"] if f"{i}f" in held.files else None
                 arrays = held[f"{i}c"], held[f"{i}s"], held[f"{i}a"]
-                responses.append(Response(*arrays, residual, closure, field))
+                responses.append(Response(*arrays, float(held[f"{i}r"][0]), field))
             f, worst = (float(v) for v in held["head"])
         return cls(f, tuple(responses), worst)
 
@@ -132,7 +126,7 @@ class Result:
                     np.stack([row.contributions for row in rows]),
                     np.stack([row.supplied for row in rows]),
                     np.stack([row.absorbed for row in rows]),
-                    np.array([max(row.residual, line.residual) for row, line in zip(rows, lines, strict=True)]),
+                    np.array([line.residual for line in lines]),
                     np.array([row.closure for row in rows]),
                     np.stack(fields) if fields else np.empty((0, 0, 0), dtype=np.complex128),
                 )

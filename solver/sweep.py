@@ -19,10 +19,11 @@ from pathlib import Path
 import numpy as np
 import numpy.typing as npt
 import scipy
+import scipy.sparse as sp
 
 from murmesh.solver.case.model import Case
 from murmesh.solver.errors import ResultError
-from murmesh.solver.linalg import Analysis, Factor, analyse, solve_refined
+from murmesh.solver.linalg import Analysis, analyse, solve_refined
 from murmesh.solver.power import absorbed_power, input_power, power_labels
 from murmesh.solver.receiver_points import Samples, locate_receivers
 from murmesh.solver.result import Line, Response, Result
@@ -120,42 +121,63 @@ class _Engine:
     analysis: Analysis
     phi: Complex
     free: npt.NDArray[np.bool_]
+    outputs: Complex
     labels: tuple[str, ...]
 
     @classmethod
     def of(cls, system: System, solver: str) -> _Engine:
         phi = system.coefficients(system.space.case.sweep.frequencies)
         analysis = analyse(system.pattern.lower, solver)
-        return cls(system, analysis, phi, ~system.fixed, power_labels(system))
+        outputs = system.receivers.T.tocsr()[~system.fixed].toarray().astype(np.complex128)
+        return cls(system, analysis, phi, ~system.fixed, outputs, power_labels(system))
 
     def line(self, index: int, f: float) -> Line:
-        """Solve one frequency for all load cases and receivers."""
-        phi, free = self.phi[index], self.free
-        matrix = self.system.matrix(phi)
-        factor = self.analysis.factor(matrix.data[self.system.pattern.lower_slots])
+        """Solve one frequency for all load cases and receivers: one factorisation, one block of right-hand sides."""
+        system, free = self.system, self.free
+        matrix = system.matrix(self.phi[index])
+        factor = self.analysis.factor(matrix.data[system.pattern.lower_slots])
+        drives = [_Drive.of(system, loads, matrix, f) for loads in system.load_sets]
+        columns = [self.outputs, *(drive.inside[free] @ drive.mix for drive in drives)]
         inner = matrix if free.all() else matrix[free][:, free]
-        outputs = self.system.receivers.T.tocsc()[free].toarray().astype(np.complex128)
-        adjoint, residual = solve_refined(factor, inner, outputs) if outputs.shape[1] else (outputs, 0.0)
-        responses = [self._respond(s, matrix, inner, factor, adjoint, phi, f) for s in self.system.load_sets]
-        return Line.of(f, responses, residual)
+        solved, residual = solve_refined(factor, inner, np.hstack(columns))
+        adjoint, *fields = np.split(solved, np.cumsum([block.shape[1] for block in columns[:-1]]), axis=1)
+        responses = [
+            self._respond(drive, matrix, adjoint, field, self.phi[index], f)
+            for drive, field in zip(drives, fields, strict=True)
+        ]
+        return Line(f, tuple(responses), residual)
 
     def _respond(
-        self, loads: LoadSet, matrix: object, inner: object, factor: Factor, adjoint: Complex, phi: Complex, f: float
+        self, drive: _Drive, matrix: sp.csr_matrix, adjoint: Complex, solution: Complex, phi: Complex, f: float
     ) -> Response:
         system, free = self.system, self.free
-        forces, given = loads.vectors(f)
-        inside = forces[free] - (matrix @ given)[free] if np.any(given) else forces[free]  # type: ignore[operator]
-        contributions = adjoint.T @ inside + system.receivers @ given
-        case = system.space.case.load_case(loads.name)
-        mix = case.combination.factors(np.array([f]), len(loads.loads))[0]
-        field = given @ mix
-        solution, residual = solve_refined(factor, inner, inside @ mix)  # type: ignore[arg-type]
+        contributions = adjoint.T @ drive.inside[free] + system.receivers @ drive.given
+        field = drive.given @ drive.mix
         field[free] += solution
-        closure = _relative(system.receivers @ field, contributions @ mix)
-        reaction = matrix @ field - forces @ mix if not free.all() else None  # type: ignore[operator]
-        supplied = input_power(f, forces, given, reaction, field, mix)
+        closure = _relative(system.receivers @ field, contributions @ drive.mix)
+        reaction = None if free.all() else matrix @ field - drive.forces @ drive.mix
+        supplied = input_power(f, drive.forces, drive.given, reaction, field, drive.mix)
+        taken = absorbed_power(system, phi, f, field, self.labels)
         kept = field if np.any(np.isclose(f, system.space.case.sweep.field_frequencies, rtol=1e-9)) else None
-        return Response(contributions, supplied, absorbed_power(system, phi, f, field, self.labels), residual, closure, kept)
+        return Response(contributions, supplied, taken, closure, kept)
+
+
+@dataclass(frozen=True, eq=False)
+class _Drive:
+    """One load case at one frequency: forces and prescribed pressures (n, loads), what they leave on the right-hand side
+    of the free unknowns, and the columns `mix` (loads, r) whose mean squares add up to the field's."""
+
+    forces: Complex
+    given: Complex
+    inside: Complex
+    mix: Complex
+
+    @classmethod
+    def of(cls, system: System, loads: LoadSet, matrix: sp.csr_matrix, f: float) -> _Drive:
+        forces, given = loads.vectors(f)
+        inside = forces - matrix @ given if np.any(given) else forces
+        rule = system.space.case.load_case(loads.name).combination
+        return cls(forces, given, inside, rule.factors(np.array([f]), len(loads.loads))[0])
 
 
 def _relative(direct: Complex, summed: Complex) -> float:

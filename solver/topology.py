@@ -1,9 +1,9 @@
 """Who touches whom in a tetrahedral mesh: entity numbers, neighbours, and inner surfaces opened in the numbering.
 
-An inner two-sided surface is not cut out of the mesh.  Around every vertex, edge and face that touches it, the tetrahedra
-that can only be joined by crossing an open face receive separate entity numbers, so that the pressure may jump there and
-stays continuous around the rim.  A face on the surface is always split in two.  Orientation follows the mesh's own vertex
-numbers, hence the two sides of a split entity carry the same functions.
+An inner two-sided surface is not cut out of the mesh.  Around every vertex, edge and face that touches it, the
+tetrahedra that can only be joined by crossing an open face receive separate entity numbers, so that the pressure may
+jump there and stays continuous around the rim.  A face on the surface is always split in two.  Orientation follows the
+mesh's own vertex numbers, hence the two sides of a split entity carry the same functions.
 """
 
 from __future__ import annotations
@@ -45,7 +45,7 @@ class _FaceTable:
 class Topology:
     """Entity numbers of a mesh of t tetrahedra.
 
-    sorted_vertices (t, 4)   local corners in ascending mesh number: sorted corner i is mesh corner sorted_vertices[:, i]
+    sorted_vertices (t, 4)   local corners in ascending mesh number: sorted corner i is corner sorted_vertices[:, i]
     tet_vertex_ids (t, 4)    vertex numbers of the *sorted* corners, 0..n_vertices-1
     tet_edge_ids (t, 6)      edges 01, 02, 03, 12, 13, 23 of the sorted corners
     tet_face_ids (t, 4)      face i lies opposite sorted corner i
@@ -83,7 +83,7 @@ class Topology:
         if len(opened):
             ids, counts, origins = _open(ids, counts, table, opened)
             vertex_nodes = nodes[origins[0]]
-        return Topology(order, *ids, *counts, vertex_nodes, opened, table)
+        return Topology(order, ids[0], ids[1], ids[2], counts[0], counts[1], counts[2], vertex_nodes, opened, table)
 
     @property
     def n_tets(self) -> int:
@@ -217,9 +217,7 @@ def _open(
     return [o[0] for o in out], [len(o[1]) for o in out], [o[1] for o in out]
 
 
-def _split(
-    ids: Ints, count: int, touched_local: Ints, touched_tet: Ints, tet: Ints, local: Ints
-) -> tuple[Ints, Ints]:
+def _split(ids: Ints, count: int, touched_local: Ints, touched_tet: Ints, tet: Ints, local: Ints) -> tuple[Ints, Ints]:
     """Renumber the (tetrahedron, entity) pairs of one kind by what is joined through closed faces.
 
     local (closed faces, 2, k): the k entities of each closed face in its two tetrahedra.
@@ -249,7 +247,7 @@ def _links(ids: Ints, pair_of: Ints, tet: Ints, local: Ints) -> tuple[Ints, Ints
 
 
 def _renumber(ids: Ints, count: int, inside: Bools, part: Ints) -> tuple[Ints, Ints]:
-    """The first part of each entity keeps its number, further parts are appended; also the old number of each new one."""
+    """The first part of each entity keeps its number, more are appended; also the old number of each new one."""
     old = ids[inside]
     first_of_part = np.unique(part, return_index=True)[1]
     owner = old[first_of_part]

@@ -4,8 +4,8 @@
 
 Straight tetrahedra: six metric terms times reference matrices, K_e = sum_m g_m R_m.  Curved ones: quadrature in chunks.
 The scatter works on blocks: the pattern is that of entities (vertices, edges, faces, interiors) that share a
-tetrahedron, and the place of every block in the final CSR arrays is known before a value is computed, so that nothing is
-sorted, summed or stored twice per matrix entry.
+tetrahedron, and the place of every block in the final CSR arrays is known before a value is computed, so that
+nothing is sorted, summed or stored twice per matrix entry.
 """
 
 from __future__ import annotations
@@ -99,7 +99,7 @@ class _Pairs:
         rows, cols = (entities[:, _KINDS[k]] for k in kinds)
         keys = (rows[:, :, None] * len(sizes) + cols[:, None, :]).ravel()
         used = np.flatnonzero(((sizes[rows] > 0)[:, :, None] & (sizes[cols] > 0)[:, None, :]).ravel())
-        order = used[np.argsort(keys[used], kind="stable")]
+        order = used[np.argsort(keys[used])]
         ascending = keys[order]
         first = np.flatnonzero(np.append(True, ascending[1:] != ascending[:-1])[: len(order)])
         distinct = ascending[first]
@@ -107,7 +107,8 @@ class _Pairs:
 
     @property
     def local_counts(self) -> tuple[int, int]:
-        return tuple(_KINDS[k].stop - _KINDS[k].start for k in self.kinds)  # type: ignore[return-value]
+        rows, cols = (int(_KINDS[k].stop - _KINDS[k].start) for k in self.kinds)
+        return rows, cols
 
     def parts(self, sizes: Ints) -> Iterator[_Part]:
         """Pairs of equal block shape, in chunks of bounded size."""
@@ -126,7 +127,7 @@ class _Pairs:
 def _ranges(starts: Ints, counts: Ints) -> Ints:
     """starts[0] .. starts[0]+counts[0]-1, starts[1] .., one after another."""
     shift = starts - (np.cumsum(counts) - counts)
-    return np.arange(counts.sum()) + np.repeat(shift, counts)
+    return np.asarray(np.arange(counts.sum()) + np.repeat(shift, counts))
 
 
 @dataclass(frozen=True)
@@ -229,39 +230,38 @@ class _Elements:
     def blocks(self, pairs: _Pairs, part: _Part) -> tuple[Floats, Floats]:
         """Blocks (pairs, a, b) of K and M, summed over the instances of each pair."""
         rows, cols = pairs.local_counts
-        size = part.shape[0] * part.shape[1]
         tets, local = np.divmod(part.instances, rows * cols)
-        each = np.empty((2, len(tets), size))
+        order = np.argsort(local.astype(np.uint8), kind="stable")  # instances of one local pair next to each other
+        bounds = np.searchsorted(local[order], np.arange(rows * cols + 1))
+        each = np.empty((2, len(tets), part.shape[0] * part.shape[1]))
         for pair in range(rows * cols):
-            chosen = np.flatnonzero(local == pair)
+            chosen = slice(bounds[pair], bounds[pair + 1])
             a, b = divmod(pair, cols)
             corner = _KINDS[pairs.kinds[0]].start + a, _KINDS[pairs.kinds[1]].start + b
-            self._fill(each, chosen, tets[chosen], corner, part.shape)
-        if len(part.counts) == len(tets):
-            stiffness, mass = each
-        else:
-            indptr = np.concatenate([[0], np.cumsum(part.counts)])
-            add = sp.csr_matrix((np.ones(len(tets)), np.arange(len(tets)), indptr), shape=(len(part.counts), len(tets)))
-            stiffness, mass = add @ each[0], add @ each[1]
-        return stiffness.reshape(-1, *part.shape), mass.reshape(-1, *part.shape)
+            self._fill(each[:, chosen], tets[order[chosen]], corner, part.shape)
+        indptr = np.concatenate([[0], np.cumsum(part.counts)])
+        add = sp.csr_matrix((np.ones(len(tets)), np.argsort(order), indptr), shape=(len(part.counts), len(tets)))
+        return (add @ each[0]).reshape(-1, *part.shape), (add @ each[1]).reshape(-1, *part.shape)
 
-    def _fill(
-        self, each: Floats, chosen: Ints, tets: Ints, corner: tuple[int, int], shape: tuple[int, int]
-    ) -> None:
-        """Element blocks of local entities `corner`; a lower order is a prefix of the reference matrices."""
-        if not len(chosen):
-            return
-        a, b = (slice(self.starts[e], self.starts[e] + n) for e, n in zip(corner, shape, strict=True))
+    def _fill(self, out: Floats, tets: Ints, corner: tuple[int, int], shape: tuple[int, int]) -> None:
+        """Element blocks (2, m, a b) of local entities `corner`; a lower order is a prefix of the reference."""
         size = shape[0] * shape[1]
-        each[0, chosen] = self.metric[tets] @ self.reference[0][:, a, b].reshape(6, size)
-        each[1, chosen] = self.det[tets][:, None] * self.reference[1][a, b].reshape(size)
+        a, b = _slices(self.starts, corner, shape)
+        out[0] = self.metric[tets] @ self.reference[0][:, a, b].reshape(6, size)
+        out[1] = self.det[tets][:, None] * self.reference[1][a, b].reshape(size)
         for bent in self.bent:
             place = bent.place[tets]
             curved = place >= 0
             if np.any(curved):
-                a, b = (slice(bent.starts[e], bent.starts[e] + n) for e, n in zip(corner, shape, strict=True))
-                each[0, chosen[curved]] = bent.stiffness[place[curved], a, b].reshape(-1, size)
-                each[1, chosen[curved]] = bent.mass[place[curved], a, b].reshape(-1, size)
+                a, b = _slices(bent.starts, corner, shape)
+                out[0, curved] = bent.stiffness[place[curved], a, b].reshape(-1, size)
+                out[1, curved] = bent.mass[place[curved], a, b].reshape(-1, size)
+
+
+def _slices(starts: Ints, corner: tuple[int, int], shape: tuple[int, int]) -> tuple[slice, slice]:
+    """The first functions of two local entities."""
+    (a, b), (m, n) = corner, shape
+    return slice(int(starts[a]), int(starts[a]) + m), slice(int(starts[b]), int(starts[b]) + n)
 
 
 def _metric(inner: Floats) -> Floats:

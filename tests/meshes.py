@@ -1,7 +1,8 @@
 """Small tetrahedral meshes made with numpy alone, so that the solver's tests need no mesher.
 
 Every function returns a frozen `TestMesh`: nodes (n, 3), tets (t, 4 or 10), and named outer surfaces as triangles
-(m, 3 or 6).  Node order is that of VTK: mid-edge nodes 01, 12, 20 of a triangle and 01, 12, 02, 03, 13, 23 of a tetrahedron.
+(m, 3 or 6).  Node order is that of VTK: mid-edge nodes 01, 12, 20 of a triangle, 01, 12, 02, 03, 13, 23 of a
+tetrahedron.
 """
 
 from __future__ import annotations
@@ -18,7 +19,7 @@ Ints = npt.NDArray[np.int64]
 
 TET_EDGES = np.array([[0, 1], [1, 2], [0, 2], [0, 3], [1, 3], [2, 3]])
 TRIANGLE_EDGES = np.array([[0, 1], [1, 2], [2, 0]])
-TET_FACES = np.array([[1, 2, 3], [0, 3, 2], [0, 1, 3], [0, 2, 1]])  # face i lies opposite vertex i, normal out of the tet
+TET_FACES = np.array([[1, 2, 3], [0, 3, 2], [0, 1, 3], [0, 2, 1]])  # face i opposite vertex i, normal outwards
 
 
 @dataclass(frozen=True)

@@ -19,6 +19,7 @@ from murmesh.plugin.describe import (
     names,
     number,
     origin,
+    short,
     signed,
 )
 from murmesh.plugin.pictures import PICTURES
@@ -59,7 +60,7 @@ def figure(
     sheet = page(
         "Which panel to quieten: shares of the mean square",
         ranking_facts(result, ranking),
-        [*ranking_notes(ranking), f"Convention: {CONVENTION}. {origin(result)}."],
+        [*ranking_notes(ranking), _columns_note(ranking), f"Convention: {CONVENTION}. {origin(result)}."],
         len(ranking.rows) * _BAR + 1.2,
     )
     axes = sheet.axes(2.35, 0.75, sheet.width - 2.35 - 2.8, len(ranking.rows) * _BAR)
@@ -86,9 +87,15 @@ def ranking_notes(ranking: Ranking) -> list[str]:
     total = 100 * sum(row.share for row in ranking.rows)
     return [
         ranking.words,
-        f"The shares add up to {total:.1f} % of the mean square (closure {ranking.closure:.0e}). “alone”: level of the panel "
-        f"by itself, {level_unit(ranking.weighting)}; “if silent”: change of the level if the panel did not move.",
+        f"The shares add up to {total:.1f} % of the mean square (to within {max(ranking.closure, 1e-16):.0e}).",
     ]
+
+
+def _columns_note(ranking: Ranking) -> str:
+    return (
+        f"“alone”: level of the panel by itself, {level_unit(ranking.weighting)}; “if silent”: change of the level if the "
+        "panel did not move."
+    )
 
 
 def _bars(axes: Axes, ranking: Ranking) -> None:
@@ -98,7 +105,7 @@ def _bars(axes: Axes, ranking: Ranking) -> None:
     low, high = 10 * np.floor(min(shares.min(), 0) / 10), 10 * np.ceil(max(shares.max(), 10) / 10)
     axes.set_xlim(low, high)
     axes.set_ylim(len(shares) - 0.5, -0.5)
-    axes.set_yticks(range(len(shares)), [row.panel for row in ranking.rows], fontsize=11)
+    axes.set_yticks(range(len(shares)), [short(row.panel, 22) for row in ranking.rows], fontsize=11)
     axes.tick_params(axis="y", length=0)
     axes.axvline(0, color=INK, linewidth=1.0)
     axes.grid(True, axis="x")

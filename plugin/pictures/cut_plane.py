@@ -16,6 +16,7 @@ import numpy.typing as npt
 from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
 from matplotlib.figure import Figure
+from matplotlib.ticker import MultipleLocator
 
 from murmesh.plugin.describe import CONVENTION, hertz, is_density, level_unit, load_case_words, origin
 from murmesh.plugin.fields import field_levels, kept_line
@@ -31,6 +32,7 @@ Floats = npt.NDArray[np.float64]
 Vector = tuple[float, float, float]
 
 _CELLS = 250  # along the longer edge of a cut
+_CONTOUR = 5.0  # dB
 _NEAR = 0.05  # metres: a receiver farther from the plane is drawn hollow
 _BAR, _LABELS, _ABOVE, _UNDER = 1.35, 0.8, 0.35, 0.62  # inches: colour bar, room left of, above and below a cut
 _MOST_HEIGHT = 9.0  # inches
@@ -126,7 +128,7 @@ def figure(
 ) -> Figure:
     """The figure, for further work."""
     line = kept_line(result, frequency, load_case)
-    skin = sample_skin(result.space, 1 if result.case.mesh.tets.shape[1] == 4 else 0)
+    skin = sample_skin(result.space, 0 if result.space.geometry.curved.any() else 1)
     cuts = [_cut(result, skin, Plane.of(*plane), line, load_case) for plane in planes or default_planes(result.case)]
     levels = [field_levels(result, cut.pressure.reshape(-1, cut.pressure.shape[2]), load_case) for cut in cuts]
     scale = level_limits(np.concatenate(levels), limits)
@@ -135,14 +137,14 @@ def figure(
         load_case_words(result.load_case_of(load_case)),
     ]
     notes = [
-        f"Sampled from the elements on a grid. A hollow dot is a receiver more than {1000 * _NEAR:.0f} mm off the plane.",
+        f"Sampled from the elements on a grid; contours every {_CONTOUR:.0f} dB. A hollow dot is a receiver more than {1000 * _NEAR:.0f} mm off the plane.",
         f"Convention: {CONVENTION}. {origin(result)}.",
     ]
     layout = Arrangement.of(cuts)
     sheet = page("Sound pressure level on cut planes", facts, notes, layout.height)
     for (left, bottom), cut, values in zip(layout.corners, cuts, levels, strict=True):
         axes = sheet.axes(left, bottom, *(cut.size * layout.scale))
-        _draw(axes, result.case, cut, values.reshape(cut.pressure.shape[:2]), scale)
+        _draw(axes, result.case, cut, values.reshape(cut.pressure.shape[:2]), scale, layout.scale)
     high = min(layout.height - 0.6, 4.2)
     bar = sheet.axes(sheet.width - _BAR + 0.3, (layout.height - high) / 2, 0.24, high)
     colour_bar(bar, scale, f"level [{level_unit('Z', is_density(result, load_case))}]")
@@ -207,10 +209,21 @@ def crossings(skin: Skin, origin: Floats, normal: Floats) -> Floats:
     return np.asarray(at[hit][crosses[hit]].reshape(-1, 2, 3))
 
 
-def _draw(axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, float]) -> None:
+def _tick(inches_per_metre: float) -> float:
+    """The step of the ticks [m]: 1, 2 or 5 times a power of ten, at least half an inch."""
+    least = 0.5 / inches_per_metre
+    power = 10.0 ** np.floor(np.log10(least))
+    return float(next(m * power for m in (1, 2, 5, 10) if m * power >= least))
+
+
+def _draw(
+    axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, float], scale_of_lengths: float
+) -> None:
     extent = (cut.low[0], cut.high[0], cut.low[1], cut.high[1])
     colours = matplotlib.colormaps[LEVEL_MAP]
     axes.imshow(levels, origin="lower", extent=extent, cmap=colours, vmin=scale[0], vmax=scale[1], interpolation="nearest")
+    steps = np.arange(scale[0], scale[1] + 0.1, _CONTOUR)
+    axes.contour(levels, steps, extent=extent, colors=INK, linewidths=0.5, alpha=0.45)
     axes.add_collection(LineCollection(list(cut.outline), colors=INK, linewidths=1.2, clip_on=False))
     for side in axes.spines.values():
         side.set_visible(False)
@@ -218,6 +231,8 @@ def _draw(axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, 
     axes.set_ylabel(f"{cut.plane.axes[1]} [m]")
     axes.set_title(cut.plane.title, loc="left", fontsize=11)
     axes.set_aspect("equal")
+    for way in (axes.xaxis, axes.yaxis):
+        way.set_major_locator(MultipleLocator(_tick(scale_of_lengths)))
     points = np.array([receiver.position for receiver in case.receivers]).reshape(-1, 3)
     near = np.abs((points - cut.plane.origin) @ cut.plane.normal) <= _NEAR
     receiver_dots(axes, case.receivers, cut.plane.flat(points), near.tolist())

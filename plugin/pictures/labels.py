@@ -125,8 +125,8 @@ def _beside(axes: Axes, place: Floats, text: str, taken: list[Bbox]) -> None:
 
 def triad(axes: Axes, view: View) -> None:
     """Arrows of x, y, z in the lower left corner of a view; an axis that points at the reader is left out."""
-    size = 0.11 * min(view.half_width, view.half_height) * 2
-    corner = np.array([-view.half_width, -view.half_height]) + 0.9 * size
+    size = 0.16 * min(view.half_width, view.half_height)
+    corner = np.array([-view.half_width, -view.half_height]) + 0.75 * size
     for name, axis in zip("xyz", np.eye(3), strict=True):
         tip = size * np.array([axis @ view.right, axis @ view.up])
         if np.linalg.norm(tip) < 0.2 * size:

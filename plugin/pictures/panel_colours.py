@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 from matplotlib.figure import Figure
 
-from murmesh.plugin.describe import CONVENTION, names, origin, signed
+from murmesh.plugin.describe import CONVENTION, names, origin, short, signed
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.contribution_bars import ranking_facts, ranking_notes
 from murmesh.plugin.pictures.labels import anchors, in_margins, receiver_dots, triad
@@ -18,7 +18,7 @@ from murmesh.plugin.sampling import sample_skin
 from murmesh.solver.contribution import Ranking, rank
 from murmesh.solver.result import Result
 
-_HEIGHT, _BELOW, _NAMES = 6.0, 0.75, 1.52  # inches: views and bar, the bar, room for names beside a view
+_HEIGHT, _BELOW, _NAMES = 5.3, 0.75, 1.52  # inches: views and bar, the bar, room for names beside a view
 _STILL = "#dfe3e5"
 
 
@@ -59,7 +59,7 @@ def figure(
     drawn = two_views(
         sheet, skin, _NAMES, _BELOW, scalars=cells, cmap=SIGNED_MAP, clim=(-reach, reach), nan_color=_STILL
     )
-    words = {index: f"{surfaces[index]}\n{signed(value, ' %')}" for index, value in share.items()}
+    words = {index: f"{short(surfaces[index], 18)}\n{signed(value, ' %')}" for index, value in share.items()}
     places = np.array([receiver.position for receiver in result.case.receivers]).reshape(-1, 3)
     outline = Outline.of(skin)
     for axes, view in drawn:
@@ -70,7 +70,7 @@ def figure(
         triad(axes, view)
     bar = sheet.axes(sheet.width / 2 - 3, 0.42, 6.0, 0.18)
     colour_bar(bar, (-reach, reach), "lowers the level  ◂  share of the mean square [%]  ▸  raises the level",
-               colours=SIGNED_MAP, step=reach / 5, upright=False)  # fmt: skip
+               colours=SIGNED_MAP, step=10.0 if reach <= 60 else 20.0, upright=False)  # fmt: skip
     return sheet.figure
 
 

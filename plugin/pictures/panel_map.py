@@ -1,6 +1,6 @@
 """Frequency x panel: where in the spectrum each panel raises or lowers the level, under the total spectrum.
 
-Shown is the level of a panel's share of the mean square, with the share's sign: strong colours stand only where the panel
+Shown is the level of a panel’s share of the mean square, with the share's sign: strong colours stand only where the panel
 matters to the level, not in the dips of the spectrum.
 """
 
@@ -26,6 +26,7 @@ from murmesh.plugin.describe import (
     load_case_words,
     names,
     origin,
+    short,
 )
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.style import LINES, QUIET, SIGNED_MAP, frequency_axis, level_limits, look, page, save
@@ -79,7 +80,7 @@ def figure(
         load_case_words(result.load_case_of(load_case)),
     ]
     notes = [
-        f"Colour: level of the panel's share of the mean square in {unit}; orange raises the total, purple lowers it; "
+        f"Colour: level of the panel’s share of the mean square in {unit}; orange raises the total, purple lowers it; "
         f"below {scale[0]:.0f} dB nothing is shown.",
         QUIETENING,
         f"Convention: {CONVENTION}. {origin(result)}.",
@@ -122,7 +123,7 @@ def _image(axes: Axes, edges: Floats, values: Floats, panels: Sequence[str], sca
     rows = np.arange(len(panels) + 1) - 0.5
     axes.pcolormesh(edges, rows, values.T, cmap=SIGNED_MAP, norm=Normalize(-reach, reach), rasterized=True)
     axes.set_ylim(len(panels) - 0.5, -0.5)
-    axes.set_yticks(range(len(panels)), panels, fontsize=10)
+    axes.set_yticks(range(len(panels)), [short(panel, 22) for panel in panels], fontsize=10)
     axes.tick_params(axis="y", length=0)
     for row in rows[1:-1]:
         axes.axhline(row, color="white", linewidth=1.2)

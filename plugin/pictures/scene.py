@@ -31,7 +31,7 @@ _FIT = 1.06
 _CAPTION = 0.32  # inches above a view
 VIEWS_NOTE = (
     "Two views from opposite corners, parallel projection; walls that turn their back are left out (thin outlines), so that "
-    "each wall is seen from the fluid's side in one of the two."
+    "each wall is seen from the fluid’s side in one of the two."
 )
 
 
@@ -125,12 +125,13 @@ def render(
         plotter.set_background("white")
         mesh = _polydata(skin)
         plotter.add_mesh(mesh, lighting=False, culling="front", show_scalar_bar=False, **colouring)
+        plotter.disable_anti_aliasing()
         if smooth:
             plotter.enable_anti_aliasing("ssaa")
             shown, left_out = outline.split(view)
             for edges, colour, width in ((shown, INK, 1.6), (left_out, QUIET, 1.0)):
                 if len(edges):
-                    plotter.add_mesh(_lines(skin, edges), color=colour, line_width=width, lighting=False)
+                    plotter.add_mesh(_lines(view, skin, edges), color=colour, line_width=width, lighting=False)
         _look(plotter, view)
         return np.asarray(plotter.screenshot(return_img=True))
     finally:
@@ -144,11 +145,13 @@ def _polydata(skin: Skin) -> PolyData:
     return pyvista.PolyData(skin.cloud.points, faces.ravel())
 
 
-def _lines(skin: Skin, edges: Ints) -> PolyData:
+def _lines(view: View, skin: Skin, edges: Ints) -> PolyData:
+    """Edges, a little in front of the faces they lie on."""
     import pyvista
 
     lines = np.hstack([np.full((len(edges), 1), 2), edges])
-    return pyvista.PolyData(skin.cloud.points, lines=lines.ravel())
+    lift = 2e-3 * (view.half_width + view.half_height) * view.towards
+    return pyvista.PolyData(skin.cloud.points + lift, lines=lines.ravel())
 
 
 def _look(plotter: Any, view: View) -> None:

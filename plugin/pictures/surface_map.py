@@ -54,8 +54,8 @@ def figure(
     ]
     notes = [VIEWS_NOTE, f"Convention: {CONVENTION}. {origin(result)}."]
     sheet = page("Sound pressure level on the surfaces", facts, notes, _HEIGHT)
-    narrower = sheet.narrowed(_BAR)
-    for axes, view in two_views(narrower, skin, 0.05, 0.0, scalars=levels, cmap=LEVEL_MAP, clim=scale):
+    shown = np.maximum(levels, scale[0])  # a pressure node must not pull its neighbours down between the points
+    for axes, view in two_views(sheet.narrowed(_BAR), skin, 0.05, 0.0, scalars=shown, cmap=LEVEL_MAP, clim=scale):
         triad(axes, view)
         places = np.array([receiver.position for receiver in result.case.receivers]).reshape(-1, 3)
         receiver_dots(axes, result.case.receivers, view.project(places))

@@ -45,7 +45,7 @@ class Medium(Declared):
 
 @kind("air")
 class Air(Medium):
-    """Humid air: density of an ideal gas mixture, speed by Cramer (JASA 93 (1993) 2510, eq. 15, coefficients from memory)."""
+    """Humid air: ideal gas mixture; speed by Cramer (JASA 93 (1993) 2510, eq. 15; coefficients from memory)."""
 
     temperature: float = quantity(help="temperature", unit="degC", low=-40.0, high=80.0, default=20.0)
     pressure: float = quantity(help="static pressure", unit="Pa", low=3e4, high=2e5, default=101325.0)
@@ -61,6 +61,14 @@ class Air(Medium):
         density = self.pressure * molar / (GAS_CONSTANT * kelvin)
         speed = _cramer(self.temperature, self.pressure, fraction)
         return Fluid(density, speed, viscosity, 0.71, 1.4, self.pressure)
+
+    def warnings(self, f: Float) -> tuple[str, ...]:
+        if 0 <= self.temperature <= 30 and 75e3 <= self.pressure <= 102e3:
+            return ()
+        return (
+            "the speed of sound in air holds for 0 .. 30 degC and 75 .. 102 kPa (Cramer, JASA 93 (1993) 2510); "
+            f"{self.temperature:g} degC, {self.pressure / 1e3:g} kPa lies outside",
+        )
 
     @classmethod
     def example(cls) -> Air:
@@ -88,8 +96,9 @@ def _cramer(t: float, p: float, x_w: float, x_c: float = 314e-6) -> float:
 
 @kind("water")
 class Water(Medium):
-    """Fresh water by Marczak (JASA 102 (1997) 2776), sea water by Mackenzie (JASA 70 (1981) 807); coefficients from memory.
+    """Fresh water by Marczak (JASA 102 (1997) 2776), sea water by Mackenzie (JASA 70 (1981) 807).
 
+    Coefficients from memory.
     Density: Kell (J. Chem. Eng. Data 20 (1975) 97), plus 0.77 kg/m3 per unit of salinity (common practice, no source).
     """
 
@@ -108,7 +117,15 @@ class Water(Medium):
         t = self.temperature
         kell = (999.83952, 16.945176, -7.9870401e-3, -46.170461e-6, 105.56302e-9, -280.54253e-12)
         density = _polynomial(kell, t) / (1 + 16.879850e-3 * t) + 0.77 * self.salinity
-        return Fluid(density, self._speed(), 1.0e-3, 7.0, 1.007)
+        return Fluid.consistent(density, self._speed(), viscosity=1.0e-3, prandtl=7.0, heat_ratio=1.007)
+
+    def warnings(self, f: Float) -> tuple[str, ...]:
+        if self.salinity == 0 or (2 <= self.temperature <= 30 and 25 <= self.salinity <= 40):
+            return ()
+        return (
+            "the speed of sound in sea water holds for 2 .. 30 degC and 25 .. 40 g/kg (Mackenzie, JASA 70 (1981) 807); "
+            f"{self.temperature:g} degC, {self.salinity:g} g/kg lies outside",
+        )
 
     def _speed(self) -> float:
         t, s, d = self.temperature, self.salinity, self.depth
@@ -137,7 +154,7 @@ class GivenFluid(Medium):
 
     @property
     def reference(self) -> Fluid:
-        return Fluid(self.density, self.speed)
+        return Fluid.consistent(self.density, self.speed)
 
     @classmethod
     def example(cls) -> GivenFluid:
@@ -154,7 +171,7 @@ class PorousMedium(Medium):
 
     @property
     def reference(self) -> Fluid:
-        return Fluid(self.density, self.speed)
+        return Fluid.consistent(self.density, self.speed)
 
     def rho(self, f: Float) -> Complex:
         return self.law.effective(f, self.reference)[0]
@@ -222,7 +239,12 @@ class ReverberationTime(Damping):
     value: float | Spectrum = quantity(help="T60, number or table over frequency", unit="s", positive=True)
 
     def loss_factor(self, f: Float, medium: Medium) -> Float:
-        return np.asarray(2.2 / (f * _real("reverberation time", self.value, f)))
+        time = _real("reverberation time", self.value, f)
+        if np.any(time == 0):
+            raise FieldError(
+                f"a reverberation time of zero at {f[time == 0][0]:g} Hz has no loss factor; correct the table"
+            )
+        return np.asarray(2.2 / (f * time))
 
     @classmethod
     def example(cls) -> ReverberationTime:
@@ -231,14 +253,27 @@ class ReverberationTime(Damping):
 
 @kind("air_absorption")
 class AirAbsorption(Damping):
-    """Atmospheric absorption of the region's air (ISO 9613-1): k = w/c - i alpha, alpha in neper per metre."""
+    """Atmospheric absorption (ISO 9613-1), k = w/c - i alpha; what is not given is that of the region's air."""
 
-    temperature: float = quantity(help="temperature", unit="degC", low=-40.0, high=80.0, default=20.0)
-    pressure: float = quantity(help="static pressure", unit="Pa", low=3e4, high=2e5, default=101325.0)
-    humidity: float = quantity(help="relative humidity", unit="%", low=0.0, high=100.0, default=50.0)
+    temperature: float | None = quantity(
+        help="temperature (default: that of the region's air)", unit="degC", low=-40.0, high=80.0, default=None
+    )
+    pressure: float | None = quantity(
+        help="static pressure (default: that of the region's air)", unit="Pa", low=3e4, high=2e5, default=None
+    )
+    humidity: float | None = quantity(
+        help="relative humidity (default: that of the region's air)", unit="%", low=0.0, high=100.0, default=None
+    )
+
+    def air(self, medium: Medium) -> Air:
+        """The air that absorbs: the medium if it is air, ordinary air otherwise, with the fields that are given."""
+        given = {"temperature": self.temperature, "pressure": self.pressure, "humidity": self.humidity}
+        own = medium if isinstance(medium, Air) else Air()
+        return own.with_(**{name: value for name, value in given.items() if value is not None})
 
     def loss_factor(self, f: Float, medium: Medium) -> Float:
-        alpha = air_absorption(f, self.temperature, self.pressure, self.humidity) / NEPER
+        air = self.air(medium)
+        alpha = air_absorption(f, air.temperature, air.pressure, air.humidity) / NEPER
         return np.asarray(2 * alpha * medium.reference.speed / (2 * np.pi * f))
 
     @classmethod
@@ -280,8 +315,11 @@ class CombinedDamping(Damping):
 
 def _real(what: str, value: float | Spectrum, f: Float) -> Float:
     values = as_spectrum(value).at(f)
-    if np.any(values.imag != 0) or np.any(values.real < 0):
-        raise FieldError(f"a {what} is real and not negative, got {values[np.argmin(values.real)]}; correct the table")
+    wrong = (values.imag != 0) | (values.real < 0)
+    if np.any(wrong):
+        raise FieldError(
+            f"a {what} is real and not negative, got {values[wrong][0]:g} at {f[wrong][0]:g} Hz; correct the table"
+        )
     return np.asarray(values.real)
 
 

@@ -25,7 +25,18 @@ class Fluid(Declared):
     viscosity: float = quantity(help="dynamic viscosity", unit="Pa.s", positive=True, default=1.84e-5)
     prandtl: float = quantity(help="Prandtl number", positive=True, default=0.71)
     heat_ratio: float = quantity(help="ratio of specific heats", positive=True, default=1.4)
-    pressure: float = quantity(help="static pressure", unit="Pa", positive=True, default=101325.0)
+    pressure: float = quantity(
+        help="static pressure; heat_ratio * pressure is the adiabatic bulk modulus",
+        unit="Pa",
+        positive=True,
+        default=101325.0,
+    )
+
+    @classmethod
+    def consistent(cls, density: float, speed: float, **properties: float) -> Fluid:
+        """A fluid known by density and speed alone: the pressure follows from rho c^2 = heat_ratio * pressure."""
+        fluid = cls(density, speed, **properties)
+        return fluid.with_(pressure=density * speed**2 / fluid.heat_ratio)
 
     @property
     def rho_c(self) -> float:
@@ -55,7 +66,7 @@ def _power_law(x: Float, c: tuple[float, ...], fluid: Fluid, f: Float) -> tuple[
     """Z_c/(rho c) = 1 + c0 x^-c1 - i c2 x^-c3 and k/(w/c) = 1 + c4 x^-c5 - i c6 x^-c7."""
     impedance = 1 + c[0] * x ** -c[1] - 1j * c[2] * x ** -c[3]
     ratio = 1 + c[4] * x ** -c[5] - 1j * c[6] * x ** -c[7]
-    return fluid.rho_c * impedance, 2 * np.pi * f / fluid.speed * ratio
+    return np.asarray(fluid.rho_c * impedance), np.asarray(2 * np.pi * f / fluid.speed * ratio)
 
 
 def _range_warning(x: Float, f: Float, low: float, high: float, words: str) -> tuple[str, ...]:
@@ -65,9 +76,20 @@ def _range_warning(x: Float, f: Float, low: float, high: float, words: str) -> t
     return (f"{words}; {outside.min():g} .. {outside.max():g} Hz lies outside",)
 
 
+def _active_warning(x: Float, f: Float, limit: float, words: str) -> tuple[str, ...]:
+    """Where Im K_e < 0 a thin layer has Re Z < 0; `limit` is the root of Im K_e(x), which depends on nothing else."""
+    active = f[x < limit]
+    if not len(active):
+        return ()
+    return (
+        f"{words}, here {active.min():g} .. {active.max():g} Hz: a thin layer has Re Z < 0 and creates sound there; "
+        "use johnson_champoux_allard, which is passive at every frequency",
+    )
+
+
 @kind("delany_bazley")
 class DelanyBazley(PorousLaw):
-    """Fibrous absorbers by one number, X = rho f / sigma (Delany & Bazley, Appl. Acoust. 3 (1970) 105; 0.01 < X < 1)."""
+    """Fibrous absorbers by one number (Delany & Bazley, Appl. Acoust. 3 (1970) 105; 0.01 < X = rho f/sigma < 1)."""
 
     flow_resistivity: float = quantity(help="airflow resistivity", unit="Pa.s/m2", positive=True)
 
@@ -76,8 +98,10 @@ class DelanyBazley(PorousLaw):
         return _power_law(x, (0.0571, 0.754, 0.087, 0.732, 0.0978, 0.700, 0.189, 0.595), fluid, f)
 
     def warnings(self, f: Float) -> tuple[str, ...]:
+        x = 1.205 * f / self.flow_resistivity  # the range is a rule of thumb: air at 20 degC will do
         words = "Delany-Bazley holds for 0.01 < rho f/sigma < 1 (Appl. Acoust. 3 (1970) 105)"
-        return _range_warning(1.205 * f / self.flow_resistivity, f, 0.01, 1.0, words)
+        active = "the bulk modulus of Delany-Bazley is active below rho f/sigma = 0.0141"
+        return _range_warning(x, f, 0.01, 1.0, words) + _active_warning(x, f, 0.0140955793, active)
 
     @classmethod
     def example(cls) -> DelanyBazley:
@@ -86,7 +110,7 @@ class DelanyBazley(PorousLaw):
 
 @kind("miki")
 class Miki(PorousLaw):
-    """Delany-Bazley made positive real, Y = f / sigma (Miki, J. Acoust. Soc. Jpn (E) 11 (1990) 19; 0.01 < Y < 1)."""
+    """Delany-Bazley fitted anew, passive in range (Miki, J. Acoust. Soc. Jpn (E) 11 (1990) 19; 0.01 < f/sigma < 1)."""
 
     flow_resistivity: float = quantity(help="airflow resistivity", unit="Pa.s/m2", positive=True)
 
@@ -95,8 +119,10 @@ class Miki(PorousLaw):
         return _power_law(y, (0.070, 0.632, 0.107, 0.632, 0.109, 0.618, 0.160, 0.618), fluid, f)
 
     def warnings(self, f: Float) -> tuple[str, ...]:
-        words = "Miki holds for 0.01 < f/sigma < 1 and stays passive below (J. Acoust. Soc. Jpn (E) 11 (1990) 19)"
-        return _range_warning(f / self.flow_resistivity, f, 0.01, 1.0, words)
+        y = f / self.flow_resistivity
+        words = "Miki holds for 0.01 < f/sigma < 1 (J. Acoust. Soc. Jpn (E) 11 (1990) 19)"
+        active = "the bulk modulus of Miki is active below f/sigma = 0.00081"
+        return _range_warning(y, f, 0.01, 1.0, words) + _active_warning(y, f, 0.000805504142, active)
 
     @classmethod
     def example(cls) -> Miki:
@@ -105,7 +131,10 @@ class Miki(PorousLaw):
 
 @kind("johnson_champoux_allard")
 class JohnsonChampouxAllard(PorousLaw):
-    """Rigid frame, five parameters (Johnson et al., JFM 176 (1987) 379; Champoux & Allard, J. Appl. Phys. 70 (1991) 1975)."""
+    """Rigid frame, five parameters, passive at every frequency.
+
+    Johnson et al., J. Fluid Mech. 176 (1987) 379; Champoux & Allard, J. Appl. Phys. 70 (1991) 1975.
+    """
 
     flow_resistivity: float = quantity(help="airflow resistivity", unit="Pa.s/m2", positive=True)
     porosity: float = quantity(help="open porosity", low=0.01, high=1.0)
@@ -120,11 +149,12 @@ class JohnsonChampouxAllard(PorousLaw):
         density = alpha * rho / phi * (1 + sigma * phi / (1j * w * rho * alpha) * g)
         h = np.sqrt(1 + 1j * rho * w * prandtl * self.thermal_length**2 / (16 * eta))
         exchange = 1 + 8 * eta / (1j * self.thermal_length**2 * prandtl * w * rho) * h
-        return density, gamma * fluid.pressure / phi / (gamma - (gamma - 1) / exchange)
+        return np.asarray(density), np.asarray(gamma * fluid.pressure / phi / (gamma - (gamma - 1) / exchange))
 
     def bulk(self, f: Float, fluid: Fluid) -> tuple[Complex, Complex]:
         density, modulus = self.effective(f, fluid)
-        return np.sqrt(density * modulus), 2 * np.pi * f * np.sqrt(density / modulus)
+        k = np.asarray(2 * np.pi * f * np.sqrt(density / modulus), dtype=np.complex128)
+        return np.asarray(np.sqrt(density * modulus)), k
 
     @classmethod
     def example(cls) -> JohnsonChampouxAllard:

@@ -57,8 +57,8 @@ class Table(Spectrum):
         outside = (f < low * (1 - SAME_LINE)) | (f > high * (1 + SAME_LINE))
         if np.any(outside) and not self.extrapolate:
             raise RangeError(
-                f"the table holds {low:g} .. {high:g} Hz, but {f[outside][0]:g} Hz is asked; a table is not extrapolated: "
-                "narrow the sweep, add the missing rows, or set extrapolate = true to hold its end values"
+                f"the table holds {low:g} .. {high:g} Hz, but {f[outside][0]:g} Hz is asked; a table is not "
+                "extrapolated: narrow the sweep, add the missing rows, or set extrapolate = true to hold its end values"
             )
         return np.asarray(np.interp(f, self.frequencies, self.values), dtype=np.complex128)
 

@@ -2,9 +2,14 @@
 
     Y = 1/Z = (velocity into the wall) / p          [m/(Pa s)], e^{+iwt}: mass-like Im Z > 0, spring-like Im Z < 0
 
-A stack of layers is a product of transfer matrices. In layer j the state [p; v - a_j v_b] is carried from back to front,
-where v_b is the velocity of the backing and a_j says how much of it the layer's frame imposes on the flow: for a porous
-layer whose rigid frame moves with the backing a = 1 - rho_0/rho_e (Biot, J. Appl. Phys. 33 (1962) 1482, rigid frame).
+A stack of layers is a chain of transfer matrices. Layer j carries the state [p; v - a_j v_b] from its back to its
+front, where v_b is the velocity of the backing and a_j says how much of it the layer's frame imposes on the flow: for a
+porous layer whose rigid frame moves with the backing a = 1 - rho_0/rho_e (Biot, J. Appl. Phys. 33 (1962) 1482).
+At every interface v = u v_b + Y p. From the backing (Y = 0, u = 1) to the front, with det T = 1,
+
+    t = 1/(T11 + T12 Y),   Y <- (T21 + T22 Y) t,   u <- a + t (u - a)
+
+which never subtracts large numbers, however thick the layers.
 """
 
 from __future__ import annotations
@@ -31,21 +36,37 @@ class WallLaw(Declared):
         raise NotImplementedError
 
     def admittance(self, f: Float, fluid: Fluid) -> Complex:
-        """Y = 1/Z (nf,) [m/(Pa s)]."""
-        return np.asarray(1.0 / self.impedance(f, fluid))
+        """Y = 1/Z (nf,) [m/(Pa s)]; FieldError where Z = 0."""
+        return _from_impedance(self.impedance(f, fluid), f)
 
     def moving_factor(self, f: Float, fluid: Fluid, frame: str) -> Complex:
         """v_n / v_b (nf,) at p = 0 when the wall behind moves, for the frame forms face, bonded and at_rest."""
         if frame != "face":
             raise FieldError(
-                f"the frame form '{frame}' needs a stack of layers, but the wall law is '{self.kind_name}'; use 'face', or "
-                "describe the treatment as layers"
+                f"the frame form '{frame}' needs a stack of layers, but the wall law is '{self.kind_name}'; use "
+                "'face', or describe the treatment as layers"
             )
         return np.ones(len(f), dtype=np.complex128)
 
     def warnings(self, f: Float) -> tuple[str, ...]:
         """What to say where f leaves the range that the law's source covers."""
         return ()
+
+
+def _from_impedance(impedance: Complex, f: Float) -> Complex:
+    soft = f[impedance == 0]
+    if len(soft):
+        raise FieldError(
+            f"an impedance of zero (at {soft[0]:g} Hz) is a pressure-release surface; use the boundary kind "
+            "'pressure', or give the law a resistance"
+        )
+    return np.asarray(1.0 / impedance)
+
+
+def _from_admittance(admittance: Complex) -> Complex:
+    """1/Y, infinite where the wall is hard."""
+    hard = admittance == 0
+    return np.where(hard, np.inf, 1.0 / np.where(hard, 1.0, admittance))
 
 
 def check_passive(law: WallLaw, f: Float, fluid: Fluid) -> None:
@@ -55,8 +76,8 @@ def check_passive(law: WallLaw, f: Float, fluid: Fluid) -> None:
     if len(active):
         at = int(active[0])
         raise FieldError(
-            f"wall law '{law.kind_name}' has Re Z < 0 at {f[at]:g} Hz (Z = {1 / admittance[at]:.4g} Pa.s/m), so the wall "
-            "would create sound; check the sign of the real part and the range of the law"
+            f"wall law '{law.kind_name}' has Re Z < 0 at {f[at]:g} Hz (Z = {1 / admittance[at]:.4g} Pa.s/m), so the "
+            "wall would create sound; check the sign of the real part, the time sign and the range of the law"
         )
 
 
@@ -65,11 +86,15 @@ class Given(WallLaw):
     """A number or a table, measured or computed; its unit, form and time sign are said."""
 
     value: complex | Spectrum = quantity(help="impedance or admittance")
-    unit: str = quantity(help="rho_c: relative to rho c of the fluid in front", choices=("rho_c", "Pa.s/m"), default="rho_c")
+    unit: str = quantity(
+        help="rho_c: relative to rho c of the fluid in front", choices=("rho_c", "Pa.s/m"), default="rho_c"
+    )
     form: str = quantity(
         help="impedance Z, or admittance 1/Z (in 1/unit)", choices=("impedance", "admittance"), default="impedance"
     )
-    time_sign: str = quantity(help="sign of e^(+-iwt) the data hold for; '-' is conjugated", choices=("+", "-"), default="+")
+    time_sign: str = quantity(
+        help="sign of e^(+-iwt) the data hold for; '-' is conjugated", choices=("+", "-"), default="+"
+    )
 
     def admittance(self, f: Float, fluid: Fluid) -> Complex:
         values = as_spectrum(self.value).at(f)
@@ -78,12 +103,10 @@ class Given(WallLaw):
         scale = fluid.rho_c if self.unit == "rho_c" else 1.0
         if self.form == "admittance":
             return np.asarray(values / scale)
-        if np.any(values == 0):
-            raise FieldError("an impedance of zero is a pressure-release surface; use the boundary kind 'pressure'")
-        return np.asarray(1.0 / (values * scale))
+        return _from_impedance(values * scale, f)
 
     def impedance(self, f: Float, fluid: Fluid) -> Complex:
-        return np.asarray(1.0 / self.admittance(f, fluid))
+        return _from_admittance(self.admittance(f, fluid))
 
     @classmethod
     def example(cls) -> Given:
@@ -92,7 +115,7 @@ class Given(WallLaw):
 
 @kind("absorption")
 class Absorption(WallLaw):
-    """A real impedance with normal-incidence absorption alpha = 1 - |R|^2; Z >= rho c. Without phase data, a rough guess."""
+    """Real Z >= rho c with normal-incidence absorption alpha = 1 - |R|^2: a rough guess, for want of phase data."""
 
     coefficient: float | Spectrum = quantity(help="normal-incidence absorption coefficient, 0 .. 1", low=0.0, high=1.0)
 
@@ -100,7 +123,7 @@ class Absorption(WallLaw):
         return absorption_admittance(as_spectrum(self.coefficient).at(f).real, fluid)
 
     def impedance(self, f: Float, fluid: Fluid) -> Complex:
-        return np.asarray(1.0 / self.admittance(f, fluid))
+        return _from_admittance(self.admittance(f, fluid))
 
     @classmethod
     def example(cls) -> Absorption:
@@ -237,7 +260,7 @@ class AirGap(Layer):
 class PerforatedFacing(Layer):
     """Perforated or micro-perforated plate: short tubes with end corrections (Maa, JASA 104 (1998) 2861, eqs. 2 and 5).
 
-    Z = (i w rho t/phi) [1 - 2 J1(s)/(s J0(s))]^-1 + sqrt(2 w rho eta)/(2 phi) + 0.85 i w rho d/phi, s = (d/2) sqrt(-i w rho/eta)
+    Z = {i w rho t [1 - 2 J1(s)/(s J0(s))]^-1 + sqrt(2 w rho eta)/2 + 0.85 i w rho d}/phi, s = (d/2) sqrt(-i w rho/eta)
     """
 
     hole_diameter: float = quantity(help="hole diameter d", unit="m", positive=True)
@@ -249,7 +272,7 @@ class PerforatedFacing(Layer):
         s = self.hole_diameter / 2 * np.sqrt(-1j * w * rho / eta)
         tube = 1j * w * rho * self.thickness / (1 - 2 * jv(1, s) / (s * jv(0, s)))
         ends = np.sqrt(2 * w * rho * eta) / 2 + 0.85j * w * rho * self.hole_diameter
-        return _series((tube + ends) / self.open_area_ratio)
+        return _series(np.asarray((tube + ends) / self.open_area_ratio, dtype=np.complex128))
 
     def frame_share(self, f: Float, fluid: Fluid) -> Complex:
         return np.ones(len(f), dtype=np.complex128)
@@ -283,7 +306,7 @@ class LimpMass(Layer):
     mass_per_area: float = quantity(help="mass per area", unit="kg/m2", positive=True)
 
     def transfer(self, f: Float, fluid: Fluid) -> Complex:
-        return _series(2j * np.pi * f * self.mass_per_area)
+        return _series(np.asarray(2j * np.pi * f * self.mass_per_area, dtype=np.complex128))
 
     @classmethod
     def example(cls) -> LimpMass:
@@ -301,31 +324,28 @@ class Layers(WallLaw):
             raise FieldError("a stack needs at least one layer; give layers = [...], front to back")
 
     def _carry(self, f: Float, fluid: Fluid, bonded: bool) -> tuple[Complex, Complex]:
-        """State [p; v] in front, (nf, 2) each, for [p_back = 1, v_b = 0] and for [p_back = 0, v_b = 1]."""
-        at_rest = np.tile(np.array([1, 0], dtype=np.complex128), (len(f), 1))
-        moving = np.tile(np.array([0, 1], dtype=np.complex128), (len(f), 1))
+        """Y and u (nf,) in front: the flow there is v = u v_b + Y p."""
+        admittance, drive = np.zeros(len(f), dtype=np.complex128), np.ones(len(f), dtype=np.complex128)
         for layer in reversed(self.layers):
             matrix = layer.transfer(f, fluid)
-            share = np.zeros((len(f), 2), dtype=np.complex128)
-            share[:, 1] = layer.frame_share(f, fluid) if bonded else 0.0
-            at_rest = np.einsum("fij,fj->fi", matrix, at_rest)
-            moving = np.einsum("fij,fj->fi", matrix, moving - share) + share
-        return at_rest, moving
+            share = layer.frame_share(f, fluid) if bonded else 0.0
+            passed = 1 / (matrix[:, 0, 0] + matrix[:, 0, 1] * admittance)
+            admittance = (matrix[:, 1, 0] + matrix[:, 1, 1] * admittance) * passed
+            drive = share + passed * (drive - share)
+        return admittance, drive
 
     def admittance(self, f: Float, fluid: Fluid) -> Complex:
-        at_rest, _ = self._carry(f, fluid, False)
-        return np.asarray(at_rest[:, 1] / at_rest[:, 0])
+        return self._carry(f, fluid, False)[0]
 
     def impedance(self, f: Float, fluid: Fluid) -> Complex:
-        return np.asarray(1.0 / self.admittance(f, fluid))
+        return _from_admittance(self.admittance(f, fluid))
 
     def moving_factor(self, f: Float, fluid: Fluid, frame: str) -> Complex:
         if frame not in FRAMES:
             raise FieldError(f"frame '{frame}' is not known; use one of {', '.join(FRAMES)}")
         if frame == "face":
             return np.ones(len(f), dtype=np.complex128)
-        at_rest, moving = self._carry(f, fluid, frame == "bonded")
-        return np.asarray(moving[:, 1] - moving[:, 0] * at_rest[:, 1] / at_rest[:, 0])
+        return self._carry(f, fluid, frame == "bonded")[1]
 
     def warnings(self, f: Float) -> tuple[str, ...]:
         return tuple(dict.fromkeys(text for layer in self.layers for text in layer.warnings(f)))
@@ -349,7 +369,7 @@ def statistical_absorption(zeta: Complex) -> Float:
 
     alpha = (8 r/|z|^2) { 1 - (r/|z|^2) ln[(1+r)^2 + x^2] + ((r^2-x^2)/(x |z|^2)) arctan(x/(1+r)) },  z = r + i x
     """
-    r, x = np.real(zeta), np.real(np.imag(zeta))
+    r, x = np.real(zeta), np.imag(zeta)
     square = r**2 + x**2
     safe = np.where(np.abs(x) < 1e-9, 1.0, x)
     angle = np.where(np.abs(x) < 1e-9, 1 / (1 + r), np.arctan(safe / (1 + r)) / safe)

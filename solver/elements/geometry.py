@@ -199,9 +199,9 @@ class Geometry:
         if len(bad):
             x = self.corners[bad[0]].mean(axis=0)
             raise MeshError(
-                f"tetrahedron {bad[0]} at ({x[0]:.4g}, {x[1]:.4g}, {x[2]:.4g}) m has a volume of {volume[bad[0]]:.3g} m^3 "
-                f"with edges up to {longest[bad[0]]:.3g} m; expected a volume ({len(bad)} such tetrahedra): "
-                "remesh with optimisation switched on"
+                f"tetrahedron {bad[0]} at ({x[0]:.4g}, {x[1]:.4g}, {x[2]:.4g}) m has a volume of "
+                f"{volume[bad[0]]:.3g} m^3 with edges up to {longest[bad[0]]:.3g} m; "
+                f"expected a volume ({len(bad)} such tetrahedra): remesh with optimisation switched on"
             )
 
     def _reject_folded(self) -> None:
@@ -217,6 +217,6 @@ class Geometry:
             x = self.corners[folded[0]].mean(axis=0)
             raise MeshError(
                 f"curved tetrahedron {folded[0]} at ({x[0]:.4g}, {x[1]:.4g}, {x[2]:.4g}) m folds over itself "
-                f"({len(folded)} such tetrahedra); expected det J of one sign: refine the mesh on curved surfaces, switch "
-                "on the mesher's high-order optimisation, or mesh with order 1"
+                f"({len(folded)} such tetrahedra); expected det J of one sign: refine the mesh on curved surfaces, "
+                "switch on the mesher's high-order optimisation, or mesh with order 1"
             )

@@ -1,4 +1,4 @@
-"""Which tetrahedron holds a point: k-d trees over centroids, one per class of size, so that graded meshes stay exact."""
+"""Which tetrahedron holds a point: k-d trees over centroids, one per class of size, exact on graded meshes too."""
 
 from __future__ import annotations
 
@@ -44,7 +44,7 @@ class Locator:
         return Locator(KDTree(centre), tuple(classes))
 
     def find(self, points: Floats, barycentric: Barycentric) -> tuple[Ints, Floats]:
-        """tet (k,), bary (k, 4); -1 and NaN outside.  First the eight nearest centroids, then every tetrahedron in reach."""
+        """tet (k,), bary (k, 4); -1 and NaN outside: first by the eight nearest centroids, then by all in reach."""
         tet, bary = np.full(len(points), -1, dtype=np.int64), np.full((len(points), 4), np.nan)
         for start in range(0, len(points), _CHUNK):
             part = slice(start, start + _CHUNK)
@@ -68,11 +68,9 @@ class Locator:
 
     @staticmethod
     def _search(group: _SizeClass, left: Ints, best: _Best) -> None:
-        lists = group.tree.query_ball_point(best.points[left], group.radius)
-        counts = np.array([len(found) for found in lists])
-        if not counts.sum():
-            return
-        candidates = np.concatenate([np.asarray(found, dtype=np.int64) for found in lists])
+        found = [np.asarray(f, dtype=np.int64) for f in group.tree.query_ball_point(best.points[left], group.radius)]
+        counts = np.array([len(f) for f in found])
+        candidates = np.concatenate(found)
         best.offer(np.repeat(left, counts), group.tets[candidates])
 
 

@@ -8,12 +8,13 @@ polynomial and P_j^(a) the scaled Jacobi polynomial of weight (1 - x)^a,
     face a<b<c        edge(a, b; i) lambda_c P_{j-1}^(2i-1)(lambda_c - lambda_a - lambda_b, s_abc),     j >= 1
     interior          face(a, b, c; i, j) lambda_d P_{k-1}^(2i+2j-2)(lambda_d - s_abc, s_abcd),         k >= 1
 
-each of degree i, i+j, i+j+k.  The order of the vertices settles every orientation, so that neighbours agree without signs;
-within each entity the functions ascend in degree, so that a lower order is a prefix of a higher one.
+each of degree i, i+j, i+j+k, s the sum of the lambdas named.  The order of the vertices settles every orientation, so
+that neighbours agree without signs; within each entity the functions ascend in degree, so that a lower order is a
+prefix of a higher one.
 
-Sources: S. Zaglmayr, High Order Finite Element Methods for Electromagnetic Field Computation (PhD thesis, JKU Linz 2006),
-section 5.2; S. Beuchler and J. Schoeberl, New shape functions for triangular p-FEM using integrated Jacobi polynomials,
-Numer. Math. 103 (2006) 339.
+Sources: S. Zaglmayr, High Order Finite Element Methods for Electromagnetic Field Computation (PhD thesis, JKU Linz
+2006), section 5.2; S. Beuchler and J. Schoeberl, New shape functions for triangular p-FEM using integrated Jacobi
+polynomials, Numer. Math. 103 (2006) 339.
 """
 
 from __future__ import annotations
@@ -52,7 +53,7 @@ def check_order(order: int) -> None:
     """Raises MeshError when no basis of that order exists."""
     if not 1 <= order <= MAX_ORDER:
         raise MeshError(
-            f"element order {order} was asked for; orders 1 to {MAX_ORDER} exist: choose one of them, or refine the mesh"
+            f"element order {order} was asked for; orders 1 to {MAX_ORDER} exist: choose one, or refine the mesh"
         )
 
 
@@ -103,7 +104,7 @@ def _cell_indices(order: int) -> list[tuple[int, int, int]]:
 
 # A jet is a value and its four derivatives d/dlambda, stacked as (5, q).
 def _times(a: Floats, b: Floats) -> Floats:
-    out = a[0] * b
+    out: Floats = a[0] * b
     out[1:] += b[0] * a[1:]
     return out
 
@@ -114,7 +115,7 @@ def _integrated_legendre(x: Floats, t: Floats, order: int) -> dict[int, Floats]:
     out = {1: x, 2: 0.5 * (_times(x, x) - t2)}
     for n in range(3, order + 1):
         out[n] = ((2 * n - 3) * _times(x, out[n - 1]) - (n - 3) * _times(t2, out[n - 2])) / n
-    return {n: np.sqrt(n - 0.5) * out[n] for n in range(2, order + 1)}
+    return {n: np.asarray(np.sqrt(n - 0.5) * out[n]) for n in range(2, order + 1)}
 
 
 def _jacobi(x: Floats, t: Floats, alpha: int, degree: int) -> list[Floats]:
@@ -202,7 +203,7 @@ def reduced_derivatives(dbary: Floats) -> Floats:
 
 @cache
 def face_functions(order: int, face: int) -> Ints:
-    """Local functions (nface,) that do not vanish on a face of the sorted tetrahedron: corners, edges ab, ac, bc, face."""
+    """Local functions (nface,) that do not vanish on a face: its corners, edges ab, ac, bc, and its own."""
     starts = layout(order).starts
     entities = [*FACES[face], *(4 + FACE_EDGES[face]), 10 + face]
     out = np.concatenate([np.arange(starts[e], starts[e + 1]) for e in entities])

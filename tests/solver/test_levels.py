@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import itertools
+
 import numpy as np
 import pytest
+from reading import read_csv_reference, read_json_reference
+
 from murmesh.solver import levels
 from murmesh.solver.errors import FieldError
-from reading import read_csv_reference, read_json_reference
 
 
 def test_weightings_e01() -> None:
@@ -100,3 +103,27 @@ def test_unknown_spectrum() -> None:
 
 def test_schroeder_frequency() -> None:
     assert levels.schroeder_frequency(0.4, 4.0) == pytest.approx(632.46, abs=0.01)
+
+
+def test_silences_add_up_to_silence() -> None:
+    assert levels.sum_levels([]) == levels.sum_levels([-np.inf, -np.inf]) == -np.inf
+    assert levels.sum_levels([60.0, -np.inf]) == pytest.approx(60.0)
+
+
+@pytest.mark.parametrize("weighting", ["A", "C", "Z"])
+def test_the_whole_sweep_is_the_sum_of_its_bands(weighting: str) -> None:
+    f = np.array([50.0, 95.0, 190.0, 342.0, 500.0])
+    square = np.array([1e-4, 1e-2, 1e-3, 1e-3, 1e-4])
+    for spectrum in ("tones", "density"):
+        bands = levels.third_octaves(50.0, 500.0)
+        parts, _ = levels.band_energy(f, square, bands, spectrum, weighting)
+        # tones: the last one is counted; densities: no band and no edge is counted twice
+        assert levels.overall_energy(f, square, spectrum, weighting) == pytest.approx(float(parts.sum()), rel=1e-12)
+
+
+def test_a_tone_belongs_to_one_band() -> None:
+    bands = levels.third_octaves(100.0, 200.0)
+    edge = np.array([bands[1].lower])
+    energy, _ = levels.band_energy(edge, np.ones(1), bands, "tones")
+    assert list(energy[:2]) == [0.0, 1.0]
+    assert all(a.upper == pytest.approx(b.lower, rel=1e-12) for a, b in itertools.pairwise(bands))

@@ -1,0 +1,173 @@
+"""Findings about the acoustics of a case: resolution, losses, loads, ports and scans."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator
+
+import numpy as np
+import numpy.typing as npt
+
+from murmesh.plugin.findings.finding import Finding, error, note, warning
+from murmesh.plugin.findings.scene import Scene
+from murmesh.plugin.mesh_source import a_priori_error, element_size
+from murmesh.solver.case.boundary import Adjacent, Boundary, Sheet
+from murmesh.solver.case.load import SurfaceVelocity
+from murmesh.solver.errors import CaseError
+from murmesh.solver.scan import interpolation
+
+Floats = npt.NDArray[np.float64]
+UNCOVERED = 0.01
+"""Share of a scanned surface without a scan point near it that is worth a warning (common practice, no source)."""
+ROUND = 0.95
+"""Area over that of the circle of the same largest diameter from which a port counts as round."""
+
+
+def resolution(scene: Scene) -> Iterator[Finding]:
+    """Elements per wavelength and the a-priori error at the highest frequency, per region."""
+    from murmesh.solver.space import automatic_order, elements_kh
+
+    sweep = scene.case.sweep
+    order, top = sweep.order or automatic_order(scene.case), float(scene.frequencies[-1])
+    kh = elements_kh(scene.case)
+    for index, region in enumerate(scene.case.regions):
+        inside = scene.case.mesh.tet_region == index
+        if not np.any(inside):
+            cure = "mesh it and give it a volume group, or take it out of the case"
+            yield error("region_not_meshed", region.name, "the region has no tetrahedra", cure)
+            continue
+        coarse = float(np.quantile(kh[inside], 0.95))
+        expected = a_priori_error(coarse, order)
+        text = f"{2 * np.pi / coarse:.2g} elements per wavelength at {top:g} Hz, order {order}: a-priori error "
+        text += f"{expected:.2g} dB"
+        if expected <= sweep.accuracy:
+            yield note("elements_per_wavelength", region.name, text)
+            continue
+        speed = abs(complex(region.medium.c(scene.frequencies[-1:])[0]))
+        size = element_size(top, speed, order, sweep.accuracy)
+        cure = f"use elements of {size:.2g} m, a higher order, or a lower highest frequency"
+        yield warning("elements_per_wavelength", region.name, f"{text}, wanted {sweep.accuracy:g} dB", cure)
+
+
+def losses(scene: Scene) -> Iterator[Finding]:
+    """A model without any stated loss, or hard walls without any."""
+    stated = {index: _region_loses(scene, index) for index in range(len(scene.case.regions))}
+    absorbing = any(_absorbs(surface.boundary, scene, fluid) for surface, _, fluid in scene.touching())
+    cure = (
+        "state the losses as they are measured: reverberation_time, loss_factor, wall_absorption or air_absorption "
+        "under damping of the region; doubling the residual damping of 'hard' walls moves levels by 2 to 3 dB(A)"
+    )
+    if not absorbing and not any(stated.values()):
+        text = "NOTHING IN THIS MODEL ABSORBS SOUND: rigid walls without any stated damping, unbounded peaks"
+        yield warning("no_damping", "whole model", text, cure)
+        return
+    for index, region in enumerate(scene.case.regions):
+        if not stated[index] and _has_hard_walls(scene, index):
+            text = "hard walls without any stated damping: only other surfaces or regions absorb"
+            yield warning("hard_walls_without_damping", region.name, text, cure)
+
+
+def _region_loses(scene: Scene, index: int) -> bool:
+    region, f = scene.case.regions[index], scene.frequencies
+    try:
+        eta = region.damping.loss_factor(f, region.medium)
+        walls = region.damping.hard_wall_admittance(f, region.medium.reference)
+        return bool(np.any(eta > 0) or np.any(walls.real > 0) or np.any(region.medium.c(f).imag > 0))
+    except CaseError:
+        return True
+
+
+def _absorbs(boundary: Boundary, scene: Scene, fluid: Adjacent) -> bool:
+    try:
+        parts = [side.admittance(scene.frequencies, fluid) for side in boundary.sides]
+        parts.append(boundary.transfer_admittance(scene.frequencies, fluid))
+    except CaseError:
+        return True
+    return any(part is not None and np.any(part.real > 0) for part in parts)
+
+
+def _has_hard_walls(scene: Scene, region: int) -> bool:
+    return any(
+        any(side.hard for side in surface.boundary.sides) and region in scene.regions_of(index)
+        for index, surface in enumerate(scene.case.surfaces)
+    )
+
+
+def unloaded(scene: Scene) -> Iterator[Finding]:
+    """Nothing drives the air, or a vibrating surface stands still."""
+    if not scene.case.load_cases:
+        cure = "give a surface a velocity, or add a source; modes need no load"
+        yield warning("no_load", "whole model", "no load case: nothing drives the air", cure)
+        return
+    driven = {load.acts_on for _, load in scene.loads()}
+    for surface in scene.case.surfaces:
+        if surface.boundary.moves and not isinstance(surface.boundary, Sheet) and surface.name not in driven:
+            text = f"the surface is of kind '{surface.boundary.kind_name}', but no load case gives it a velocity"
+            cure = "give it a velocity, or make it rigid or impedance"
+            yield warning("vibrating_without_load", surface.name, text, cure)
+
+
+def ports(scene: Scene) -> Iterator[Finding]:
+    """Ports above the first cut-on of their duct, or not plane."""
+    top = float(scene.frequencies[-1])
+    for index, surface in enumerate(scene.case.surfaces):
+        rows = scene.rows(index)
+        if not surface.boundary.takes_wave or not len(rows):
+            continue
+        triangles = scene.case.mesh.triangles[rows]
+        if not _plane(scene, triangles):
+            text = "the port is not plane, but its wave is"
+            yield warning("port_not_plane", surface.name, text, "cut the duct off by a plane across its axis")
+        area = float(scene.skin.areas(triangles).sum())
+        words, factor, extent = port_shape(scene.case.mesh.nodes[np.unique(triangles[:, :3])], area)
+        media = [scene.case.regions[region].medium for region in scene.regions_of(index)]
+        speeds = [abs(complex(medium.c(scene.frequencies[-1:])[0])) for medium in media]
+        cut_on = factor * min(speeds, default=math.inf) / extent
+        if top > cut_on:
+            text = (
+                f"the sweep ends at {top:g} Hz, above the first cut-on of the duct at {cut_on:.4g} Hz "
+                f"({factor:.3g} c / {extent:.3g} m, {words}); other modes than the plane wave come back from the port"
+            )
+            cure = f"end the sweep below {cut_on:.4g} Hz, or take levels near the port as a guess"
+            yield warning("port_above_cut_on", surface.name, text, cure)
+
+
+def _plane(scene: Scene, triangles: npt.NDArray[np.int64]) -> bool:
+    normals = scene.skin.outward(triangles, scene.skin.owners(triangles))
+    return bool(np.min(normals @ normals[0]) > math.cos(math.radians(1.0)))
+
+
+def port_shape(points: Floats, area: float) -> tuple[str, float, float]:
+    """Words, factor and size d of the first cut-on f = factor c / d of a plane duct section through `points`.
+
+    Round: 1.8412 c/(pi d) (j'_11, Pierce, Acoustics, 1981, sect. 7-1); otherwise as a rectangle, c/(2 d).
+    """
+    centred = points - points.mean(axis=0)
+    plane = centred @ np.linalg.svd(centred, full_matrices=False)[2][:2].T
+    angles = np.linspace(0.0, np.pi / 2, 181)
+    turned = [plane @ np.array([[np.cos(a), -np.sin(a)], [np.sin(a), np.cos(a)]]) for a in angles]
+    boxes = np.array([np.ptp(t, axis=0) for t in turned])
+    diameter = float(boxes.max())
+    if area > ROUND * math.pi * diameter**2 / 4:
+        return "round", 1.8412 / math.pi, diameter
+    return "by its longer side", 0.5, float(boxes[np.argmin(boxes.prod(axis=1))].max())
+
+
+def scans(scene: Scene) -> Iterator[Finding]:
+    """The area of scanned surfaces that no scan point covers."""
+    names = {surface.name: index for index, surface in enumerate(scene.case.surfaces)}
+    for where, load in scene.loads():
+        points = load.motion.shape() if isinstance(load, SurfaceVelocity) else None
+        if points is None or isinstance(points, str):
+            continue
+        triangles = scene.case.mesh.triangles[scene.rows(names[load.acts_on])]
+        areas = scene.skin.areas(triangles)
+        covered = interpolation(points, scene.skin.centroids(triangles)).covered
+        missing = float(areas[~covered].sum())
+        if missing > UNCOVERED * areas.sum():
+            text = (
+                f"{missing:.3g} m2 ({missing / areas.sum():.0%} of the surface) lie farther from every scan point than "
+                "the points lie apart; the values there are extrapolated"
+            )
+            cure = "check the coordinates and their unit, scan the rest, or give that part a surface of its own"
+            yield warning("scan_uncovered", f"{where}/{load.name}", text, cure)
