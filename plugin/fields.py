@@ -6,6 +6,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 import numpy.typing as npt
 
@@ -34,6 +36,16 @@ def kept_line(result: Result, frequency: float | None = None, load_case: str = "
     at = np.searchsorted(result.frequencies, lines)
     heard = sum(result.mean_square(receiver.name, load_case)[at] for receiver in result.case.receivers)
     return float(lines[int(np.argmax(heard))])
+
+
+def listed_receivers(result: Result, receivers: Sequence[str] = ()) -> tuple[str, ...]:
+    """The receivers named, or all of them. Raises ResultError for an unknown name, or where there is none at all."""
+    for name in receivers:
+        result.receiver(name)
+    listed = tuple(receivers) or tuple(receiver.name for receiver in result.case.receivers)
+    if not listed:
+        raise ResultError("the case has no receiver, so there is nothing to show at one; add a receiver and solve again")
+    return listed
 
 
 def mean_squares(result: Result, pressure: Complex, load_case: str = "") -> Floats:

@@ -15,7 +15,7 @@ from murmesh.solver.case.motion import Motion
 from murmesh.solver.case.spectrum import Spectrum
 from murmesh.solver.errors import CaseError, FieldError, nearest
 
-_READER_KEYS = ("csv", "hdf5", "column", "unit", "time_sign", "extrapolate")
+_READER_KEYS = ("csv", "hdf5", "column", "unit", "time_sign", "extrapolate", "lines")
 
 
 def motion_tree(value: object, measure: str, where: str) -> object:
@@ -85,7 +85,9 @@ def _from_file(table: Tree, folder: Path) -> Tree:
     if kind in Motion.registry:
         _settle_motion(table, column.unit, column.measures, path.name)
     _settle_unit(table, own, column, path.name)
-    return {**table, field: {"kind": "table", **_spectrum("table", column, reader)}}
+    # `lines = true`: the rows are tones, with nothing between them
+    shape = "lines" if reader.get("lines") else "table"
+    return {**table, field: {"kind": shape, **_spectrum(shape, column, reader)}}
 
 
 def _spectrum(kind: str, column: Column, reader: Tree) -> Tree:

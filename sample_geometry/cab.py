@@ -67,8 +67,8 @@ class _Wall:
 def build(size: float = DEFAULT_SIZE) -> None:
     """Build, tag and mesh the cab in the current gmsh model, with first-order tetrahedra of edge `size` (m).
 
-    gmsh must be initialised, its current model empty. Adds a physical volume `cabin_air`, 14 physical surfaces named in `PANELS`, and the
-    physical surface `seat`; together they cover the boundary of the air once.
+    gmsh must be initialised, its current model empty. Adds a physical volume `cabin_air`, 14 physical surfaces named in
+    `PANELS`, and the physical surface `seat`; together they cover the boundary of the air once.
     """
     air = _air()
     _split_walls(air)
@@ -98,6 +98,10 @@ def main(argv: list[str] | None = None) -> None:
     parser.add_argument("--size", type=float, default=DEFAULT_SIZE, metavar="M", help="edge of the elements, metres")
     parser.add_argument("path", nargs="?", default="cab.msh", metavar="OUT.msh")
     args = parser.parse_args(argv)
+    if gmsh.isInitialized():  # run as a job's script: the caller wants the model, at the size it has set
+        largest = float(gmsh.option.getNumber("Mesh.MeshSizeMax"))
+        build(largest if largest < FLOOR_LENGTH else args.size)
+        return
     tetrahedra = write(args.path, args.size)
     print(f"{args.path}: {tetrahedra} tetrahedra, {len(PANELS)} panels, the rigid group '{RIGID}', the air '{AIR}'")
 

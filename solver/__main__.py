@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-import shutil
 import sys
 from pathlib import Path
 
 from murmesh.solver.case.hdf5 import read_case
 from murmesh.solver.errors import MurmeshError
 from murmesh.solver.result import write_result
-from murmesh.solver.sweep import Progress, solve
+from murmesh.solver.sweep import Journal, Progress, solve
 
 HELP = """usage: python -m murmesh.solver CASE.h5 [RESULT.h5]
 
@@ -36,7 +35,7 @@ def main(arguments: list[str]) -> int:
         return 0 if arguments and arguments[0] in ("-h", "--help") else 2
     source = Path(arguments[0])
     target = Path(arguments[1]) if len(arguments) == 2 else source.with_name(f"{source.stem}_result.h5")
-    journal = target.with_name(f"{target.name}.lines")
+    journal = Journal.at(target)
     try:
         write_result(solve(read_case(source), journal, report=show), target)
     except MurmeshError as error:
@@ -45,7 +44,7 @@ def main(arguments: list[str]) -> int:
     except KeyboardInterrupt:
         sys.stderr.write(f"\ninterrupted; finished lines are kept in {journal}: the same command goes on from there\n")
         return 130
-    shutil.rmtree(journal, ignore_errors=True)
+    Journal(journal).forget()
     sys.stdout.write(f"{target}\n")
     return 0
 

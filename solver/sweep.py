@@ -95,6 +95,11 @@ class Journal:
             part.replace(stamp)
         return cls(folder)
 
+    @staticmethod
+    def at(result: Path) -> Path:
+        """The journal's folder for a result file."""
+        return result.with_name(f"{result.name}.lines")
+
     def _path(self, index: int) -> Path:
         return self.folder / f"line{index:06d}.npz"
 

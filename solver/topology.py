@@ -106,7 +106,7 @@ class Topology:
         Local face i lies opposite the tetrahedron's own corner i; of two sides the lower tetrahedron comes first.
         Raises: MeshError when a triangle is a face of no tetrahedron.
         """
-        triples = np.asarray(triangles, dtype=np.int64).reshape(len(np.asarray(triangles)), -1)[:, :3]
+        triples = _triples(triangles)
         face = self._faces.find(triples)
         _require_faces(face, triples, "give the surface the same mesh as the volume")
         tet, slot = self._faces.tet[face], self._faces.slot[face]
@@ -133,6 +133,16 @@ def _corners(tets: npt.ArrayLike) -> Ints:
             f"expected four different nodes ({len(bad)} such tetrahedra): remesh or remove them"
         )
     return np.asarray(corners)
+
+
+def _triples(triangles: npt.ArrayLike) -> Ints:
+    """Corner triples (m, 3) of triangles (m, 3+)."""
+    table = np.asarray(triangles, dtype=np.int64)
+    if not table.size:
+        return np.zeros((0, 3), dtype=np.int64)
+    if table.ndim != 2 or table.shape[1] < 3:
+        raise MeshError(f"triangles of shape {table.shape} were given; expected (m, 3) or (m, 6) node numbers")
+    return np.asarray(table[:, :3])
 
 
 def _number(ascending: Ints) -> tuple[Ints, Ints, Ints, Ints, _FaceTable]:
@@ -187,10 +197,7 @@ def _require_faces(found: Ints, triples: Ints, cure: str) -> None:
 
 def _find_open(table: _FaceTable, open_faces: npt.ArrayLike | None) -> Ints:
     """Numbers of the mesh faces to be opened."""
-    triples = np.asarray([] if open_faces is None else open_faces, dtype=np.int64)
-    if not triples.size:
-        return np.zeros(0, dtype=np.int64)
-    triples = triples.reshape(len(triples), -1)[:, :3]
+    triples = _triples([] if open_faces is None else open_faces)
     face = table.find(triples)
     _require_faces(face, triples, "embed the two-sided surface in the volume before meshing")
     outer = np.flatnonzero(table.tet[face, 1] < 0)

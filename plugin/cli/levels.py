@@ -35,7 +35,7 @@ def text(found: list[Levels]) -> str:
         rows = [("overall", *(shown(item.overall) for item in group))]
         for i, band in enumerate(group[0].bands):
             partial = group[0].spectrum == "density" and group[0].coverage[i] < PARTIAL
-            rows.append((f"{band.nominal:g} Hz{' (partial)' if partial else ''}", *(shown(g.band_levels[i]) for g in group)))
+            rows.append((f"{band.nominal} Hz{' (partial)' if partial else ''}", *(shown(g.band_levels[i]) for g in group)))
         title = f"{group[0].unit}, load case '{name}' ({group[0].spectrum}), third octaves"
         parts.append(f"{title}\n{table(('band', *(g.receiver for g in group)), rows)}")
     return "\n\n".join(parts)
@@ -51,7 +51,7 @@ def _tree(item: Levels) -> dict[str, object]:
         "unit": item.unit,
         "overall": number(item.overall),
         "third_octaves": [
-            {"band_hz": band.nominal, "level": number(value), "covered": round(float(part), 3)}
+            {"band_hz": float(band.nominal), "level": number(value), "covered": round(float(part), 3)}
             for band, value, part in zip(item.bands, item.band_levels, item.coverage, strict=True)
         ],
     }

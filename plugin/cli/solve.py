@@ -30,7 +30,7 @@ def run(args: argparse.Namespace) -> int:
         say("murmesh: not solved; cure the errors above, or solve with --force")
         return CANNOT
     target = Path(args.result) if args.result else result_path(Path(args.case))
-    journal = target.with_name(f"{target.name}.lines")
+    journal = Journal.at(target)
     result = solve(case, journal, report=show, order=args.order, solver=args.solver)
     write_result(result, target)
     Journal(journal).forget()

@@ -31,8 +31,9 @@ from murmesh.solver.result import Result
 Floats = npt.NDArray[np.float64]
 Vector = tuple[float, float, float]
 
-_CELLS = 250  # along the longer edge of a cut
+_CELLS, _LEAST, _MOST = 250, 60, 1200  # along the longer edge of a cut; at least along the shorter, at most along either
 _CONTOUR = 5.0  # dB
+_BESIDE = 1e-7  # of the model's longest extent
 _NEAR = 0.05  # metres: a receiver farther from the plane is drawn hollow
 _BAR, _LABELS, _ABOVE, _UNDER = 1.35, 0.8, 0.35, 0.62  # inches: colour bar, room left of, above and below a cut
 _MOST_HEIGHT = 9.0  # inches
@@ -43,6 +44,7 @@ class Plane:
     """A plane with its axes on the page; names of the axes as they are written there."""
 
     origin: Floats
+    normal: Floats
     across: Floats
     up: Floats
     title: str
@@ -60,15 +62,11 @@ class Plane:
         if np.abs(n[axis]) > 1 - 1e-12:
             i, j = [k for k in range(3) if k != axis]
             unit = np.eye(3)
-            return cls(at, unit[i], unit[j], f"{'xyz'[axis]} = {at[axis]:.3g} m", ("xyz"[i], "xyz"[j]))
+            return cls(at, n, unit[i], unit[j], f"{'xyz'[axis]} = {at[axis]:.3g} m", ("xyz"[i], "xyz"[j]))
         across = np.cross([0.0, 0.0, 1.0], n)
         across = across / np.linalg.norm(across)
         where, which = (", ".join(f"{v:.3g}" for v in part) for part in (at, n))
-        return cls(at, across, np.cross(n, across), f"through ({where}) m, normal ({which})", ("across", "up"))
-
-    @property
-    def normal(self) -> Floats:
-        return np.cross(self.across, self.up)
+        return cls(at, n, across, np.cross(n, across), f"through ({where}) m, normal ({which})", ("across", "up"))
 
     def flat(self, points: Floats) -> Floats:
         """Points (..., 3) on the plane's own axes (..., 2) [m]."""
@@ -187,12 +185,28 @@ def _cut(result: Result, skin: Skin, plane: Plane, frequency: float, load_case: 
     if not len(segments):
         raise ResultError(f"the plane {plane.title} misses the fluid; choose another origin or normal")
     low, high = segments.min(axis=(0, 1)), segments.max(axis=(0, 1))
-    step = float((high - low).max()) / _CELLS
-    counts = np.maximum(np.ceil((high - low) / step), 1).astype(int)
-    u, v = (low[k] + (np.arange(counts[k]) + 0.5) / counts[k] * (high - low)[k] for k in (0, 1))
+    size = high - low
+    step = max(min(size.max() / _CELLS, size.min() / _LEAST), size.max() / _MOST)
+    counts = np.maximum(np.ceil(size / step), 1).astype(int)
+    u, v = (low[k] + (np.arange(counts[k]) + 0.5) / counts[k] * size[k] for k in (0, 1))
     grid = np.stack(np.meshgrid(u, v), axis=-1)
-    pressure = result.pressure_at(plane.place(grid.reshape(-1, 2)), frequency, load_case)
+    pressure = _sampled(result, plane, plane.place(grid.reshape(-1, 2)), frequency, load_case)
     return Cut(plane, segments, low, high, pressure.reshape(*grid.shape[:2], -1))
+
+
+def _sampled(
+    result: Result, plane: Plane, points: Floats, frequency: float, load_case: str
+) -> npt.NDArray[np.complex128]:
+    """Pressures (k, r) just beside a plane, where its normal points to; on the other side where that is no fluid.
+
+    A plane that lies in a sheet would meet either side at random.
+    """
+    shift = _BESIDE * float(np.ptp(result.case.mesh.nodes, axis=0).max()) * plane.normal
+    pressure = result.pressure_at(points + shift, frequency, load_case)
+    missing = np.isnan(pressure[:, 0])
+    if missing.any():
+        pressure[missing] = result.pressure_at(points[missing] - shift, frequency, load_case)
+    return pressure
 
 
 def crossings(skin: Skin, origin: Floats, normal: Floats) -> Floats:
@@ -209,11 +223,10 @@ def crossings(skin: Skin, origin: Floats, normal: Floats) -> Floats:
     return np.asarray(at[hit][crosses[hit]].reshape(-1, 2, 3))
 
 
-def _tick(inches_per_metre: float) -> float:
-    """The step of the ticks [m]: 1, 2 or 5 times a power of ten, at least half an inch."""
-    least = 0.5 / inches_per_metre
-    power = 10.0 ** np.floor(np.log10(least))
-    return float(next(m * power for m in (1, 2, 5, 10) if m * power >= least))
+def _tick(about: float) -> float:
+    """The step of ticks [m], 1, 2 or 5 times a power of ten: the nearest to `about` that is not above it."""
+    power = 10.0 ** np.floor(np.log10(about) + 1e-9)
+    return float(max(m * power for m in (1, 2, 5) if m * power <= about * (1 + 1e-9)))
 
 
 def _draw(
@@ -231,8 +244,16 @@ def _draw(
     axes.set_ylabel(f"{cut.plane.axes[1]} [m]")
     axes.set_title(cut.plane.title, loc="left", fontsize=11)
     axes.set_aspect("equal")
-    for way in (axes.xaxis, axes.yaxis):
-        way.set_major_locator(MultipleLocator(_tick(scale_of_lengths)))
+    for way, size in zip((axes.xaxis, axes.yaxis), cut.size, strict=True):
+        way.set_major_locator(MultipleLocator(_tick(min(1.1 / scale_of_lengths, float(size)))))
+    axes.set(xlim=extent[:2], ylim=extent[2:])
+    _dots(axes, case, cut)
+
+
+def _dots(axes: Axes, case: Case, cut: Cut) -> None:
+    """The receivers that lie in front of or behind the cut."""
     points = np.array([receiver.position for receiver in case.receivers]).reshape(-1, 3)
-    near = np.abs((points - cut.plane.origin) @ cut.plane.normal) <= _NEAR
-    receiver_dots(axes, case.receivers, cut.plane.flat(points), near.tolist())
+    flat = cut.plane.flat(points)
+    within = np.flatnonzero(np.all((flat >= cut.low) & (flat <= cut.high), axis=1))
+    near = np.abs((points[within] - cut.plane.origin) @ cut.plane.normal) <= _NEAR
+    receiver_dots(axes, [case.receivers[i] for i in within], flat[within], near.tolist())

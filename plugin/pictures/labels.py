@@ -12,6 +12,7 @@ from matplotlib.text import Annotation
 from matplotlib.transforms import Bbox
 from scipy.ndimage import distance_transform_edt
 
+from murmesh.plugin.describe import short
 from murmesh.plugin.pictures.scene import View
 from murmesh.plugin.pictures.style import INK, QUIET
 from murmesh.solver.case.model import Receiver
@@ -19,7 +20,7 @@ from murmesh.solver.case.model import Receiver
 Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 _HALO = {"boxstyle": "round,pad=0.18", "facecolor": "white", "edgecolor": "none", "alpha": 0.82}
-_PLACES = ((8, 0), (-8, 0), (0, 9), (0, -9), (8, 9), (-8, 9), (8, -9), (-8, -9), (8, 20), (-8, 20), (8, -20), (-8, -20))
+_PLACES = ((8, 0), (-8, 0), (8, 9), (8, -9), (-8, 9), (-8, -9), (0, 9), (0, -9), (8, 20), (-8, 20), (8, -20), (-8, -20))
 
 
 @dataclass(frozen=True)
@@ -49,7 +50,9 @@ def anchors(seen: Ints, view: View, words: dict[int, str], smallest: int = 60) -
 
 def in_margins(axes: Axes, spots: Sequence[Anchor], view: View, gap: float) -> None:
     """Write the words left and right of the view at least `gap` [m] apart, joined to their spots by leaders."""
-    middle = float(np.median([spot.x for spot in spots])) if spots else 0.0
+    rows = int(2 * view.half_height / gap)
+    crowded = max(sum(spot.x <= 0 for spot in spots), sum(spot.x > 0 for spot in spots)) > rows
+    middle = float(np.median([spot.x for spot in spots])) if crowded else 0.0
     for side in (-1, 1):
         own = sorted((s for s in spots if (s.x <= middle) == (side < 0)), key=lambda s: -s.y)
         heights = spread(np.array([s.y for s in own]), gap, view.half_height)
@@ -97,7 +100,7 @@ def _merged(axes: Axes, names: Sequence[str], places: Floats) -> list[tuple[Floa
     for i in range(len(names)):
         near = next((g for g in groups if np.linalg.norm(pixels[g[0]] - pixels[i]) < 8), None)
         groups.append([i]) if near is None else near.append(i)
-    return [(places[g[0]], ", ".join(names[i] for i in g)) for g in groups]
+    return [(places[g[0]], ", ".join(short(names[i], 24) for i in g)) for g in groups]
 
 
 def _dot_box(axes: Axes, place: Floats) -> Bbox:
@@ -106,21 +109,28 @@ def _dot_box(axes: Axes, place: Floats) -> Bbox:
 
 
 def _beside(axes: Axes, place: Floats, text: str, taken: list[Bbox]) -> None:
-    """Put a name at the first place around its dot that is free and inside the axes."""
-    chosen: Annotation | None = None
-    for dx, dy in _PLACES:
-        if chosen is not None:
-            chosen.remove()
-        chosen = axes.annotate(
-            text, (float(place[0]), float(place[1])), (dx, dy), textcoords="offset points", fontsize=9.5, zorder=7, bbox=_HALO,
-            ha="left" if dx > 0 else "right" if dx < 0 else "center",
-            va="bottom" if dy > 0 else "top" if dy < 0 else "center",
-        )  # fmt: skip
-        box = chosen.get_window_extent()
-        if axes.bbox.padded(2).fully_containsx(box.x0) and axes.bbox.fully_containsx(box.x1) and not box.count_overlaps(taken):
-            break
-    if chosen is not None:
-        taken.append(chosen.get_window_extent())
+    """Put a name at the first place around its dot that is free: inside the axes, or else on the page."""
+    boxes = []
+    for offset in _PLACES:
+        trial = _named(axes, place, text, offset)
+        boxes.append(trial.get_window_extent())
+        trial.remove()
+    page = axes.figure.bbox
+    free = [k for k, box in enumerate(boxes) if not box.count_overlaps(taken)]
+    inside = [k for k in free if axes.bbox.x0 <= boxes[k].x0 and boxes[k].x1 <= axes.bbox.x1]
+    on_page = [k for k in free if page.x0 <= boxes[k].x0 and boxes[k].x1 <= page.x1]
+    best = (inside or on_page or [0])[0]
+    _named(axes, place, text, _PLACES[best])
+    taken.append(boxes[best])
+
+
+def _named(axes: Axes, place: Floats, text: str, offset: tuple[int, int]) -> Annotation:
+    dx, dy = offset
+    return axes.annotate(
+        text, (float(place[0]), float(place[1])), offset, textcoords="offset points", fontsize=9.5, zorder=7, bbox=_HALO,
+        ha="left" if dx > 0 else "right" if dx < 0 else "center",
+        va="bottom" if dy > 0 else "top" if dy < 0 else "center",
+    )  # fmt: skip
 
 
 def triad(axes: Axes, view: View) -> None:

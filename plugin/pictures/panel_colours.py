@@ -53,7 +53,7 @@ def figure(
     share = {surfaces.index(row.panel): 100 * row.share for row in ranking.rows if row.panel in surfaces}
     reach = 10.0 * np.ceil(max(10.0, *map(abs, share.values())) / 10.0) if share else 10.0
     skin = sample_skin(result.space)
-    notes = [*ranking_notes(ranking), *_elsewhere(ranking, surfaces), VIEWS_NOTE, f"{CONVENTION}. {origin(result)}."]
+    notes = [*ranking_notes(ranking), *_elsewhere(ranking, surfaces, share), VIEWS_NOTE, f"Convention: {CONVENTION}. {origin(result)}."]
     sheet = page("Panels by their share of the mean square", ranking_facts(result, ranking), notes, _HEIGHT)
     cells = np.array([share.get(index, np.nan) for index in range(len(surfaces))] + [np.nan])[skin.surface]
     drawn = two_views(
@@ -74,8 +74,8 @@ def figure(
     return sheet.figure
 
 
-def _elsewhere(ranking: Ranking, surfaces: Sequence[str]) -> list[str]:
-    """Sources that are no surface, and what grey means."""
+def _elsewhere(ranking: Ranking, surfaces: Sequence[str], share: dict[int, float]) -> list[str]:
+    """What grey means, and sources that are no surface."""
     sources = [f"{row.panel} {signed(100 * row.share, ' %')}" for row in ranking.rows if row.panel not in surfaces]
-    grey = "Grey surfaces carry no load in this load case."
-    return [f"{grey} Sources in the air, not drawn: {names(sources)}."] if sources else [grey]
+    notes = ["Grey surfaces carry no load in this load case."] if len(share) < len(surfaces) else []
+    return [*notes, f"Sources in the air, not drawn: {names(sources)}."] if sources else notes

@@ -28,10 +28,10 @@ from murmesh.plugin.describe import (
     origin,
     short,
 )
+from murmesh.plugin.fields import listed_receivers
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.style import LINES, QUIET, SIGNED_MAP, frequency_axis, level_limits, look, page, save
 from murmesh.solver.contribution import QUIETENING, Participation, participation
-from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import level
 from murmesh.solver.levels import weighting as weighting_db
 from murmesh.solver.result import Result
@@ -63,9 +63,7 @@ def figure(
     limits: tuple[float, float] | None = None,
 ) -> Figure:
     """The figure, for further work."""
-    listed = tuple(receivers) or tuple(receiver.name for receiver in result.case.receivers)
-    if not listed:
-        raise ResultError("the case has no receiver, so there is no participation to draw; add one and solve again")
+    listed = listed_receivers(result, receivers)
     parts = [participation(result, name, load_case) for name in listed]
     shares, total = _weighted(parts, weighting)
     order = np.argsort(-shares.sum(axis=0))
@@ -94,7 +92,8 @@ def figure(
     _image(lower, edges, _signed_levels(shares[:, order], scale), panels, scale)
     _spectrum(upper, result.frequencies, np.asarray(level(total)), density, scale, unit)
     _frequencies(lower, upper, result.frequencies, edges, density)
-    _bar(sheet.axes(_NAMES + across + 0.25, 0.65, 0.2, rows), scale, unit)
+    high = max(rows, min(2.8, rows + _SPECTRUM))  # few panels: the bar reaches up beside the spectrum
+    _bar(sheet.axes(_NAMES + across + 0.25, 0.65, 0.2, high), scale, unit)
     return sheet.figure
 
 
@@ -171,4 +170,7 @@ def _bar(axes: Axes, scale: tuple[float, float], unit: str) -> None:
     words = [f"{scale[0] + abs(m):.0f}" if m else f"≤ {scale[0]:.0f}" for m in marks]
     bar.set_ticks(marks.tolist(), labels=words)
     bar.outline.set_edgecolor(QUIET)  # type: ignore[operator]
-    bar.set_label(f"lowers  ◂  share [{unit}]  ▸  raises", fontsize=9.5)
+    bar.set_label(f"share [{unit}]", fontsize=9.5)
+    high = axes.get_position().height * axes.figure.bbox.height / axes.figure.dpi
+    axes.text(0.5, 1.05 + 0.1 / high, "raises", transform=axes.transAxes, ha="center", va="bottom", fontsize=9.5)
+    axes.text(0.5, -0.05 - 0.1 / high, "lowers", transform=axes.transAxes, ha="center", va="top", fontsize=9.5)

@@ -20,6 +20,7 @@ from murmesh.plugin.describe import (
     number,
     origin,
 )
+from murmesh.plugin.fields import listed_receivers
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.style import ACCENT, INK, LINES, Page, frequency_axis, look, page, save
 from murmesh.plugin.summary import PARTIAL, Levels, levels
@@ -57,8 +58,9 @@ def figure(
     limits: tuple[float, float] | None = None,
 ) -> Figure:
     """The figure, for further work."""
-    chosen = [r for r in result.case.receivers if not receivers or r.name in receivers]
-    found = [levels(result, name, load_case, weighting) for name in (receivers or [r.name for r in chosen])]
+    listed = listed_receivers(result, receivers)
+    chosen = [result.case.receivers[result.receiver(name)] for name in listed]
+    found = [levels(result, name, load_case, weighting) for name in listed]
     case = result.load_case_of(load_case)
     span = float(result.frequencies[0]), float(result.frequencies[-1])
     facts = [
@@ -74,9 +76,8 @@ def figure(
     measured = [_weighted(r.measured, weighting) for r in chosen if r.measured]
     scale = limits or _scale(np.concatenate([*curves, *measured]), RANGE)
     bars = _scale(np.concatenate([item.band_levels for item in found]), 50.0)
-    for i, (item, curve) in enumerate(zip(found, curves, strict=True)):
+    for i, (item, curve, receiver) in enumerate(zip(found, curves, chosen, strict=True)):
         up = (len(found) - 1 - i) * (_HEADING + _ROW + _UNDER) + _UNDER
-        receiver = result.case.receivers[result.receiver(item.receiver)]
         _narrow(sheet, up, result, receiver, curve, scale, item, is_density(result, load_case))
         _bands(sheet, up, item, bars)
     return sheet.figure

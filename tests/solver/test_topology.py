@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from meshes import TestMesh, box, faces_where, shuffled
+
 from murmesh.solver.errors import MeshError
 from murmesh.solver.topology import Topology
 
@@ -139,5 +140,7 @@ def test_errors() -> None:
         Topology.build([[0, 1, 2, 3], [4, 1, 1, 2]])
     with pytest.raises(MeshError, match=r"tetrahedra \[0, 1, 2\] share one face"):
         Topology.build([[0, 1, 2, 3], [0, 1, 2, 4], [0, 1, 2, 5]])
+    with pytest.raises(MeshError, match=r"triangles of shape \(3,\) were given; expected \(m, 3\) or \(m, 6\)"):
+        topology.sides_of([0, 1, 2])
     with pytest.raises(MeshError, match=r"expected \(t, 4\) or \(t, 10\)"):
         Topology.build([[0, 1, 2]])

@@ -1,0 +1,126 @@
+"""murmesh demo: the demonstration cab, from geometry to pictures."""
+
+from __future__ import annotations
+
+import argparse
+import shutil
+import time
+from importlib.resources import as_file, files
+from pathlib import Path
+
+from murmesh.plugin.check import check_case, render
+from murmesh.plugin.cli import levels as levels_command
+from murmesh.plugin.cli import rank as rank_command
+from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, register, say, show
+from murmesh.plugin.cli.draw import draw
+from murmesh.plugin.cli.export import export
+from murmesh.plugin.cli.solve import summary
+from murmesh.plugin.export import EXPORTS
+from murmesh.plugin.load import load_case_file
+from murmesh.plugin.pictures import PICTURES
+from murmesh.plugin.probe import gmsh_missing
+from murmesh.plugin.summary import CAUTIONS, all_levels
+from murmesh.solver.case.hdf5 import read_case, write_case
+from murmesh.solver.case.model import Case
+from murmesh.solver.contribution import rank
+from murmesh.solver.errors import ResultError
+from murmesh.solver.result import Result, write_result
+from murmesh.solver.sweep import Journal, solve
+
+SHIPPED = "cab_case.h5"
+"""The case that the job `cab.toml` gives, in the wheel, for machines where gmsh cannot run."""
+SOURCES = ("cab.py", "cab.toml", "cab_broadband.csv", "cab_tones.csv")
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    parser.add_argument("folder", help="folder for everything the demonstration makes; made if it is missing")
+
+
+def run(args: argparse.Namespace) -> int:
+    started = time.monotonic()
+    folder = Path(args.folder)
+    _make(folder)
+    case, left_out = _case(folder)
+    result = _solve(case, folder)
+    _answers(result)
+    left_out += _files(result, folder)
+    say(f"finished in {time.monotonic() - started:.0f} s; everything is in {folder}")
+    if left_out:
+        say("murmesh: the demonstration is complete but for what this machine cannot do:")
+        for message in left_out:
+            say(f"  {message}")
+    return CANNOT if left_out else DONE
+
+
+def _make(folder: Path) -> None:
+    if folder.exists() and not folder.is_dir():
+        raise ResultError(f"'{folder}' is a file; give the name of a folder")
+    folder.mkdir(parents=True, exist_ok=True)
+
+
+def _case(folder: Path) -> tuple[Case, list[str]]:
+    """The case, meshed anew from the job's own geometry; the shipped one where gmsh is missing."""
+    job = _copy_job(folder)
+    missing = gmsh_missing()
+    if missing:
+        say("1/5  gmsh cannot run here: taking the case that ships with murmesh")
+        with as_file(files("murmesh.sample_geometry") / SHIPPED) as shipped:
+            case = read_case(shipped)
+    else:
+        say(f"1/5  meshing and tagging the cab ({job})")
+        case = load_case_file(job)
+    say(render(check_case(case)))
+    write_case(case, folder / "cab.h5")
+    return case, [f"geometry and mesh: {missing}"] if missing else []
+
+
+def _copy_job(folder: Path) -> Path:
+    """The job and its files, so that the user can change them and run it again."""
+    for name in SOURCES:
+        with as_file(files("murmesh.sample_geometry") / name) as source:
+            shutil.copyfile(source, folder / name)
+    return folder / "cab.toml"
+
+
+def _solve(case: Case, folder: Path) -> Result:
+    lines = case.sweep.frequencies
+    say(f"2/5  solving {len(lines)} lines, {lines[0]:g} .. {lines[-1]:g} Hz, {len(case.load_cases)} load cases")
+    journal = Journal.at(folder / "cab_result.h5")
+    result = solve(case, journal, report=show)
+    write_result(result, folder / "cab_result.h5")
+    Journal(journal).forget()
+    say(summary(result))
+    return result
+
+
+def _answers(result: Result) -> None:
+    say("3/5  levels and rankings")
+    answer(levels_command.text(all_levels(result)))
+    for held in result.load_cases:
+        answer("")
+        answer(rank_command.text(rank(result, [], load_case=held.name)))
+    answer(f"\n{CAUTIONS}\nAll data of this demonstration are invented.\n")
+
+
+def _files(result: Result, folder: Path) -> list[str]:
+    say("4/5  tables and VTK files")
+    export(result, folder / "files", list(EXPORTS))
+    say("5/5  pictures")
+    pictures = [picture for picture in PICTURES if picture.source == "result"]
+    first, *others = [held.name for held in result.load_cases]
+    left_out = draw(result, folder / "pictures", pictures, load_case=first)
+    for name in others:
+        flat = [picture for picture in pictures if not picture.renders]
+        draw(result, folder / "pictures", flat, prefix=f"{name}_", load_case=name)
+    return [f"pictures: {', '.join(left_out)} (the line that cures it stands above)"] if left_out else []
+
+
+register(
+    Command(
+        "demo",
+        "Run the demonstration: an invented cab with 14 panels, from geometry to levels, rankings and pictures.",
+        "  murmesh demo cab_demo",
+        arguments,
+        run,
+    )
+)

@@ -1,0 +1,56 @@
+"""murmesh draw: pictures of a result."""
+
+from __future__ import annotations
+
+import argparse
+from pathlib import Path
+
+from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, band_argument, register, say
+from murmesh.plugin.pictures import PICTURES
+from murmesh.plugin.probe import rendering_missing
+from murmesh.plugin.products import Product
+from murmesh.solver.result import Result, read_result
+
+
+def arguments(parser: argparse.ArgumentParser) -> None:
+    known = ", ".join(product.name for product in PICTURES if product.source == "result")
+    parser.add_argument("result", help="result file")
+    parser.add_argument("folder", help="folder for the PNG files")
+    parser.add_argument("--picture", action="append", default=[], help=f"one of: {known}; repeat for several (default: all)")
+    parser.add_argument("--frequency", type=float, help="frequency [Hz] of maps (default: the loudest kept line)")
+    parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz for rankings (default: the whole sweep)")
+    parser.add_argument("--weighting", choices=("A", "C", "Z"), help="frequency weighting (default A)")
+    parser.add_argument("--load-case", help="load case (default: the first)")
+
+
+def run(args: argparse.Namespace) -> int:
+    result = read_result(args.result)
+    names = args.picture or [product.name for product in PICTURES if product.source == "result"]
+    options = {"frequency": args.frequency, "band": args.band, "weighting": args.weighting, "load_case": args.load_case}
+    left_out = draw(result, Path(args.folder), [PICTURES[name] for name in names], **options)
+    return CANNOT if left_out else DONE
+
+
+def draw(result: Result, folder: Path, pictures: list[Product], prefix: str = "", **options: object) -> list[str]:
+    """Draw into `folder`, answering with each path; returns the names of pictures that this machine cannot draw."""
+    folder.mkdir(parents=True, exist_ok=True)
+    missing = rendering_missing() if any(picture.renders for picture in pictures) else None
+    left_out = [picture.name for picture in pictures if picture.renders and missing]
+    for picture in pictures:
+        if picture.name not in left_out:
+            path = folder / f"{prefix}{picture.name}{picture.suffix}"
+            answer(str(picture.make(result, path, **picture.taking(**options))))
+    if missing:
+        say(f"murmesh: left out {', '.join(left_out)}: {missing}")
+    return left_out
+
+
+register(
+    Command(
+        "draw",
+        "Draw level maps, cut planes, spectra and rankings of a result as PNG files.",
+        "  murmesh draw cab_result.h5 pictures --picture cut_plane --frequency 95",
+        arguments,
+        run,
+    )
+)
