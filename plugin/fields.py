@@ -1,7 +1,7 @@
 """Which line of a kept field to show, and the levels of pressures as a load case means them.
 
-    <p^2> = (1/2) sum_r |p_r|^2 / bandwidth        r columns whose mean squares add; bandwidth 1 for tones
-    L     = 10 lg(<p^2> / (20 uPa)^2)
+<p^2> = (1/2) sum_r |p_r|^2 / bandwidth        r columns whose mean squares add; bandwidth 1 for tones
+L     = 10 lg(<p^2> / (20 uPa)^2)
 """
 
 from __future__ import annotations

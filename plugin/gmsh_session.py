@@ -24,9 +24,7 @@ def current_gmsh() -> Any:
     import gmsh
 
     if not gmsh.isInitialized():
-        raise MeshError(
-            "gmsh is not initialised, so there is no current model; call gmsh.initialize() and make a model"
-        )
+        raise MeshError("gmsh is not initialised, so there is no current model; call gmsh.initialize() and make a model")
     return gmsh
 
 
@@ -146,9 +144,7 @@ def generate(path: Path, size: float | None, order: int) -> None:
     if any(len(found) for found in gmsh.model.mesh.getElements(3)[1]):
         return
     if not gmsh.model.getEntities(3) or not gmsh.model.getEntities(2):
-        raise MeshError(
-            f"'{path}' holds no volume and no tetrahedra; make a volume of the air, not only of its surfaces"
-        )
+        raise MeshError(f"'{path}' holds no volume and no tetrahedra; make a volume of the air, not only of its surfaces")
     try:
         if size is not None:
             gmsh.option.setNumber("Mesh.MeshSizeMax", size)

@@ -57,9 +57,7 @@ class Rule(Declared):
     inside: tuple[Vector, Vector] | None = quantity(
         help="two opposite corners of a box that holds the centroid of every triangle", unit="m", default=None
     )
-    facing: Vector | None = quantity(
-        help="direction of the normal out of the air, e.g. [0, 0, 1] for a roof", default=None
-    )
+    facing: Vector | None = quantity(help="direction of the normal out of the air, e.g. [0, 0, 1] for a roof", default=None)
     within_deg: float = quantity(help="largest angle to `facing`", unit="deg", low=0.0, high=180.0, default=30.0)
     of: str = quantity(help="only triangles of these groups (name or glob); default: the outer boundary", default="")
 
@@ -121,9 +119,7 @@ class LoadSet(Declared):
     """The load case "default", to which the loads named beside surfaces go."""
 
     spectrum: str = quantity(help="line spectrum or density", choices=("tones", "density"), default="density")
-    bandwidth: float = quantity(
-        help="bandwidth the amplitudes of a density hold in", unit="Hz", positive=True, default=1.0
-    )
+    bandwidth: float = quantity(help="bandwidth the amplitudes of a density hold in", unit="Hz", positive=True, default=1.0)
     combination: Combination = quantity(help="how the loads act together", default=Coherent())
     loads: tuple[Load, ...] = quantity(help="loads; a surface may be a glob", default=())
 
@@ -199,9 +195,7 @@ class Job(Declared):
         """Add an operating state of its own."""
         return self.with_(load_cases=(*self.load_cases, load_case))
 
-    def receiver(
-        self, name: str, position: Iterable[float], radius: float = 0.0, measured: Measured | None = None
-    ) -> Job:
+    def receiver(self, name: str, position: Iterable[float], radius: float = 0.0, measured: Measured | None = None) -> Job:
         """Add a microphone or ear."""
         return self.with_(receivers=(*self.receivers, Receiver(name, _vector(position), radius, measured)))
 
@@ -298,9 +292,7 @@ def as_motion(given: Motion | Spectrum | complex, measure: str = "velocity") -> 
     if not isinstance(given, Motion):
         return Uniform(given, measure)
     if given.measure != measure:
-        raise FieldError(
-            f"a motion of measure '{given.measure}' was given as {measure}; use {given.measure} = ... for it"
-        )
+        raise FieldError(f"a motion of measure '{given.measure}' was given as {measure}; use {given.measure} = ... for it")
     return given
 
 

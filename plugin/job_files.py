@@ -31,9 +31,7 @@ def motion_tree(value: object, measure: str, where: str) -> object:
                 'form = "peak", "rms" or "psd" for an autospectrum without phase'
             )
     if measure and tree.setdefault("measure", measure) != measure:
-        raise FieldError(
-            f"{where}: measure = '{tree['measure']}' contradicts the key; use {tree['measure']} = ... for it"
-        )
+        raise FieldError(f"{where}: measure = '{tree['measure']}' contradicts the key; use {tree['measure']} = ... for it")
     return tree
 
 
@@ -76,9 +74,7 @@ def _from_file(table: Tree, folder: Path) -> Tree:
         return {**table, **{name: array for name, (array, _) in held.items()}}
     if "hdf5" in reader:
         raise FieldError(f"'{path.name}': a spectrum is read from csv; hdf5 is for kind = 'scan' and 'cross_spectrum'")
-    column = read_column(
-        path, str(reader.get("column", "")), str(reader.get("unit", "")), str(reader.get("time_sign", "+"))
-    )
+    column = read_column(path, str(reader.get("column", "")), str(reader.get("unit", "")), str(reader.get("time_sign", "+")))
     if kind in Spectrum.registry:
         return {**table, "kind": kind, **_spectrum(kind, column, reader)}
     field = _spectrum_field(kind)
@@ -112,18 +108,14 @@ def _measures(unit: str) -> str:
 def _settle_motion(table: Tree, unit: str, measures: str, name: str) -> None:
     """A motion from a file says its unit, and the unit says whether it is a velocity, an acceleration, or a density."""
     if not unit:
-        raise FieldError(
-            f"'{name}': the unit is not said; write it behind the column, roof_re [mm/s], or as unit = \"mm/s\""
-        )
+        raise FieldError(f"'{name}': the unit is not said; write it behind the column, roof_re [mm/s], or as unit = \"mm/s\"")
     what, density = measures.removesuffix(" psd"), measures.endswith(" psd")
     if what not in ("velocity", "acceleration"):
         raise FieldError(f"'{name}': the unit {unit} is that of a {measures}, not of a velocity or an acceleration")
     if table.setdefault("measure", what) != what:
         raise FieldError(f"'{name}': the unit {unit} is that of a {what}, but measure = '{table['measure']}'; mend one")
     if density != (table.get("form") == "psd"):
-        raise FieldError(
-            f"'{name}': the unit {unit} and form = '{table.get('form', '')}' contradict each other; mend one"
-        )
+        raise FieldError(f"'{name}': the unit {unit} and form = '{table.get('form', '')}' contradict each other; mend one")
 
 
 def _settle_unit(table: Tree, own: frozenset[str], column: Column, name: str) -> None:

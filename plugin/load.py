@@ -21,9 +21,7 @@ def load_job(path: str | Path) -> tuple[Job, TaggedMesh]:
         return job, job.read_mesh(path.parent)
     mesh = read_mesh(path)
     if not mesh.job:
-        raise FormatError(
-            f"'{path}' carries no job; write a job file (.toml) that names it, or store one from a gmsh script"
-        )
+        raise FormatError(f"'{path}' carries no job; write a job file (.toml) that names it, or store one from a gmsh script")
     return Job.from_json(mesh.job), mesh
 
 

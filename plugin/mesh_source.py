@@ -132,9 +132,7 @@ def from_gmsh(source: str = "the current gmsh model") -> TaggedMesh:
     return tagged_mesh(flat, tets, triangles, other_cells=other, other_groups=low, source=source, job=job)
 
 
-def _gmsh_blocks(
-    gmsh: Any, dim: int, known: Mapping[int, int], tags: Any, order: Any, other: dict[str, int]
-) -> list[Block]:
+def _gmsh_blocks(gmsh: Any, dim: int, known: Mapping[int, int], tags: Any, order: Any, other: dict[str, int]) -> list[Block]:
     blocks: list[Block] = [
         (np.empty((0, dim + 1), dtype=np.int64), (_group_name(gmsh, dim, tag),))
         for _, tag in gmsh.model.getPhysicalGroups(dim)
@@ -242,9 +240,7 @@ def from_meshio(mesh: Any, source: str = "a mesh", job: str = "") -> TaggedMesh:
     empty = [(np.empty((0, 3), np.int64), (n,)) for n, (_, dim) in _physical(mesh).items() if dim == 2]
     nodes = np.zeros((len(mesh.points), 3))
     nodes[:, : mesh.points.shape[1]] = mesh.points
-    return tagged_mesh(
-        nodes, parts[3], [*empty, *parts[2]], other_cells=other, other_groups=low, source=source, job=job
-    )
+    return tagged_mesh(nodes, parts[3], [*empty, *parts[2]], other_cells=other, other_groups=low, source=source, job=job)
 
 
 def _blocks_of(cells: Ints, labels: Mapping[str, Ints]) -> list[Block]:

@@ -1,7 +1,7 @@
 """A list of things murmesh can make from a result: pictures, exports. Each member is one file that enters itself.
 
-    PICTURES = Products(__name__)                      in the package's __init__.py
-    @PICTURES.member("cut_plane", ".png", "...")       above `draw(result, path, **options)` in a file of the package
+PICTURES = Products(__name__)                      in the package's __init__.py
+@PICTURES.member("cut_plane", ".png", "...")       above `draw(result, path, **options)` in a file of the package
 """
 
 from __future__ import annotations

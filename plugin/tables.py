@@ -116,9 +116,7 @@ def _header(cell: str, path: Path) -> tuple[str, str]:
 
 def _row(path: Path, number: int, cells: list[str], names: list[str], mark: str) -> list[float]:
     if len(cells) != len(names):
-        raise FormatError(
-            f"'{path}', line {number}: {len(cells)} fields, the header has {len(names)}; complete the row"
-        )
+        raise FormatError(f"'{path}', line {number}: {len(cells)} fields, the header has {len(names)}; complete the row")
     values = []
     for name, cell in zip(names, cells, strict=True):
         try:
@@ -271,7 +269,5 @@ def read_arrays(path: str | Path, names: tuple[str, ...]) -> dict[str, tuple[npt
             elif name in file:
                 found[name] = file[name][()], str(file[name].attrs.get("unit", ""))
             else:
-                raise FormatError(
-                    f"'{path}' has no dataset '{name}'; expected {', '.join(names)}. It has: {', '.join(file)}"
-                )
+                raise FormatError(f"'{path}' has no dataset '{name}'; expected {', '.join(names)}. It has: {', '.join(file)}")
         return found

@@ -90,9 +90,7 @@ class DofMap:
         table = np.asarray(tets, dtype=np.int64)
         found = np.unique(self.orders[table])
         if len(found) > 1:
-            raise MeshError(
-                f"tetrahedra of orders {found.tolist()} were given together; expected one order: group them"
-            )
+            raise MeshError(f"tetrahedra of orders {found.tolist()} were given together; expected one order: group them")
         return self.dofs_up_to(table, int(found[0]) if len(found) else 1)
 
     def dofs_up_to(self, tets: Ints, order: int) -> Ints:
@@ -114,9 +112,7 @@ class DofMap:
         Raises: MeshError when the topology differs or an order of `lower` is above this map's.
         """
         if self.topology is not lower.topology or np.any(lower.orders > self.orders):
-            raise MeshError(
-                "expected a map of the same topology with lower or equal orders; build both from one Topology"
-            )
+            raise MeshError("expected a map of the same topology with lower or equal orders; build both from one Topology")
         rank = np.arange(lower.n_dofs) - np.repeat(lower.offsets[:-1], lower.sizes)
         return np.repeat(self.offsets[:-1], lower.sizes) + rank
 

@@ -34,9 +34,7 @@ def absorbed_power(system: System, phi: Complex, f: float, field: Complex, label
     return taken
 
 
-def input_power(
-    f: float, forces: Complex, given: Complex, reaction: Complex | None, field: Complex, mix: Complex
-) -> Floats:
+def input_power(f: float, forces: Complex, given: Complex, reaction: Complex | None, field: Complex, mix: Complex) -> Floats:
     """Power [W] that each load (columns of forces and given) puts in.
 
     A prescribed pressure drives through the reaction A p - f of the unknowns it holds: conj(given) picks its own share.

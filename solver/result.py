@@ -132,9 +132,7 @@ class Result:
                 )
             )
         frequencies = np.array([line.frequency for line in lines])
-        return cls(
-            case, order, frequencies, samples.receiver, samples.weight, labels, tuple(gathered), provenance
-        )
+        return cls(case, order, frequencies, samples.receiver, samples.weight, labels, tuple(gathered), provenance)
 
     def load_case(self, name: str = "") -> LoadCaseResult:
         """The load case called `name`; the first one if no name is given."""

@@ -134,9 +134,7 @@ def _split(case: Case, index: int, boundary: Boundary, tet: Ints, face: Ints) ->
         regions = case.mesh.tet_region[tet[:, column]]
         for region in np.unique(regions):
             inside = regions == region
-            sides.append(
-                Side(index, int(region), kind, tet[inside, column], face[inside, column], -1 if column else 1)
-            )
+            sides.append(Side(index, int(region), kind, tet[inside, column], face[inside, column], -1 if column else 1))
     return sides
 
 

@@ -209,9 +209,7 @@ def _find_open(table: _FaceTable, open_faces: npt.ArrayLike | None) -> Ints:
     return np.unique(face)
 
 
-def _open(
-    ids: list[Ints], counts: list[int], table: _FaceTable, opened: Ints
-) -> tuple[list[Ints], list[int], list[Ints]]:
+def _open(ids: list[Ints], counts: list[int], table: _FaceTable, opened: Ints) -> tuple[list[Ints], list[int], list[Ints]]:
     """Split vertices, edges and faces that touch the opened faces; also the old number behind each new one."""
     closed = table.tet[:, 1] >= 0
     closed[opened] = False

@@ -6,6 +6,7 @@ from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
 import numpy as np
+
 from meshes import TestMesh
 from murmesh.solver.case.boundary import Boundary, Rigid
 from murmesh.solver.case.load import Load, LoadCase, Monopole

@@ -11,6 +11,7 @@ os.environ["MPLBACKEND"] = "Agg"
 from collections.abc import Iterator
 
 import pytest
+
 from murmesh.plugin import probe
 
 os.environ.update(probe.OFF_SCREEN)

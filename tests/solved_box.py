@@ -5,8 +5,9 @@ from __future__ import annotations
 from dataclasses import replace
 from functools import cache
 
-import meshes
 import numpy as np
+
+import meshes
 from murmesh.solver.case.boundary import Rigid, Sheet, Vibrating
 from murmesh.solver.case.load import Coherent, Incoherent, SurfaceVelocity
 from murmesh.solver.case.medium import Air, LossFactor

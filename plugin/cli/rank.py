@@ -12,7 +12,9 @@ from murmesh.solver.result import read_result
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("result", help="result file")
-    parser.add_argument("--receiver", action="append", default=[], help="receiver; repeat for a sum over several (default: all)")
+    parser.add_argument(
+        "--receiver", action="append", default=[], help="receiver; repeat for a sum over several (default: all)"
+    )
     parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz (default: the whole sweep)")
     parser.add_argument("--weighting", choices=("A", "C", "Z"), default="A", help="frequency weighting (default A)")
     parser.add_argument("--load-case", default="", help="load case (default: the first)")
@@ -35,9 +37,7 @@ def text(ranking: Ranking) -> str:
         f"Participation at {', '.join(ranking.receivers)}: {ranking.band[0]:g} .. {ranking.band[1]:g} Hz, load case "
         f"'{ranking.load_case}', mean level {shown(ranking.total_db)} {unit} re 20 uPa"
     )
-    rows = [
-        (row.panel, f"{100 * row.share:+.1f} %", shown(row.own_db), f"{row.removal_db:+.1f}") for row in ranking.rows
-    ]
+    rows = [(row.panel, f"{100 * row.share:+.1f} %", shown(row.own_db), f"{row.removal_db:+.1f}") for row in ranking.rows]
     body = table(("panel", "share of mean square", f"alone [{unit}]", "if silent [dB]"), rows)
     total = sum(row.share for row in ranking.rows)
     return f"{head}\n{body}\nShares add up to {100 * total:.6f} % (closure {ranking.closure:.0e}).\n{ranking.words}"

@@ -1,7 +1,7 @@
 """Point arrays that the VTK exports share, and the words that go with them.
 
-    p_re, p_im     complex peak pressure [Pa]; numbered p_re_1, p_im_1, ... where a load case is a sum of mean squares
-    level_db       rms level re 20 uPa (per hertz for a density); phase_deg only where there is one pressure
+p_re, p_im     complex peak pressure [Pa]; numbered p_re_1, p_im_1, ... where a load case is a sum of mean squares
+level_db       rms level re 20 uPa (per hertz for a density); phase_deg only where there is one pressure
 """
 
 from __future__ import annotations

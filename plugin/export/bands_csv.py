@@ -19,9 +19,7 @@ REMARKS = (
 
 
 @EXPORTS.member("bands_csv", ".csv", "overall and third-octave levels per receiver")
-def write(
-    result: Result, path: Path, *, receivers: tuple[str, ...] = (), load_case: str = "", weighting: str = "A"
-) -> Path:
+def write(result: Result, path: Path, *, receivers: tuple[str, ...] = (), load_case: str = "", weighting: str = "A") -> Path:
     """Write one row per load case, receiver and band, weighted and (Z) not."""
     return write_table(result, path, REMARKS, COLUMNS, _rows(result, receivers, load_case, weighting))
 

@@ -14,9 +14,7 @@ from murmesh.solver.result import Result
 
 
 @EXPORTS.member("vtu", ".vtu", "field at one frequency for VTK readers: pressure, level and phase at points")
-def write(
-    result: Result, path: Path, *, frequency: float | None = None, load_case: str = "", flat: bool = False
-) -> Path:
+def write(result: Result, path: Path, *, frequency: float | None = None, load_case: str = "", flat: bool = False) -> Path:
     """Write the field kept at `frequency` (None: the loudest at the receivers).
 
     Cells are Lagrange tetrahedra of the solution's own order, exact between their points; `flat` writes linear ones instead,

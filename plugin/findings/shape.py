@@ -28,8 +28,7 @@ def foreign_cells(mesh: TaggedMesh) -> Iterator[Finding]:
     if mesh.other_cells:
         text = ", ".join(f"{count} {name}" for name, count in sorted(mesh.other_cells.items()))
         cure = (
-            "mesh with tetrahedra only (in gmsh: no recombination, no extruded layers, no transfinite hexahedra), "
-            "order 1 or 2"
+            "mesh with tetrahedra only (in gmsh: no recombination, no extruded layers, no transfinite hexahedra), order 1 or 2"
         )
         yield error("non_tetrahedral_cells", mesh.source, f"the mesh holds cells that are not used: {text}", cure)
 

@@ -194,9 +194,7 @@ def _cut(result: Result, skin: Skin, plane: Plane, frequency: float, load_case: 
     return Cut(plane, segments, low, high, pressure.reshape(*grid.shape[:2], -1))
 
 
-def _sampled(
-    result: Result, plane: Plane, points: Floats, frequency: float, load_case: str
-) -> npt.NDArray[np.complex128]:
+def _sampled(result: Result, plane: Plane, points: Floats, frequency: float, load_case: str) -> npt.NDArray[np.complex128]:
     """Pressures (k, r) just beside a plane, where its normal points to; on the other side where that is no fluid.
 
     A plane that lies in a sheet would meet either side at random.
@@ -229,9 +227,7 @@ def _tick(about: float) -> float:
     return float(max(m * power for m in (1, 2, 5) if m * power <= about * (1 + 1e-9)))
 
 
-def _draw(
-    axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, float], scale_of_lengths: float
-) -> None:
+def _draw(axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, float], scale_of_lengths: float) -> None:
     extent = (cut.low[0], cut.high[0], cut.low[1], cut.high[1])
     colours = matplotlib.colormaps[LEVEL_MAP]
     axes.imshow(levels, origin="lower", extent=extent, cmap=colours, vmin=scale[0], vmax=scale[1], interpolation="nearest")

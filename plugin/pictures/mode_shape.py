@@ -36,8 +36,7 @@ def draw_all(modes: Modes, folder: str | Path) -> list[Path]:
     skin = sample_skin(modes.space)
     with look():
         return [
-            save(figure(modes, index, skin), folder / f"mode_{index + 1:02d}.png")
-            for index in range(len(modes.frequencies))
+            save(figure(modes, index, skin), folder / f"mode_{index + 1:02d}.png") for index in range(len(modes.frequencies))
         ]
 
 

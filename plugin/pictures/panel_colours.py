@@ -53,12 +53,15 @@ def figure(
     share = {surfaces.index(row.panel): 100 * row.share for row in ranking.rows if row.panel in surfaces}
     reach = 10.0 * np.ceil(max(10.0, *map(abs, share.values())) / 10.0) if share else 10.0
     skin = sample_skin(result.space)
-    notes = [*ranking_notes(ranking), *_elsewhere(ranking, surfaces, share), VIEWS_NOTE, f"Convention: {CONVENTION}. {origin(result)}."]
+    notes = [
+        *ranking_notes(ranking),
+        *_elsewhere(ranking, surfaces, share),
+        VIEWS_NOTE,
+        f"Convention: {CONVENTION}. {origin(result)}.",
+    ]
     sheet = page("Panels by their share of the mean square", ranking_facts(result, ranking), notes, _HEIGHT)
     cells = np.array([share.get(index, np.nan) for index in range(len(surfaces))] + [np.nan])[skin.surface]
-    drawn = two_views(
-        sheet, skin, _NAMES, _BELOW, scalars=cells, cmap=SIGNED_MAP, clim=(-reach, reach), nan_color=_STILL
-    )
+    drawn = two_views(sheet, skin, _NAMES, _BELOW, scalars=cells, cmap=SIGNED_MAP, clim=(-reach, reach), nan_color=_STILL)
     words = {index: f"{short(surfaces[index], 18)}\n{signed(value, ' %')}" for index, value in share.items()}
     places = np.array([receiver.position for receiver in result.case.receivers]).reshape(-1, 3)
     outline = Outline.of(skin)

@@ -130,9 +130,7 @@ def _image(axes: Axes, edges: Floats, values: Floats, panels: Sequence[str], sca
         axes.spines[side].set_visible(True)
 
 
-def _spectrum(
-    axes: Axes, f: Floats, total: Floats, density: bool, scale: tuple[float, float], unit: str
-) -> None:
+def _spectrum(axes: Axes, f: Floats, total: Floats, density: bool, scale: tuple[float, float], unit: str) -> None:
     colour = LINES[0][0]
     if density:
         axes.plot(f, total, color=colour, linewidth=1.4)

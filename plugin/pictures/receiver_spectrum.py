@@ -121,7 +121,14 @@ def _narrow(
         if heard.sum() <= _MOST_LABELS:
             _label_tones(axes, f[heard], curve[heard], scale)
     if receiver.measured is not None:
-        axes.plot(receiver.measured.frequencies, _weighted(receiver.measured, item.weighting), color=ACCENT, linestyle=(0, (5, 2)), linewidth=1.3, label="measured")
+        axes.plot(
+            receiver.measured.frequencies,
+            _weighted(receiver.measured, item.weighting),
+            color=ACCENT,
+            linestyle=(0, (5, 2)),
+            linewidth=1.3,
+            label="measured",
+        )
         axes.legend(loc="upper right", ncols=2, bbox_to_anchor=(1.0, 1.15), borderaxespad=0.0)
     low, high = (float(f[0]), float(f[-1])) if len(f) > 1 else (0.8 * float(f[0]), 1.25 * float(f[0]))
     pad = 1.0 if density else 1.04

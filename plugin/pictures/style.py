@@ -80,9 +80,7 @@ class Page:
     def axes(self, left: float, bottom: float, width: float, height: float) -> Axes:
         """Axes at a place in inches from the lower left corner of the free part."""
         w, h = self.figure.get_size_inches()
-        return self.figure.add_axes(
-            ((self.left + left) / w, (self.bottom + bottom) / h, width / w, height / h)
-        )
+        return self.figure.add_axes(((self.left + left) / w, (self.bottom + bottom) / h, width / w, height / h))
 
     def narrowed(self, inches: float) -> Page:
         """The same page with less free width, from the right."""

@@ -194,7 +194,8 @@ class Sheet(Boundary):
     transfer: WallLaw | None = quantity(help="transfer impedance law (a perforated plate ...)", default=None)
     front_region: str | None = quantity(help="the front is the side in this region", default=None)
     front_direction: tuple[float, float, float] | None = quantity(
-        help="the front is the side that looks in this direction (default: the triangles' own orientation)", default=None
+        help="the front is the side that looks in this direction (default: the triangles' own orientation)",
+        default=None,
     )
 
     def validate(self) -> None:

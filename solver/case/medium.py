@@ -241,9 +241,7 @@ class ReverberationTime(Damping):
     def loss_factor(self, f: Float, medium: Medium) -> Float:
         time = _real("reverberation time", self.value, f)
         if np.any(time == 0):
-            raise FieldError(
-                f"a reverberation time of zero at {f[time == 0][0]:g} Hz has no loss factor; correct the table"
-            )
+            raise FieldError(f"a reverberation time of zero at {f[time == 0][0]:g} Hz has no loss factor; correct the table")
         return np.asarray(2.2 / (f * time))
 
     @classmethod

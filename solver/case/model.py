@@ -102,7 +102,10 @@ class Sweep(Declared):
 
     frequencies: npt.NDArray[np.float64] = quantity(help="lines, increasing, (nf,)", unit="Hz", positive=True)
     order: int = quantity(
-        help="polynomial order of the elements, 1..8; 0: from the highest frequency", low=0, high=HIGHEST_ORDER, default=0
+        help="polynomial order of the elements, 1..8; 0: from the highest frequency",
+        low=0,
+        high=HIGHEST_ORDER,
+        default=0,
     )
     accuracy: float = quantity(help="accuracy wanted at the receivers", unit="dB", positive=True, default=0.1)
     field_frequencies: npt.NDArray[np.float64] = quantity(

@@ -86,15 +86,11 @@ class Given(WallLaw):
     """A number or a table, measured or computed; its unit, form and time sign are said."""
 
     value: complex | Spectrum = quantity(help="impedance or admittance")
-    unit: str = quantity(
-        help="rho_c: relative to rho c of the fluid in front", choices=("rho_c", "Pa.s/m"), default="rho_c"
-    )
+    unit: str = quantity(help="rho_c: relative to rho c of the fluid in front", choices=("rho_c", "Pa.s/m"), default="rho_c")
     form: str = quantity(
         help="impedance Z, or admittance 1/Z (in 1/unit)", choices=("impedance", "admittance"), default="impedance"
     )
-    time_sign: str = quantity(
-        help="sign of e^(+-iwt) the data hold for; '-' is conjugated", choices=("+", "-"), default="+"
-    )
+    time_sign: str = quantity(help="sign of e^(+-iwt) the data hold for; '-' is conjugated", choices=("+", "-"), default="+")
 
     def admittance(self, f: Float, fluid: Fluid) -> Complex:
         values = as_spectrum(self.value).at(f)

@@ -52,9 +52,7 @@ def function_count(kind: int, order: npt.ArrayLike) -> Ints:
 def check_order(order: int) -> None:
     """Raises MeshError when no basis of that order exists."""
     if not 1 <= order <= MAX_ORDER:
-        raise MeshError(
-            f"element order {order} was asked for; orders 1 to {MAX_ORDER} exist: choose one, or refine the mesh"
-        )
+        raise MeshError(f"element order {order} was asked for; orders 1 to {MAX_ORDER} exist: choose one, or refine the mesh")
 
 
 @dataclass(frozen=True)

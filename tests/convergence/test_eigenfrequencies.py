@@ -8,11 +8,11 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import scipy.sparse.linalg as spla
-from meshes import TestMesh, ball, box, cylinder, grid, jiggled, prism, shuffled
-from reading import read_csv_reference
 
+from meshes import TestMesh, ball, box, cylinder, grid, jiggled, prism, shuffled
 from murmesh.solver.assembly import DofMap, Geometry, volume_matrices
 from murmesh.solver.topology import Topology
+from reading import read_csv_reference
 
 C = 343.0
 
@@ -48,9 +48,7 @@ def _assert_matches(mesh: TestMesh, orders, expected: np.ndarray, tolerance: flo
     assert found[-1] > expected[-1] * (1 + 3 * tolerance)
 
 
-@pytest.mark.parametrize(
-    ("order", "cells", "below"), [(3, (6, 4, 4), 240.0), (4, (4, 3, 3), 300.0), (6, (3, 2, 2), 400.0)]
-)
+@pytest.mark.parametrize(("order", "cells", "below"), [(3, (6, 4, 4), 240.0), (4, (4, 3, 3), 300.0), (6, (3, 2, 2), 400.0)])
 def test_box_a01(order, cells, below) -> None:
     mesh = shuffled(jiggled(box(*cells, (1.9, 1.35, 1.1)), 0.05))
     _assert_matches(mesh, order, _published("A01_box_eigenfrequencies.csv", "f_Hz", below), 1e-4)

@@ -11,13 +11,13 @@ from functools import cache
 import numpy as np
 import pytest
 import scipy.sparse.linalg as spla
-from meshes import ball, box, shuffled
 from numpy.polynomial import Legendre
-from reading import read_csv_reference
 
+from meshes import ball, box, shuffled
 from murmesh.solver.assembly import DofMap, Geometry, evaluate, volume_matrices
 from murmesh.solver.elements.quadrature import tetrahedron_rule
 from murmesh.solver.topology import Topology
+from reading import read_csv_reference
 
 
 @cache
@@ -30,9 +30,7 @@ def _one_cell(order: int) -> tuple[np.ndarray, np.ndarray]:
     x = geometry.map(tet, bary)[:, 0]
     bubbles = [x * (1 - x) * Legendre.basis(n, [0, 1])(x) for n in range(order - 1)]
     K, M = volume_matrices(geometry, dofmap)
-    load = evaluate(geometry, dofmap, tet, bary).T @ (
-        np.tile(weights, 6)[:, None] * np.column_stack([1 - x, x, *bubbles])
-    )
+    load = evaluate(geometry, dofmap, tet, bary).T @ (np.tile(weights, 6)[:, None] * np.column_stack([1 - x, x, *bubbles]))
     V = spla.splu(M.tocsc()).solve(load)
     return V.T @ K @ V, V.T @ M @ V
 

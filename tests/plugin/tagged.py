@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+
 from meshes import TestMesh, box
 from murmesh.plugin.job import Job
 from murmesh.plugin.mesh_source import TaggedMesh, tagged_mesh

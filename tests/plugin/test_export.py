@@ -13,6 +13,13 @@ import h5py
 import numpy as np
 import numpy.typing as npt
 import pytest
+from vtkmodules.util.numpy_support import numpy_to_vtk, vtk_to_numpy
+from vtkmodules.vtkCommonCore import reference, vtkPoints
+from vtkmodules.vtkCommonDataModel import vtkCompositeDataSet, vtkDataSet, vtkPolyData
+from vtkmodules.vtkFiltersCore import vtkProbeFilter
+from vtkmodules.vtkIOHDF import vtkHDFReader
+from vtkmodules.vtkIOXML import vtkXMLMultiBlockDataReader, vtkXMLUnstructuredGridReader
+
 import solved_box
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.export.ranking_json import ranking_tree
@@ -22,12 +29,6 @@ from murmesh.solver.contribution import QUIETENING, participation, rank
 from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import P0
 from murmesh.solver.result import Result
-from vtkmodules.util.numpy_support import numpy_to_vtk, vtk_to_numpy
-from vtkmodules.vtkCommonCore import reference, vtkPoints
-from vtkmodules.vtkCommonDataModel import vtkCompositeDataSet, vtkDataSet, vtkPolyData
-from vtkmodules.vtkFiltersCore import vtkProbeFilter
-from vtkmodules.vtkIOHDF import vtkHDFReader
-from vtkmodules.vtkIOXML import vtkXMLMultiBlockDataReader, vtkXMLUnstructuredGridReader
 
 Floats = npt.NDArray[np.float64]
 F = 120.0
@@ -226,9 +227,7 @@ def test_vtkhdf_holds_every_kept_line_and_the_mesh_once(tmp_path: Path, result: 
         exact = result.pressure_at(x[clear], f)[:, 0]
         np.testing.assert_allclose(p[clear], exact, atol=2e-7 * np.abs(exact).max())
         places = _inside(50)
-        np.testing.assert_allclose(
-            _probe(data, places), result.pressure_at(places, f)[:, 0], atol=1e-6 * np.abs(exact).max()
-        )
+        np.testing.assert_allclose(_probe(data, places), result.pressure_at(places, f)[:, 0], atol=1e-6 * np.abs(exact).max())
 
 
 # ---------------------------------------------------------------------------------------------------------------------

@@ -9,6 +9,7 @@ from typing import Any
 import meshio
 import numpy as np
 import pytest
+
 from meshes import box, quadratic
 from murmesh.plugin import mesh_source
 from murmesh.plugin.gmsh_session import step_unit
@@ -323,7 +324,9 @@ def test_names_padded_with_blanks(tmp_path: Path) -> None:
 
 def test_vtk_has_no_names_but_is_read(tmp_path: Path) -> None:
     test = box(2, 1, 1)
-    meshio.write(tmp_path / "box.vtu", meshio.Mesh(test.nodes, [("tetra", test.tets), ("hexahedron", [[0, 1, 2, 3, 4, 5, 6, 7]])]))
+    meshio.write(
+        tmp_path / "box.vtu", meshio.Mesh(test.nodes, [("tetra", test.tets), ("hexahedron", [[0, 1, 2, 3, 4, 5, 6, 7]])])
+    )
     mesh = read_mesh(tmp_path / "box.vtu")
     assert len(mesh.tets) == len(test.tets) and not mesh.tet_groups and mesh.other_cells == {"hexahedron": 1}
 
@@ -374,6 +377,7 @@ def test_element_size_inverts_the_rule(order: int) -> None:
 
 def test_element_size_holds_on_a_mesh(gmsh_model: None) -> None:
     import gmsh
+
     from murmesh.solver.case.medium import GivenFluid
     from murmesh.solver.case.model import Case, Mesh, Region, Sweep
     from murmesh.solver.space import automatic_order

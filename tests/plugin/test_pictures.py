@@ -13,10 +13,11 @@ import matplotlib.colors
 import matplotlib.image
 import numpy as np
 import pytest
-import solved_box
 from matplotlib.figure import Figure
 from matplotlib.patches import Rectangle
 from matplotlib.text import Text
+
+import solved_box
 from murmesh.plugin import probe
 from murmesh.plugin.fields import field_levels, kept_line
 from murmesh.plugin.pictures import PICTURES, cut_plane, mode_shape
@@ -172,9 +173,7 @@ def test_options_pick_what_a_picture_takes() -> None:
     assert PICTURES["contribution_bars"].taking(**given) == {"band": (80.0, 160.0)}
 
 
-def test_without_rendering_a_3d_picture_says_the_cure(
-    tmp_path: Path, result: Result, monkeypatch: pytest.MonkeyPatch
-) -> None:
+def test_without_rendering_a_3d_picture_says_the_cure(tmp_path: Path, result: Result, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(probe, "rendering_missing", lambda: "no picture can be drawn: try apt-get")
     assert {p.name for p in PICTURES if p.renders} == {"mode_shape", "panel_colours", "surface_map"}
     for picture in FROM_RESULT:
@@ -384,4 +383,3 @@ def test_labels_keep_their_distance_and_their_order() -> None:
     assert np.all(-np.diff(placed) >= 0.2 - 1e-12) and placed.max() <= 1.0 and placed.min() >= -1.0 - 1e-12
     far_apart = np.array([0.8, 0.0, -0.5])
     np.testing.assert_allclose(spread(far_apart, 0.2, 1.0), far_apart)
-

@@ -7,6 +7,7 @@ import sys
 from collections.abc import Callable, Iterator
 
 import pytest
+
 from murmesh.plugin import probe
 from murmesh.solver.errors import MissingLibraryError
 

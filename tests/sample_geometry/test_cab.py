@@ -16,9 +16,7 @@ def _triangles() -> dict[str, npt.NDArray[np.int64]]:
 
     groups = {}
     for _, tag in gmsh.model.getPhysicalGroups(2):
-        nodes = [
-            gmsh.model.mesh.getElementsByType(2, entity)[1] for entity in gmsh.model.getEntitiesForPhysicalGroup(2, tag)
-        ]
+        nodes = [gmsh.model.mesh.getElementsByType(2, entity)[1] for entity in gmsh.model.getEntitiesForPhysicalGroup(2, tag)]
         groups[gmsh.model.getPhysicalName(2, tag)] = np.concatenate(nodes).astype(np.int64).reshape(-1, 3)
     return groups
 
@@ -55,6 +53,7 @@ def test_groups_cover_the_boundary_once(gmsh_model: None) -> None:
 
 def test_areas_and_volume_are_those_of_the_drawing(gmsh_model: None) -> None:
     import gmsh
+
     from murmesh.sample_geometry import cab
 
     cab.build(0.5)
@@ -78,6 +77,7 @@ def test_areas_and_volume_are_those_of_the_drawing(gmsh_model: None) -> None:
 
 def test_mesh_has_no_flat_tetrahedra(gmsh_model: None) -> None:
     import gmsh
+
     from murmesh.sample_geometry import cab
 
     cab.build()
@@ -88,6 +88,7 @@ def test_mesh_has_no_flat_tetrahedra(gmsh_model: None) -> None:
 
 def test_ears_lie_in_the_air_clear_of_every_surface(gmsh_model: None) -> None:
     import gmsh
+
     from murmesh.sample_geometry import cab
 
     cab.build(0.5)
@@ -99,9 +100,7 @@ def test_ears_lie_in_the_air_clear_of_every_surface(gmsh_model: None) -> None:
             assert math.dist(closest, ear) > 0.3
 
 
-def test_script_writes_a_mesh_with_names(
-    gmsh_library: None, tmp_path: Path, capsys: pytest.CaptureFixture[str]
-) -> None:
+def test_script_writes_a_mesh_with_names(gmsh_library: None, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     from murmesh.sample_geometry import cab
 
     cab.main(["--size", "0.5", str(tmp_path / "cab.msh")])

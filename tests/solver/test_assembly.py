@@ -7,8 +7,8 @@ import pytest
 import scipy.linalg as la
 import scipy.sparse as sp
 import scipy.sparse.linalg as spla
-from meshes import TestMesh, ball, box, cylinder, faces_where, grid, jiggled, quadratic, shuffled
 
+from meshes import TestMesh, ball, box, cylinder, faces_where, grid, jiggled, quadratic, shuffled
 from murmesh.solver.assembly import (
     DofMap,
     Geometry,

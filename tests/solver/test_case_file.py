@@ -8,6 +8,7 @@ from typing import Any
 import h5py
 import numpy as np
 import pytest
+
 from cases import AIR, case_of, lossy, monopole
 from meshes import box
 from murmesh.solver.case.boundary import Boundary, Impedance, Port, Pressure, Sheet, Vibrating
@@ -175,7 +176,10 @@ def _with_load(load: Any) -> Case:
     ("make", "words"),
     [
         (lambda: _with_load(SurfaceVelocity("x9", Uniform(1.0))), "no surface is called 'x9'; did you mean 'x"),
-        (lambda: _with_load(SurfaceVelocity("z1", Uniform(1.0))), "kind 'rigid' cannot carry a surface_velocity; make it"),
+        (
+            lambda: _with_load(SurfaceVelocity("z1", Uniform(1.0))),
+            "kind 'rigid' cannot carry a surface_velocity; make it",
+        ),
         (lambda: _with_load(SurfacePressure("x0", 1.0)), "make it pressure"),
         (lambda: _with_load(IncomingWave("x0", 1.0)), "make it port"),
         (lambda: _case(regions=(Region("air", AIR), Region("air", AIR))), "the name 'air' is used twice"),

@@ -7,6 +7,7 @@ from typing import Any, cast
 
 import numpy as np
 import pytest
+
 from murmesh.plugin.manual import FAMILIES, table_of_kinds
 from murmesh.solver.case.boundary import Adjacent, Boundary, Impedance, Pressure, Rigid, Sheet, Vibrating
 from murmesh.solver.case.catalogue import Treatment

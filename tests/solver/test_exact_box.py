@@ -9,6 +9,7 @@ from functools import cache
 from typing import Any
 
 import numpy as np
+
 from cases import case_of, lossy, monopole
 from meshes import TestMesh, box, faces_where, grid
 from murmesh.solver.case.boundary import Boundary, Impedance, Vibrating
@@ -79,8 +80,7 @@ def test_contributions_and_ranks_a03() -> None:
     reference = _reference("A03_panel_contributions.json")
     panels, rows = reference["panels"], reference["rows"]
     loads = [
-        SurfaceVelocity(panel["name"], Uniform(complex(*panel["v_outward"]), positive="out_of_fluid"))
-        for panel in panels
+        SurfaceVelocity(panel["name"], Uniform(complex(*panel["v_outward"]), positive="out_of_fluid")) for panel in panels
     ]
     case = case_of(
         _panel_mesh(panels),

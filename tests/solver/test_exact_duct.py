@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
+
 from cases import AIR, RHO_C, case_of
 from meshes import TestMesh, box, grid
 from murmesh.solver.case.boundary import Impedance, Port, Rigid, Vibrating, VibratingTreated

@@ -7,6 +7,7 @@ import re
 
 import numpy as np
 import pytest
+
 from murmesh.solver.case.medium import (
     Air,
     GivenFluid,

@@ -6,10 +6,10 @@ import itertools
 
 import numpy as np
 import pytest
-from reading import read_csv_reference, read_json_reference
 
 from murmesh.solver import levels
 from murmesh.solver.errors import FieldError
+from reading import read_csv_reference, read_json_reference
 
 
 def test_weightings_e01() -> None:
@@ -67,9 +67,7 @@ def test_halving_the_step_keeps_the_band_level_of_a_density() -> None:
 
     assert 10 * abs(np.log10(energy(2.0) / energy(1.0))) < 0.01
     f = np.arange(80.0, 200.1, 1.0)
-    tones = [
-        levels.band_energy(g, np.full(len(g), 1e-6), levels.third_octaves(125, 125), "tones")[0][0] for g in (f, f[::2])
-    ]
+    tones = [levels.band_energy(g, np.full(len(g), 1e-6), levels.third_octaves(125, 125), "tones")[0][0] for g in (f, f[::2])]
     assert tones[0] / tones[1] == pytest.approx(2.0, rel=0.1)  # a sum of tones does depend on it
 
 

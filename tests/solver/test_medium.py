@@ -6,7 +6,6 @@ import re
 
 import numpy as np
 import pytest
-from reading import read_csv_reference
 
 from murmesh.solver.case.medium import (
     Air,
@@ -27,6 +26,7 @@ from murmesh.solver.case.medium import (
 from murmesh.solver.case.porous import Fluid, JohnsonChampouxAllard
 from murmesh.solver.case.spectrum import Constant, Table
 from murmesh.solver.errors import FieldError
+from reading import read_csv_reference
 
 F = np.array([31.5, 125.0, 1000.0])
 AIR = Fluid(1.205, 343.0)
@@ -50,9 +50,7 @@ def test_losses_are_losses(name: str) -> None:
     assert np.all((2 * np.pi * F / c).imag <= 0) and np.all(rho == Air().rho(F))
 
 
-@pytest.mark.parametrize(
-    "medium", [GivenFluid(1.84, 268.0), Water(20.0), PorousMedium(JohnsonChampouxAllard.example())]
-)
+@pytest.mark.parametrize("medium", [GivenFluid(1.84, 268.0), Water(20.0), PorousMedium(JohnsonChampouxAllard.example())])
 def test_a_porous_law_without_a_frame_is_the_fluid(medium: Medium) -> None:
     """All pores and no resistance: the five-parameter law falls back on the fluid's own density and speed."""
     fluid = medium.reference

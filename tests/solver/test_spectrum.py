@@ -35,9 +35,7 @@ def test_a_table_may_be_asked_at_its_own_ends() -> None:
 @pytest.mark.parametrize("asked", [94.9, 190.1])
 def test_tables_end_where_they_end(asked: float) -> None:
     table = Table(np.array([95.0, 190.0]), np.array([1j, 2.0]))
-    with pytest.raises(
-        RangeError, match=rf"holds 95 .. 190 Hz, but {asked:g} Hz is asked; .*not extrapolated: narrow the"
-    ):
+    with pytest.raises(RangeError, match=rf"holds 95 .. 190 Hz, but {asked:g} Hz is asked; .*not extrapolated: narrow the"):
         table.at(np.array([120.0, asked]))
     assert table.with_(extrapolate=True).at(np.array([asked]))[0] in (1j, 2.0)
 
@@ -60,9 +58,7 @@ def test_one_row_is_a_table_of_one_frequency() -> None:
         ([1.0, 2.0], [1.0, np.nan], "must be finite"),
     ],
 )
-def test_tables_are_checked(
-    cls: type[Table | Lines], frequencies: list[float], values: list[float], words: str
-) -> None:
+def test_tables_are_checked(cls: type[Table | Lines], frequencies: list[float], values: list[float], words: str) -> None:
     with pytest.raises(FieldError, match=words):
         cls(np.array(frequencies), np.array(values, dtype=np.complex128))
 

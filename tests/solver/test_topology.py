@@ -4,8 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from meshes import TestMesh, box, faces_where, shuffled
 
+from meshes import TestMesh, box, faces_where, shuffled
 from murmesh.solver.errors import MeshError
 from murmesh.solver.topology import Topology
 

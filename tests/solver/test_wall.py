@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 import pytest
-from reading import read_csv_reference
 
 from murmesh.solver.case.fields import Declared
 from murmesh.solver.case.porous import DelanyBazley, Fluid, JohnsonChampouxAllard, Miki, PorousLaw
@@ -26,6 +25,7 @@ from murmesh.solver.case.wall import (
     statistical_absorption,
 )
 from murmesh.solver.errors import FieldError
+from reading import read_csv_reference
 
 AIR = Fluid(1.205, 343.0)
 F = np.geomspace(20.0, 4000.0, 40)
@@ -195,9 +195,7 @@ def test_a_hard_wall_has_no_admittance(law: WallLaw) -> None:
 
 @pytest.mark.parametrize("law", [Given(0j), Resonator(0.0, 0.0, 0.0)])
 def test_a_soft_wall_is_a_pressure(law: WallLaw) -> None:
-    with pytest.raises(
-        FieldError, match=r"zero \(at 20 Hz\) is a pressure-release surface; use the boundary kind 'pressure'"
-    ):
+    with pytest.raises(FieldError, match=r"zero \(at 20 Hz\) is a pressure-release surface; use the boundary kind 'pressure'"):
         law.admittance(np.array([20.0]), AIR)
 
 
