@@ -44,7 +44,7 @@ def listed_receivers(result: Result, receivers: Sequence[str] = ()) -> tuple[str
         result.receiver(name)
     listed = tuple(receivers) or tuple(receiver.name for receiver in result.case.receivers)
     if not listed:
-        raise ResultError("the case has no receiver, so there is nothing to show at one; add a receiver and solve again")
+        raise ResultError("the case has no receiver, so nothing can be shown at one; add a receiver and solve again")
     return listed
 
 

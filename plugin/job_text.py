@@ -3,7 +3,8 @@
 The keys are the fields of the declared records, so a new kind needs nothing here. On top of the fields stand:
 
     [surfaces.NAME]  the keys of the kind, where, and velocity, acceleration, pressure, wave (a load of "default")
-    {csv = "f.csv", column = "roof", unit = "mm/s"}      (lines = true: rows are tones) wherever a spectrum, a motion or a wall law may stand
+    {csv = "f.csv", column = "roof", unit = "mm/s"}      wherever a spectrum, a motion or a wall law may stand;
+                                                         lines = true: its rows are tones, with nothing between them
     {kind = "scan", csv | hdf5 = ...}, {kind = "cross_spectrum", hdf5 = ...}
     panels = {csv = "panels.csv", ...}                   in a load case: one surface velocity per column
     [sweep] start, stop, step, extra                     instead of frequencies

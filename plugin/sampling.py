@@ -186,7 +186,7 @@ def _cloud(space: Space, tets: Ints, n: int) -> tuple[Cloud, Ints]:
     return Cloud(points, tet, bary), nodes.reshape(numbers.shape)
 
 
-def values_on(space: Space, cloud: Cloud, unknowns: npt.NDArray[np.generic]) -> npt.NDArray[np.generic]:
+def values_on(space: Space, cloud: Cloud, unknowns: Complex | Floats) -> Complex | Floats:
     """The field of `unknowns` (n,) or (n, r) at the points of a cloud, (k,) or (k, r)."""
     parts = []
     for start in range(0, len(cloud.tet), _CHUNK):

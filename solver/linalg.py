@@ -42,7 +42,9 @@ class Factor(Protocol):
 class Analysis(Protocol):
     """The symbolic analysis of one pattern."""
 
-    name: str
+    @property
+    def name(self) -> str:
+        """What the solver is called in a result's provenance."""
 
     def factor(self, lower: Complex) -> Factor:
         """Factorise the values (nnz,) of the lower triangle, in the order of the analysed pattern."""

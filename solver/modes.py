@@ -39,10 +39,10 @@ def modes(case: Case, count: int, near: float = 0.0, order: int = 0) -> Modes:
     space = discretise(case, order)
     stiffness, mass = _matrices(space, near or float(case.sweep.frequencies[-1]))
     free = np.flatnonzero(~pressure_fixed(space))
-    stiffness, mass = stiffness[free][:, free].tocsc(), mass[free][:, free].tocsc()
+    inner = [matrix[free][:, free].tocsc() for matrix in (stiffness, mass)]
     if not 0 < count < len(free) - 1:
         raise CaseError(f"{count} modes are asked of {len(free)} unknowns; ask for 1 .. {len(free) - 2}")
-    values, vectors = _nearest(stiffness, mass, count, near)
+    values, vectors = _nearest(inner[0], inner[1], count, near)
     shapes = np.zeros((space.dofs.n_dofs, count))
     shapes[free] = vectors
     peaks = np.abs(shapes[: space.topology.n_vertices]).max(axis=0)

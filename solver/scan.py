@@ -31,8 +31,8 @@ def interpolation(points: Floats, places: Floats) -> Interpolation:
     """Weights from scan `points` (m, 3) to `places` (k, 3) [m]."""
     tree = cKDTree(points)
     count = min(NEIGHBOURS, len(points))
-    distance, index = tree.query(places, k=count)
-    spacing = float(np.median(tree.query(points, k=2)[0][:, 1])) or 1e-12
+    distance, index = (np.asarray(found) for found in tree.query(places, k=count))
+    spacing = float(np.median(np.asarray(tree.query(points, k=2)[0])[:, 1])) or 1e-12
     weights = _fit(points[index] - places[:, None, :], distance, spacing)
     rows = np.repeat(np.arange(len(places)), count)
     matrix = sp.csr_matrix((weights.ravel(), (rows, index.ravel())), shape=(len(places), len(points)))

@@ -93,7 +93,7 @@ def mean_edges(case: Case) -> Floats:
     """Mean edge length of every tetrahedron, (t,) [m]."""
     corners = case.mesh.nodes[case.mesh.tets[:, :4]]
     pairs = ((0, 1), (0, 2), (0, 3), (1, 2), (1, 3), (2, 3))
-    return np.mean([np.linalg.norm(corners[:, a] - corners[:, b], axis=1) for a, b in pairs], axis=0)
+    return np.asarray(np.mean([np.linalg.norm(corners[:, a] - corners[:, b], axis=1) for a, b in pairs], axis=0))
 
 
 def elements_kh(case: Case) -> Floats:

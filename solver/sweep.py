@@ -15,6 +15,7 @@ import time
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -185,7 +186,7 @@ class _Drive:
         return cls(forces, given, inside, rule.factors(np.array([f]), len(loads.loads))[0])
 
 
-def _relative(direct: Complex, summed: Complex) -> float:
+def _relative(direct: npt.NDArray[Any], summed: npt.NDArray[Any]) -> float:
     scale = float(np.abs(direct).max(initial=0.0))
     return float(np.abs(direct - summed).max(initial=0.0)) / scale if scale > 0 else 0.0
 

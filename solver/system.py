@@ -14,6 +14,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -111,17 +112,20 @@ class System:
         """A = sum_j phi_j A_j for one row of coefficients."""
         data = np.zeros(self.pattern.nnz, dtype=np.complex128)
         for coefficient, term, slots in zip(phi, self.terms, self.pattern.slots, strict=True):
-            data[slots] += coefficient * term.matrix.data
+            if slots is None:
+                data += coefficient * term.matrix.data
+            else:
+                data[slots] += coefficient * term.matrix.data
         return sp.csr_matrix((data, self.pattern.indices, self.pattern.indptr), shape=(self.size, self.size))
 
 
 @dataclass(frozen=True, eq=False)
 class Pattern:
-    """One sparsity pattern for all frequencies: where each term's entries go, and the free lower triangle for the solver."""
+    """One sparsity pattern for all frequencies: where each term's entries go (None: everywhere), and the free lower triangle."""
 
     indptr: Ints
     indices: Ints
-    slots: tuple[Ints, ...]
+    slots: tuple[Ints | None, ...]
     lower: sp.csc_matrix
     lower_slots: Ints
 
@@ -145,7 +149,12 @@ class Pattern:
         count = int(free.sum())
         pointer = np.searchsorted(number[rows[upper]], np.arange(count + 1))
         lower = sp.csc_matrix((np.ones(len(upper)), number[columns[upper]], pointer), shape=(count, count))
-        return cls(indptr, columns, tuple(np.searchsorted(union, key) for key in keys), lower, upper)
+        return cls(indptr, columns, tuple(_slots(union, key) for key in keys), lower, upper)
+
+
+def _slots(union: Ints, key: Ints) -> Ints | None:
+    """Where a term's entries go; None where it fills the whole pattern, as the volume's do."""
+    return None if len(key) == len(union) else np.searchsorted(union, key)
 
 
 def _keys(matrix: sp.csr_matrix) -> Ints:
@@ -314,8 +323,8 @@ def _shape_vectors(space: Space, side: Side, motion: Motion) -> tuple[sp.csc_mat
     return sp.csc_matrix(load), missed
 
 
-def _column(vector: Floats) -> sp.csc_matrix:
-    return sp.csc_matrix(vector[:, None])
+def _column(vector: npt.NDArray[Any]) -> sp.csc_matrix:
+    return sp.csc_matrix(np.asarray(vector, dtype=np.float64)[:, None])
 
 
 def _pressure_terms(space: Space, load: SurfacePressure) -> list[LoadTerm]:

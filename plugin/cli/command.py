@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 import json
 import sys
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -64,7 +64,7 @@ def show(progress: Progress) -> None:
     sys.stderr.flush()
 
 
-def table(header: tuple[str, ...], rows: list[tuple[str, ...]]) -> str:
+def table(header: tuple[str, ...], rows: Sequence[tuple[str, ...]]) -> str:
     """Columns as wide as they need; the first to the left, the others to the right."""
     lines = [header, *rows]
     widths = [max(len(line[i]) for line in lines) for i in range(len(header))]

@@ -1,4 +1,4 @@
-"""Contributions as CSV: the complex pressure of every panel at every receiver and frequency, and its part of the whole."""
+"""Contributions as CSV: every panel's complex pressure at every receiver and frequency, and its part of the whole."""
 
 from __future__ import annotations
 
@@ -18,9 +18,10 @@ COLUMNS = (
     "if_silent_db",
 )  # fmt: skip
 REMARKS = (
-    "p_re_pa, p_im_pa: complex peak pressure of the panel at the receiver's centre; share_pa2 (per hertz for a density): "
-    "its part of the mean square over the receiver's sphere, negative where it quietens; shares add up to the total",
-    "alone_db: level of the panel alone, dB re 20 uPa, unweighted; if_silent_db: change of level if the panel were silent",
+    "p_re_pa, p_im_pa: complex peak pressure of the panel at the receiver's centre",
+    "share_pa2 (per hertz for a density): the panel's part of the mean square over the receiver's sphere, negative where "
+    "it quietens; the shares add up to the total",
+    "alone_db: level of the panel alone, dB re 20 uPa, unweighted; if_silent_db: change of level if it were silent",
     QUIETENING,
 )
 

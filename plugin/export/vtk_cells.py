@@ -1,14 +1,14 @@
 """VTK cells on a lattice, and datasets made of arrays: what the VTK exports share.
 
-An element of order p becomes one Lagrange cell of order p, which holds its polynomial (and a curved geometry of order 2)
-exactly: a reader that evaluates the cell finds the solver's own values between the points too.
+An element of order p becomes one Lagrange cell of order p, which holds its polynomial (and a curved geometry of order
+2) exactly: a reader that evaluates the cell finds the solver's own values between the points too.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cache
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -17,7 +17,8 @@ from murmesh.plugin.sampling import Cloud, lattice, sample_volume
 from murmesh.solver.space import Space
 
 if TYPE_CHECKING:
-    from vtkmodules.vtkCommonDataModel import vtkDataObject, vtkDataSet
+    from vtkmodules.vtkCommonCore import vtkPoints
+    from vtkmodules.vtkCommonDataModel import vtkCellArray, vtkDataObject, vtkDataSet
 
 Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
@@ -35,7 +36,7 @@ class Cells:
     @property
     def offsets(self) -> Ints:
         """Where each cell begins in the flattened nodes, and their number, (t + 1,)."""
-        return np.arange(len(self.nodes) + 1, dtype=np.int64) * self.nodes.shape[1]
+        return np.asarray(np.arange(len(self.nodes) + 1) * self.nodes.shape[1], dtype=np.int64)
 
 
 def volume_cells(space: Space, flat: bool = False) -> Cells:
@@ -75,48 +76,52 @@ def _vtk_order(n: int, corners: tuple[int, int, int, int]) -> Ints:
 
 def unstructured_grid(cells: Cells, arrays: dict[str, Floats], words: dict[str, str]) -> vtkDataSet:
     """A vtkUnstructuredGrid with point arrays and texts as field data."""
-    from vtkmodules.util.numpy_support import numpy_to_vtk
-    from vtkmodules.vtkCommonCore import vtkPoints
     from vtkmodules.vtkCommonDataModel import vtkUnstructuredGrid
 
     grid = vtkUnstructuredGrid()
-    points = vtkPoints()
-    points.SetData(numpy_to_vtk(cells.cloud.points, deep=True))
-    grid.SetPoints(points)
+    grid.SetPoints(_points(cells.cloud.points))
     grid.SetCells(cells.kind, _cell_array(cells.nodes))
     return _dressed(grid, arrays, words)
 
 
 def surface_mesh(points: Floats, triangles: Ints, arrays: dict[str, Floats], words: dict[str, str]) -> vtkDataSet:
     """A vtkPolyData of triangles with point arrays and texts as field data."""
-    from vtkmodules.util.numpy_support import numpy_to_vtk
-    from vtkmodules.vtkCommonCore import vtkPoints
     from vtkmodules.vtkCommonDataModel import vtkPolyData
 
     mesh = vtkPolyData()
-    held = vtkPoints()
-    held.SetData(numpy_to_vtk(np.ascontiguousarray(points), deep=True))
-    mesh.SetPoints(held)
+    mesh.SetPoints(_points(points))
     mesh.SetPolys(_cell_array(triangles))
     return _dressed(mesh, arrays, words)
 
 
-def _cell_array(nodes: Ints) -> object:
-    from vtkmodules.util.numpy_support import numpy_to_vtkIdTypeArray
+def _vtk_array(values: npt.NDArray[np.generic]) -> Any:
+    """A copy as a VTK array: of ids for integers."""
+    from vtkmodules.util import numpy_support
+
+    make: Any = numpy_support.numpy_to_vtkIdTypeArray if values.dtype.kind == "i" else numpy_support.numpy_to_vtk
+    return make(np.ascontiguousarray(values), deep=True)
+
+
+def _points(points: Floats) -> vtkPoints:
+    from vtkmodules.vtkCommonCore import vtkPoints
+
+    held = vtkPoints()
+    held.SetData(_vtk_array(points))
+    return held
+
+
+def _cell_array(nodes: Ints) -> vtkCellArray:
     from vtkmodules.vtkCommonDataModel import vtkCellArray
 
-    offsets = np.arange(len(nodes) + 1, dtype=np.int64) * nodes.shape[1]
     cells = vtkCellArray()
-    ids = (numpy_to_vtkIdTypeArray(np.ascontiguousarray(a, dtype=np.int64), deep=True) for a in (offsets, nodes.ravel()))
-    cells.SetData(*ids)
+    offsets = np.arange(len(nodes) + 1, dtype=np.int64) * nodes.shape[1]
+    cells.SetData(_vtk_array(offsets), _vtk_array(nodes.ravel()))
     return cells
 
 
 def _dressed(mesh: vtkDataSet, arrays: dict[str, Floats], words: dict[str, str]) -> vtkDataSet:
-    from vtkmodules.util.numpy_support import numpy_to_vtk
-
     for name, values in arrays.items():
-        array = numpy_to_vtk(np.ascontiguousarray(values), deep=True)
+        array = _vtk_array(values)
         array.SetName(name)
         mesh.GetPointData().AddArray(array)
     if "level_db" in arrays:

@@ -1,7 +1,7 @@
 """Temporal VTKHDF (.vtkhdf): all kept lines in one file, the mesh once; the "time" of a step is its frequency in hertz.
 
-Layout: VTK file format documentation, "VTKHDF", unstructured grids with a Steps group. Fields are stored as 32-bit floats
-(relative accuracy 6e-8), coordinates as 64-bit ones.
+Layout: VTK file format documentation, "VTKHDF", unstructured grids with a Steps group. Fields are stored as 32-bit
+floats (relative accuracy 6e-8), coordinates as 64-bit ones.
 """
 
 from __future__ import annotations

@@ -17,8 +17,8 @@ from murmesh.solver.result import Result
 def write(result: Result, path: Path, *, frequency: float | None = None, load_case: str = "", flat: bool = False) -> Path:
     """Write the field kept at `frequency` (None: the loudest at the receivers).
 
-    Cells are Lagrange tetrahedra of the solution's own order, exact between their points; `flat` writes linear ones instead,
-    p^3 per element, for readers without high-order cells. Raises ResultError if no field is kept there.
+    Cells are Lagrange tetrahedra of the solution's own order, exact between their points; `flat` writes linear ones
+    instead, p^3 per element, for readers without high-order cells. Raises ResultError if no field is kept there.
     """
     from vtkmodules.vtkIOXML import vtkXMLUnstructuredGridWriter
 

@@ -23,7 +23,7 @@ from murmesh.plugin.describe import (
     signed,
 )
 from murmesh.plugin.pictures import PICTURES
-from murmesh.plugin.pictures.style import ACCENT, INK, LINES, QUIET, look, page, save
+from murmesh.plugin.pictures.style import ACCENT, INK, LINES, QUIET, WIDTH, look, page, save
 from murmesh.solver.contribution import Ranking, rank
 from murmesh.solver.result import Result
 
@@ -93,8 +93,8 @@ def ranking_notes(ranking: Ranking) -> list[str]:
 
 def _columns_note(ranking: Ranking) -> str:
     return (
-        f"“alone”: level of the panel by itself, {level_unit(ranking.weighting)}; “if silent”: change of the level if the "
-        "panel did not move."
+        f"“alone”: level of the panel by itself, {level_unit(ranking.weighting)}; “if silent”: change of the level if "
+        "the panel did not move."
     )
 
 
@@ -115,7 +115,7 @@ def _bars(axes: Axes, ranking: Ranking) -> None:
 
 
 def _table(axes: Axes, ranking: Ranking) -> None:
-    width = axes.get_position().width * axes.figure.get_figure(root=True).get_size_inches()[0]  # type: ignore[union-attr]
+    width = axes.get_position().width * WIDTH
     place = axes.get_yaxis_transform()
     headings = "share\n[%]", f"alone\n[{level_unit(ranking.weighting).split(' re ')[0]}]", "if silent\n[dB]"
     for j, (heading, inches) in enumerate(zip(headings, _COLUMNS, strict=True)):

@@ -1,7 +1,7 @@
 """Level on planes through the model, sampled from the elements, with the outline of what the plane cuts.
 
-The default planes go through the receivers' mean position, square to the three axes. All planes of one picture share one
-scale of colours and one scale of lengths.
+The default planes go through the receivers' mean position, square to the three axes. All planes of one picture share
+one scale of colours and one scale of lengths.
 """
 
 from __future__ import annotations
@@ -10,11 +10,11 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-import matplotlib
 import numpy as np
 import numpy.typing as npt
 from matplotlib.axes import Axes
 from matplotlib.collections import LineCollection
+from matplotlib.colors import Normalize
 from matplotlib.figure import Figure
 from matplotlib.ticker import MultipleLocator
 
@@ -31,7 +31,7 @@ from murmesh.solver.result import Result
 Floats = npt.NDArray[np.float64]
 Vector = tuple[float, float, float]
 
-_CELLS, _LEAST, _MOST = 250, 60, 1200  # along the longer edge of a cut; at least along the shorter, at most along either
+_CELLS, _LEAST, _MOST = 250, 60, 1200  # along a cut's longer edge; at least along the shorter; at most along either
 _CONTOUR = 5.0  # dB
 _BESIDE = 1e-7  # of the model's longest extent
 _NEAR = 0.05  # metres: a receiver farther from the plane is drawn hollow
@@ -135,7 +135,8 @@ def figure(
         load_case_words(result.load_case_of(load_case)),
     ]
     notes = [
-        f"Sampled from the elements on a grid; contours every {_CONTOUR:.0f} dB. A hollow dot is a receiver more than {1000 * _NEAR:.0f} mm off the plane.",
+        f"Sampled from the elements on a grid; contours every {_CONTOUR:.0f} dB. A hollow dot is a receiver more than "
+        f"{1000 * _NEAR:.0f} mm off the plane.",
         f"Convention: {CONVENTION}. {origin(result)}.",
     ]
     layout = Arrangement.of(cuts)
@@ -229,8 +230,8 @@ def _tick(about: float) -> float:
 
 def _draw(axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, float], scale_of_lengths: float) -> None:
     extent = (cut.low[0], cut.high[0], cut.low[1], cut.high[1])
-    colours = matplotlib.colormaps[LEVEL_MAP]
-    axes.imshow(levels, origin="lower", extent=extent, cmap=colours, vmin=scale[0], vmax=scale[1], interpolation="nearest")
+    norm = Normalize(*scale)
+    axes.imshow(levels, origin="lower", extent=extent, cmap=LEVEL_MAP, norm=norm, interpolation="nearest")
     steps = np.arange(scale[0], scale[1] + 0.1, _CONTOUR)
     axes.contour(levels, steps, extent=extent, colors=INK, linewidths=0.5, alpha=0.45)
     axes.add_collection(LineCollection(list(cut.outline), colors=INK, linewidths=1.2, clip_on=False))

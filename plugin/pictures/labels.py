@@ -1,4 +1,4 @@
-"""Words on pictures that do not run into each other: names in the margin with leaders, names beside dots, the axes' triad."""
+"""Words that do not run into each other: names in the margin with leaders, names beside dots, the axes' triad."""
 
 from __future__ import annotations
 
@@ -70,7 +70,7 @@ def spread(wanted: Floats, gap: float, reach: float) -> Floats:
     if not len(wanted):
         return wanted
     steps = gap * np.arange(len(wanted))
-    # with the steps added, "at least gap apart" means "not rising": a running mean of violators (pool adjacent violators)
+    # with the steps added, "at least gap apart" means "not rising": violators are pooled at their mean
     blocks: list[list[float]] = []
     for value in wanted + steps:
         blocks.append([float(value), 1.0])
@@ -86,8 +86,8 @@ def receiver_dots(axes: Axes, receivers: Sequence[Receiver], places: Floats, nea
     """Dots with names at `places` (k, 2); hollow where not `near`; those on one spot share a label."""
     solid = [True] * len(receivers) if near is None else near
     for (x, y), full in zip(places, solid, strict=True):
-        axes.plot(x, y, "o", markersize=7, markerfacecolor=INK if full else "white", markeredgecolor="white" if full else INK,
-                  markeredgewidth=1.2, zorder=6)  # fmt: skip
+        face, edge = (INK, "white") if full else ("white", INK)
+        axes.plot(x, y, "o", markersize=7, markerfacecolor=face, markeredgecolor=edge, markeredgewidth=1.2, zorder=6)
     taken: list[Bbox] = [_dot_box(axes, place) for place in places]
     for place, text in _merged(axes, [receiver.name for receiver in receivers], places):
         _beside(axes, place, text, taken)
@@ -127,10 +127,16 @@ def _beside(axes: Axes, place: Floats, text: str, taken: list[Bbox]) -> None:
 def _named(axes: Axes, place: Floats, text: str, offset: tuple[int, int]) -> Annotation:
     dx, dy = offset
     return axes.annotate(
-        text, (float(place[0]), float(place[1])), offset, textcoords="offset points", fontsize=9.5, zorder=7, bbox=_HALO,
+        text,
+        (float(place[0]), float(place[1])),
+        offset,
+        textcoords="offset points",
         ha="left" if dx > 0 else "right" if dx < 0 else "center",
         va="bottom" if dy > 0 else "top" if dy < 0 else "center",
-    )  # fmt: skip
+        fontsize=9.5,
+        zorder=7,
+        bbox=_HALO,
+    )
 
 
 def triad(axes: Axes, view: View) -> None:
@@ -142,5 +148,6 @@ def triad(axes: Axes, view: View) -> None:
         if np.linalg.norm(tip) < 0.2 * size:
             continue
         arrow = {"arrowstyle": "-|>", "color": QUIET, "linewidth": 1.2, "shrinkA": 0, "shrinkB": 0}
-        axes.annotate("", corner + tip, corner, arrowprops=arrow, annotation_clip=False)
-        axes.text(*(corner + 1.28 * tip), name, color=QUIET, ha="center", va="center", fontsize=10)
+        (x0, y0), (dx, dy) = corner.tolist(), tip.tolist()
+        axes.annotate("", (x0 + dx, y0 + dy), (x0, y0), arrowprops=arrow, annotation_clip=False)
+        axes.text(x0 + 1.28 * dx, y0 + 1.28 * dy, name, color=QUIET, ha="center", va="center", fontsize=10)

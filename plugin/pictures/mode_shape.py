@@ -48,7 +48,7 @@ def figure(modes: Modes, index: int = 0, skin: Skin | None = None) -> Figure:
     shape = np.asarray(values_on(modes.space, skin.cloud, modes.shapes[:, index]), dtype=np.float64)
     case = modes.space.case
     facts = [
-        "pressure relative to its largest value at a vertex, signed: both colours swing in opposite phase, white is a node",
+        "pressure relative to its largest value at a vertex; the two colours swing in opposite phase, white is a node",
         "hard walls, no losses, no load; no frequency weighting",
     ]
     notes = [VIEWS_NOTE, f"{case.title or 'untitled case'} · elements of order {modes.space.order}."]

@@ -1,6 +1,6 @@
 """Frequency x panel: where in the spectrum each panel raises or lowers the level, under the total spectrum.
 
-Shown is the level of a panel’s share of the mean square, with the share's sign: strong colours stand only where the panel
+Shown is the level of a panel's share of the mean square, with the share's sign: strong colours stand only where the panel
 matters to the level, not in the dips of the spectrum.
 """
 
@@ -86,7 +86,7 @@ def figure(
     rows = len(panels) * _ROW
     sheet = page("Participation of the panels over frequency", facts, notes, rows + _SPECTRUM + 0.95)
     across = sheet.width - _NAMES - _BAR
-    edges = _edges(result.frequencies) if density else np.arange(len(result.frequencies) + 1) - 0.5
+    edges = _edges(result.frequencies) if density else np.asarray(np.arange(len(result.frequencies) + 1) - 0.5, np.float64)
     lower = sheet.axes(_NAMES, 0.65, across, rows)
     upper = sheet.axes(_NAMES, 0.65 + rows + 0.22, across, _SPECTRUM)
     _image(lower, edges, _signed_levels(shares[:, order], scale), panels, scale)
@@ -167,7 +167,7 @@ def _bar(axes: Axes, scale: tuple[float, float], unit: str) -> None:
     marks = np.concatenate([-steps[::-1], [0.0], steps])
     words = [f"{scale[0] + abs(m):.0f}" if m else f"≤ {scale[0]:.0f}" for m in marks]
     bar.set_ticks(marks.tolist(), labels=words)
-    bar.outline.set_edgecolor(QUIET)  # type: ignore[operator]
+    bar.outline.set_edgecolor(QUIET)
     bar.set_label(f"share [{unit}]", fontsize=9.5)
     high = axes.get_position().height * axes.figure.bbox.height / axes.figure.dpi
     axes.text(0.5, 1.05 + 0.1 / high, "raises", transform=axes.transAxes, ha="center", va="bottom", fontsize=9.5)

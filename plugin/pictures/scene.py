@@ -8,7 +8,7 @@ metres, and words are put on the page afterwards, where they can be read.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, cast
 
 import numpy as np
 import numpy.typing as npt
@@ -125,9 +125,11 @@ def render(
         plotter.set_background("white")
         mesh = _polydata(skin)
         plotter.add_mesh(mesh, lighting=False, culling="front", show_scalar_bar=False, **colouring)
-        plotter.disable_anti_aliasing()
+        # typed as if these took the plotter twice
+        sharp, blended = cast(Any, plotter.disable_anti_aliasing), cast(Any, plotter.enable_anti_aliasing)
+        sharp()
         if smooth:
-            plotter.enable_anti_aliasing("ssaa")
+            blended("ssaa")
             shown, left_out = outline.split(view)
             for edges, colour, width in ((shown, INK, 1.6), (left_out, QUIET, 1.0)):
                 if len(edges):

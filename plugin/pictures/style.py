@@ -37,7 +37,7 @@ RANGE_DB = 40.0
 LINES = (("#1f4e79", "-"), ("#c8641e", (0, (6, 2))), ("#2f7d5b", (0, (1.5, 1.5))), ("#7a4b94", (0, (6, 2, 1.5, 2))))
 """Colour and dashes of the first, second, ... curve in one chart."""
 
-_RC: dict[str, Any] = {
+_RC: Any = {
     "font.family": "DejaVu Sans",  # comes with matplotlib
     "font.size": 10.5,
     "text.color": INK,
@@ -157,7 +157,7 @@ def colour_bar(
     way: Literal["vertical", "horizontal"] = "vertical" if upright else "horizontal"
     bar = axes.figure.colorbar(mappable, cax=axes, extend="both", orientation=way)
     bar.set_ticks(np.arange(np.ceil(limits[0] / step) * step, limits[1] + step / 1e3, step).tolist())
-    bar.outline.set_edgecolor(QUIET)  # type: ignore[operator]
+    bar.outline.set_edgecolor(QUIET)
     bar.set_label(label)
 
 

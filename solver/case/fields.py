@@ -72,7 +72,7 @@ class Declared:
 
     def with_(self, **changes: Any) -> Self:
         """A changed copy."""
-        return dataclasses.replace(cast(Any, self), **changes)
+        return cast(Self, dataclasses.replace(cast(Any, self), **changes))
 
     @classmethod
     def member(cls, name: str) -> type[Declared]:
@@ -90,9 +90,9 @@ def kind(name: str) -> Callable[[C], C]:
     """Make the class a frozen dataclass and enter it into its family's registry under `name`."""
 
     def register(cls: C) -> C:
-        made = dataclasses.dataclass(frozen=True, eq=False)(cls)
-        made.kind_name = name  # type: ignore[attr-defined]
-        made.registry[name] = made  # type: ignore[attr-defined]
+        made: Any = dataclasses.dataclass(frozen=True, eq=False)(cls)
+        made.kind_name = name
+        made.registry[name] = made
         return cast(C, made)
 
     return register
@@ -111,7 +111,7 @@ def _hints(cls: type) -> dict[str, Any]:
 
 def _settle_number(owner: object, name: str) -> None:
     """Give plain numbers and arrays the declared type, so that equal cases have equal checksums."""
-    value, target = getattr(owner, name), _hints(type(owner))[name]
+    value, target = getattr(owner, name), _hints(cast(Any, type(owner)))[name]
     options = typing.get_args(target) if typing.get_origin(target) in (Union, types.UnionType) else (target,)
     settled: Any = value
     if isinstance(value, int | float | np.number) and not isinstance(value, bool):
@@ -156,7 +156,7 @@ def _label(cls: type) -> str:
 def to_tree(value: object) -> Any:
     """The tree of a declared object (or of a field's value)."""
     if dataclasses.is_dataclass(value) and not isinstance(value, type):
-        tree: Tree = {"kind": value.kind_name} if getattr(value, "kind_name", "") else {}
+        tree: Tree = {"kind": name} if (name := getattr(value, "kind_name", "")) else {}
         for field in dataclasses.fields(value):
             held = getattr(value, field.name)
             if held is not None:
@@ -198,7 +198,7 @@ def _construct(cls: type[Any], entries: Tree, where: str) -> Any:
     for key in entries:
         if key not in fields:
             raise FieldError(f"{where}: unknown key '{key}'; {nearest(key, fields)}")
-    types_ = _hints(cls)
+    types_ = _hints(cast(Any, cls))
     for name, field in fields.items():
         required = field.default is dataclasses.MISSING and field.default_factory is dataclasses.MISSING
         if required and name not in entries:

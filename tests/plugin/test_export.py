@@ -8,12 +8,13 @@ import subprocess
 import sys
 from dataclasses import replace
 from pathlib import Path
+from typing import Any, cast
 
 import h5py
 import numpy as np
 import numpy.typing as npt
 import pytest
-from vtkmodules.util.numpy_support import numpy_to_vtk, vtk_to_numpy
+from vtkmodules.util import numpy_support
 from vtkmodules.vtkCommonCore import reference, vtkPoints
 from vtkmodules.vtkCommonDataModel import vtkCompositeDataSet, vtkDataSet, vtkPolyData
 from vtkmodules.vtkFiltersCore import vtkProbeFilter
@@ -31,6 +32,8 @@ from murmesh.solver.levels import P0
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
+to_vtk: Any = numpy_support.numpy_to_vtk
+from_vtk: Any = numpy_support.vtk_to_numpy
 F = 120.0
 LAGRANGE, TETRA = 71, 10
 
@@ -44,20 +47,20 @@ def _read_vtu(path: Path) -> vtkDataSet:
     reader = vtkXMLUnstructuredGridReader()
     reader.SetFileName(str(path))
     reader.Update()
-    return reader.GetOutput()
+    return cast(vtkDataSet, reader.GetOutput())
 
 
 def _array(data: vtkDataSet, name: str) -> Floats:
-    return np.array(vtk_to_numpy(data.GetPointData().GetArray(name)))
+    return np.array(from_vtk(data.GetPointData().GetArray(name)))
 
 
 def _points(data: vtkDataSet) -> Floats:
-    return np.array(vtk_to_numpy(data.GetPoints().GetData()))
+    return np.array(from_vtk(data.GetPoints().GetData()))
 
 
 def _probe(data: vtkDataSet, points: Floats) -> npt.NDArray[np.complex128]:
     places = vtkPoints()
-    places.SetData(numpy_to_vtk(points, deep=True))
+    places.SetData(to_vtk(points, deep=True))
     cloud = vtkPolyData()
     cloud.SetPoints(places)
     probe = vtkProbeFilter()
@@ -67,7 +70,7 @@ def _probe(data: vtkDataSet, points: Floats) -> npt.NDArray[np.complex128]:
     probe.SetTolerance(1e-12)
     probe.Update()
     out = probe.GetOutput()
-    assert vtk_to_numpy(out.GetPointData().GetArray("vtkValidPointMask")).all()
+    assert from_vtk(out.GetPointData().GetArray("vtkValidPointMask")).all()
     return _array(out, "p_re") + 1j * _array(out, "p_im")
 
 
@@ -121,7 +124,8 @@ def test_vtu_of_curved_elements_is_exact_inside_each_cell(tmp_path: Path) -> Non
         ids = [cell.GetPointId(k) for k in range(cell.GetNumberOfPoints())]
         for local in ([0.31, 0.22, 0.17], [0.05, 0.5, 0.4]):
             x, weights = [0.0, 0.0, 0.0], [0.0] * len(ids)
-            cell.EvaluateLocation(reference(0), local, x, weights)
+            number_out: Any = reference(0)
+            cell.EvaluateLocation(number_out, local, x, weights)
             places.append(x)
             values.append(np.dot(weights, p[ids]))
     exact = result.pressure_at(np.array(places), F)[:, 0]
@@ -200,9 +204,9 @@ def test_vtm_names_the_panels_and_both_sides_of_a_sheet(tmp_path: Path, result: 
             clear = np.abs(x[:, 0] - 0.5) > 1e-9
             np.testing.assert_allclose(p[clear], result.pressure_at(x[clear], F)[:, 0], atol=1e-10)
     # the front looks towards +x: its values are the limits from there
-    for name, side in (("shelf_front", 1e-7), ("shelf_back", -1e-7)):
+    for name, beyond in (("shelf_front", 1e-7), ("shelf_back", -1e-7)):
         x, p = _points(found[name]), _array(found[name], "p_re") + 1j * _array(found[name], "p_im")
-        beside = result.pressure_at(x + [side, 0, 0], F)[:, 0]
+        beside = result.pressure_at(x + np.array([beyond, 0.0, 0.0]), F)[:, 0]
         np.testing.assert_allclose(p, beside, atol=1e-4 * np.abs(p).max())
 
 

@@ -34,9 +34,8 @@ def _case(**changes: Any) -> Case:
         field_frequencies=np.array([60.0]),
     )  # fmt: skip
     measured = Measured(np.array([50.0]), np.array([70.0]))
-    full = case.with_(
-        title="Würfel & more", catalogue=(Treatment.example(),), receivers=(*case.receivers, Receiver("far/away", (0, 0, 1), 0.05, measured))
-    )  # fmt: skip
+    far = Receiver("far/away", (0, 0, 1), 0.05, measured)
+    full = case.with_(title="Würfel & more", catalogue=(Treatment.example(),), receivers=(*case.receivers, far))
     return full.with_(**changes)
 
 
@@ -144,7 +143,7 @@ def test_truncated_missing_and_foreign_files(tmp_path: Path) -> None:
         read_case(path)
     write_case(_case(), path)
     path.write_bytes(path.read_bytes()[:-4000])
-    with pytest.raises(FormatError, match="truncated or foreign|cannot be read"):
+    with pytest.raises(FormatError, match=r"truncated or foreign|cannot be read"):
         read_case(path)
     path.write_text("not HDF5")
     with pytest.raises(FormatError, match="truncated or foreign"):
@@ -152,7 +151,7 @@ def test_truncated_missing_and_foreign_files(tmp_path: Path) -> None:
 
 
 def test_writing_into_nowhere(tmp_path: Path) -> None:
-    with pytest.raises(FormatError, match="the folder .* does not exist"):
+    with pytest.raises(FormatError, match=r"the folder .* does not exist"):
         write_case(_case(), tmp_path / "none" / "case.h5")
 
 

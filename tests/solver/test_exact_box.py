@@ -6,6 +6,7 @@ Sources of the values: headers of A02, A03 and A05 in tests/references (Morse & 
 from __future__ import annotations
 
 from functools import cache
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -63,7 +64,7 @@ def _panel_mesh(panels: list[dict[str, Any]]) -> TestMesh:
 
 
 def _filled(planes: list[float], largest: float) -> np.ndarray:
-    parts = [np.linspace(a, b, int(np.ceil((b - a) / largest)) + 1) for a, b in zip(planes, planes[1:], strict=False)]
+    parts = [np.linspace(a, b, int(np.ceil((b - a) / largest)) + 1) for a, b in pairwise(planes)]
     return np.unique(np.round(np.concatenate(parts), 12))
 
 
