@@ -8,7 +8,7 @@ metres, and words are put on the page afterwards, where they can be read.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any, cast
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -120,16 +120,15 @@ def render(
     require_rendering()
     import pyvista
 
-    plotter = pyvista.Plotter(off_screen=True, window_size=list(pixels), lighting="none")
+    # Any: some of its methods are typed as if they took the plotter twice
+    plotter: Any = pyvista.Plotter(off_screen=True, window_size=list(pixels), lighting="none")
     try:
         plotter.set_background("white")
         mesh = _polydata(skin)
         plotter.add_mesh(mesh, lighting=False, culling="front", show_scalar_bar=False, **colouring)
-        # typed as if these took the plotter twice
-        sharp, blended = cast(Any, plotter.disable_anti_aliasing), cast(Any, plotter.enable_anti_aliasing)
-        sharp()
+        plotter.disable_anti_aliasing()
         if smooth:
-            blended("ssaa")
+            plotter.enable_anti_aliasing("ssaa")
             shown, left_out = outline.split(view)
             for edges, colour, width in ((shown, INK, 1.6), (left_out, QUIET, 1.0)):
                 if len(edges):
