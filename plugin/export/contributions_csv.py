@@ -28,7 +28,7 @@ REMARKS = (
 
 @EXPORTS.member("contributions_csv", ".csv", "complex contribution and share of every panel per receiver and frequency")
 def write(result: Result, path: Path, *, receivers: tuple[str, ...] = (), load_case: str = "") -> Path:
-    """Write one row per load case, receiver, frequency and panel."""
+    """Write one row per load case, receiver, frequency with sound and panel."""
     return write_table(result, path, REMARKS, COLUMNS, _rows(result, receivers, load_case))
 
 
@@ -36,9 +36,10 @@ def _rows(result: Result, receivers: tuple[str, ...], load_case: str) -> Iterato
     for case, receiver in chosen(result, receivers, load_case):
         part = participation(result, receiver, case)
         centre = result.load_case(case).contributions[:, result.samples(receiver)[0]]
-        alone, silent, share = np.asarray(level(part.own)), part.removal_db, 100 * part.signed
-        for i, f in enumerate(part.frequencies):
+        alone, share = level(part.own), 100 * part.signed
+        for i in np.flatnonzero(part.total > 0):  # of tones only those that sound
+            f, silent = part.frequencies[i], level(np.maximum(part.without[i], 0.0)) - level(part.total[i])
             for j, panel in enumerate(part.loads):
                 pressure = quantity(centre[i, j].real), quantity(centre[i, j].imag), quantity(part.shares[i, j])
-                levels = f"{share[i, j]:.2f}", decibels(alone[i, j]), decibels(silent[i, j])
+                levels = f"{share[i, j]:.2f}", decibels(alone[i, j]), decibels(silent[j])
                 yield (case, receiver, f"{f:.9g}", panel, *pressure, *levels)

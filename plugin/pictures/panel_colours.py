@@ -19,7 +19,7 @@ from murmesh.solver.contribution import Ranking, rank
 from murmesh.solver.result import Result
 
 _HEIGHT, _BELOW, _NAMES = 5.3, 0.75, 1.52  # inches: views and bar, the bar, room for names beside a view
-_STILL = "#dfe3e5"
+_STILL = "#b4bcc1"
 
 
 @PICTURES.member("panel_colours", ".png", "panels coloured by their share in a band, with their names", renders=True)

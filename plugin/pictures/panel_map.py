@@ -31,7 +31,8 @@ from murmesh.plugin.describe import (
 from murmesh.plugin.fields import listed_receivers
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.style import LINES, QUIET, SIGNED_MAP, frequency_axis, level_limits, look, page, save
-from murmesh.solver.contribution import QUIETENING, Participation, participation
+from murmesh.solver.contribution import QUIETENING, participation
+from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import level
 from murmesh.solver.levels import weighting as weighting_db
 from murmesh.solver.result import Result
@@ -64,12 +65,9 @@ def figure(
 ) -> Figure:
     """The figure, for further work."""
     listed = listed_receivers(result, receivers)
-    parts = [participation(result, name, load_case) for name in listed]
-    shares, total = _weighted(parts, weighting)
-    order = np.argsort(-shares.sum(axis=0))
-    panels = [parts[0].loads[i] for i in order]
-    scale = level_limits(np.asarray(level(total)), limits)
     density = is_density(result, load_case)
+    lines, shares, total, panels = _shares(result, listed, load_case, weighting)
+    scale = level_limits(np.asarray(level(total)), limits)
     unit = level_unit(weighting, density)
     span = float(result.frequencies[0]), float(result.frequencies[-1])
     where = f"mean over {names(listed)}" if len(listed) > 1 else listed[0]
@@ -86,22 +84,33 @@ def figure(
     rows = len(panels) * _ROW
     sheet = page("Participation of the panels over frequency", facts, notes, rows + _SPECTRUM + 0.95)
     across = sheet.width - _NAMES - _BAR
-    edges = _edges(result.frequencies) if density else np.asarray(np.arange(len(result.frequencies) + 1) - 0.5, np.float64)
+    edges = _edges(lines) if density else np.asarray(np.arange(len(lines) + 1) - 0.5, np.float64)
     lower = sheet.axes(_NAMES, 0.65, across, rows)
     upper = sheet.axes(_NAMES, 0.65 + rows + 0.22, across, _SPECTRUM)
-    _image(lower, edges, _signed_levels(shares[:, order], scale), panels, scale)
-    _spectrum(upper, result.frequencies, np.asarray(level(total)), density, scale, unit)
-    _frequencies(lower, upper, result.frequencies, edges, density)
+    _image(lower, edges, _signed_levels(shares, scale), panels, scale)
+    _spectrum(upper, lines, np.asarray(level(total)), density, scale, unit)
+    _frequencies(lower, upper, lines, edges, density)
     high = max(rows, min(2.8, rows + _SPECTRUM))  # few panels: the bar reaches up beside the spectrum
-    _bar(sheet.axes(_NAMES + across + 0.25, 0.65, 0.2, high), scale, unit)
+    _bar(sheet.axes(_NAMES + across + 0.3, 0.65, 0.2, high), scale, unit)
     return sheet.figure
 
 
-def _weighted(parts: list[Participation], weighting: str) -> tuple[Floats, Floats]:
-    """Shares (nf, panels) and total (nf,), averaged over receivers, weighted."""
-    gain = 10 ** (weighting_db(weighting, parts[0].frequencies) / 10)
+def _shares(
+    result: Result, receivers: Sequence[str], load_case: str, weighting: str
+) -> tuple[Floats, Floats, Floats, list[str]]:
+    """Lines (nf,), weighted shares (nf, panels) and total (nf,) averaged over receivers, panels by falling share.
+
+    Of tones only those that sound at all.
+    """
+    parts = [participation(result, name, load_case) for name in receivers]
+    gain = 10 ** (weighting_db(weighting, result.frequencies) / 10)
     shares = np.mean([part.shares for part in parts], axis=0) * gain[:, None]
-    return shares, np.mean([part.total for part in parts], axis=0) * gain
+    total = np.mean([part.total for part in parts], axis=0) * gain
+    kept = np.full(len(total), True) if is_density(result, load_case) else total > 0
+    if not kept.any():
+        raise ResultError(f"no tone of load case '{load_case or parts[0].load_case}' sounds on a line of the sweep; add it")
+    order = np.argsort(-shares.sum(axis=0))
+    return result.frequencies[kept], shares[kept][:, order], total[kept], [parts[0].loads[i] for i in order]
 
 
 def _signed_levels(shares: Floats, scale: tuple[float, float]) -> Floats:
@@ -170,5 +179,5 @@ def _bar(axes: Axes, scale: tuple[float, float], unit: str) -> None:
     bar.outline.set_edgecolor(QUIET)
     bar.set_label(f"share [{unit}]", fontsize=9.5)
     high = axes.get_position().height * axes.figure.bbox.height / axes.figure.dpi
-    axes.text(0.5, 1.05 + 0.1 / high, "raises", transform=axes.transAxes, ha="center", va="bottom", fontsize=9.5)
-    axes.text(0.5, -0.05 - 0.1 / high, "lowers", transform=axes.transAxes, ha="center", va="top", fontsize=9.5)
+    axes.text(0.0, 1.05 + 0.1 / high, "raises", transform=axes.transAxes, ha="left", va="bottom", fontsize=9.5)
+    axes.text(0.0, -0.05 - 0.1 / high, "lowers", transform=axes.transAxes, ha="left", va="top", fontsize=9.5)

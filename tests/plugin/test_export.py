@@ -275,6 +275,16 @@ def test_contribution_table_adds_up(tmp_path: Path, result: Result) -> None:
     np.testing.assert_allclose(pressure, result.load_case("run").contributions[:, at], rtol=1e-6, atol=1e-12)
 
 
+def test_silent_lines_have_no_contributions(tmp_path: Path, result: Result) -> None:
+    run, idle = result.load_cases
+    loud = np.arange(len(result.frequencies)) == 3
+    quiet = replace(result, load_cases=(run, replace(idle, contributions=idle.contributions * loud[:, None, None])))
+    _, rows = _table(EXPORTS["contributions_csv"].make(quiet, tmp_path / "t.csv", load_case="idle"))
+    assert {row["frequency_hz"] for row in rows} == {f"{result.frequencies[3]:g}"} and len(rows) == 2 * 3
+    _, rows = _table(EXPORTS["spectrum_csv"].make(quiet, tmp_path / "t.csv", load_case="idle"))
+    assert [row["level_db"] == "" for row in rows] == [not sound for sound in loud] * 2
+
+
 def test_band_table_sums_to_the_overall_level(tmp_path: Path, result: Result) -> None:
     _, rows = _table(EXPORTS["bands_csv"].make(result, tmp_path / "t.csv", load_case="idle", receivers=("left_ear",)))
     for weight in ("A", "Z"):

@@ -245,6 +245,23 @@ def test_the_map_carries_the_sign_and_level_of_each_share(result: Result) -> Non
     assert np.any(drawn < 0) and np.any(drawn > 0)
 
 
+def test_of_tones_only_those_that_sound_are_drawn(result: Result) -> None:
+    quiet = _with_tones(result, [2, 5])
+    figure = _figure(PICTURES["panel_map"], quiet, ["right_ear"], "idle", "Z")
+    assert [label.get_text() for label in figure.axes[0].get_xticklabels()] == ["100", "160"]
+    stems = _figure(PICTURES["receiver_spectrum"], quiet, ["right_ear"], "idle").axes[0].collections[0]
+    assert len(stems.get_segments()) == 2  # type: ignore[attr-defined]
+    with pytest.raises(ResultError, match="no tone of load case 'idle' sounds on a line of the sweep"):
+        _figure(PICTURES["panel_map"], _with_tones(result, []), ["right_ear"], "idle", "Z")
+
+
+def _with_tones(result: Result, lines: list[int]) -> Result:
+    """The same result with sound of the load case "idle" on some lines only."""
+    run, idle = result.load_cases
+    kept = np.isin(np.arange(len(result.frequencies)), lines)[:, None, None]
+    return replace(result, load_cases=(run, replace(idle, contributions=idle.contributions * kept)))
+
+
 def test_a_case_without_receivers_is_said(tmp_path: Path, result: Result) -> None:
     deaf = replace(result, case=replace(result.case, receivers=()))
     for name in ("panel_map", "contribution_bars", "receiver_spectrum"):
