@@ -35,6 +35,12 @@ class Product:
         """Names of the keyword options it takes."""
         return tuple(inspect.signature(self.make).parameters)[2:]
 
+    @property
+    def file_name(self) -> str:
+        """Name of its file in a folder: the member's name, without the suffix it may end with."""
+        stem = self.name.removesuffix(self.suffix.replace(".", "_"))
+        return f"{'field' if stem == self.suffix.lstrip('.') else stem}{self.suffix}"
+
     def taking(self, **given: object) -> dict[str, object]:
         """Those of the given options that this member takes and that are not None."""
         return {key: value for key, value in given.items() if key in self.options and value is not None}

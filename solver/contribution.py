@@ -48,8 +48,10 @@ class Participation:
 
     @property
     def removal_db(self) -> Floats:
-        """Change of level [dB] if the panel were silent, (nf, loads); positive where the panel was quietening."""
-        return np.asarray(level(np.maximum(self.without, 0.0)) - level(self.total)[:, None])
+        """Change of level [dB] if the panel were silent, (nf, loads); positive where it was quietening, 0 in silence."""
+        heard = self.total[:, None] > 0
+        ratio = np.divide(np.maximum(self.without, 0.0), self.total[:, None], out=np.ones_like(self.without), where=heard)
+        return np.asarray(level(ratio, 1.0))
 
     @property
     def closure(self) -> float:

@@ -14,12 +14,13 @@ import shutil
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
+from datetime import UTC, datetime
+from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
-import scipy
 import scipy.sparse as sp
 
 from murmesh.solver.case.model import Case
@@ -226,7 +227,14 @@ def _collect(case: Case, engine: _Engine, samples: Samples, lines: list[Line]) -
         "order": str(engine.system.space.order),
         "unknowns": str(engine.system.size),
         "linear_solver": engine.analysis.name,
-        "numpy": np.__version__,
-        "scipy": scipy.__version__,
+        "solved": datetime.now(UTC).isoformat(timespec="seconds"),
+        **{name: _version(name) for name in ("murmesh", "numpy", "scipy", "h5py", "rslab")},
     }
     return Result.of(case, engine.system.space.order, samples, engine.labels, lines, provenance)
+
+
+def _version(package: str) -> str:
+    try:
+        return version(package)
+    except PackageNotFoundError:
+        return "not installed"

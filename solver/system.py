@@ -121,7 +121,7 @@ class System:
 
 @dataclass(frozen=True, eq=False)
 class Pattern:
-    """One sparsity pattern for all frequencies: where each term's entries go (None: everywhere), and the free lower triangle."""
+    """One sparsity pattern for all frequencies, where each term's entries go (None: everywhere), the free lower triangle."""
 
     indptr: Ints
     indices: Ints

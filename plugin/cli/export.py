@@ -34,8 +34,8 @@ def export(result: Result, folder: Path, formats: list[Product], **options: obje
     """Write every format into `folder`, answering with each path."""
     folder.mkdir(parents=True, exist_ok=True)
     for product in formats:
-        path = folder / f"{product.name}{product.suffix}"
-        answer(str(product.make(result, path, **product.taking(**options))))
+        path = product.make(result, folder / product.file_name, **product.taking(**options))
+        answer(str(path))
 
 
 register(

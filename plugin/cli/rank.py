@@ -5,6 +5,7 @@ from __future__ import annotations
 import argparse
 
 from murmesh.plugin.cli.command import DONE, Command, answer, answer_json, band_argument, register, table
+from murmesh.plugin.export.ranking_json import ranking_tree
 from murmesh.plugin.summary import shown
 from murmesh.solver.contribution import Ranking, rank
 from murmesh.solver.result import read_result
@@ -24,7 +25,7 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 def run(args: argparse.Namespace) -> int:
     ranking = rank(read_result(args.result), args.receiver, args.band, args.weighting, args.load_case)
     if args.json:
-        answer_json(tree(ranking))
+        answer_json(ranking_tree(ranking))
     else:
         answer(text(ranking))
     return DONE
@@ -41,23 +42,6 @@ def text(ranking: Ranking) -> str:
     body = table(("panel", "share of mean square", f"alone [{unit}]", "if silent [dB]"), rows)
     total = sum(row.share for row in ranking.rows)
     return f"{head}\n{body}\nShares add up to {100 * total:.6f} % (closure {ranking.closure:.0e}).\n{ranking.words}"
-
-
-def tree(ranking: Ranking) -> dict[str, object]:
-    """The ranking as JSON."""
-    return {
-        "meaning": ranking.words,
-        "receivers": list(ranking.receivers),
-        "load_case": ranking.load_case,
-        "band_hz": list(ranking.band),
-        "weighting": ranking.weighting,
-        "level_db": round(ranking.total_db, 3),
-        "closure": ranking.closure,
-        "panels": [
-            {"panel": r.panel, "share": r.share, "alone_db": round(r.own_db, 3), "if_silent_db": round(r.removal_db, 3)}
-            for r in ranking.rows
-        ],
-    }
 
 
 register(

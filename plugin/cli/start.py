@@ -18,7 +18,7 @@ from murmesh.solver.errors import CaseError
 def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("model", help="gmsh script or .geo, STEP, BREP, .msh, or a mesh with named sets")
     parser.add_argument("job", nargs="?", help="job file to write (default: MODEL.toml)")
-    parser.add_argument("--unit", choices=tuple(UNITS), help="unit of the model's coordinates (default: metres, or the file's own)")
+    parser.add_argument("--unit", choices=tuple(UNITS), help="unit of the coordinates (default: metres, or the file's own)")
 
 
 def run(args: argparse.Namespace) -> int:
@@ -39,7 +39,7 @@ def job_text(mesh: TaggedMesh, file: str, unit: str | None) -> str:
     """A job that solves as it stands: air, hard walls that vibrate nowhere, a source, and a receiver to move."""
     parts = [HEADER, f'title = "{Path(file).stem}"', ""]
     parts += ["[mesh]", f'file = "{file}"', *([f'unit = "{unit}"'] if unit else []), ""]
-    for name in mesh.tet_groups or {"all": None}:
+    for name in list(mesh.tet_groups) or ["all"]:
         parts += [f'[regions."{name}"]', 'medium = { kind = "air", temperature = 20.0 }']
         parts += ['damping = { kind = "loss_factor", value = 0.02 }   # a guess: state what was measured', ""]
     for name in mesh.triangle_groups:
@@ -47,9 +47,19 @@ def job_text(mesh: TaggedMesh, file: str, unit: str | None) -> str:
     if not mesh.triangle_groups:
         parts += ['default_boundary = "rigid"', ""]
     source, ear = _inner_points(mesh)
-    parts += ["[loads]", "loads = [", f'  {{ kind = "monopole", label = "source", position = {source}, volume_velocity = 1e-4 }},']
-    parts += ["]", "", "[[receivers]]", 'name = "ear"', f"position = {ear}", "radius = 0.0", ""]
-    parts += ["[sweep]", "start = 50.0", "stop = 300.0", "step = 5.0", "field_frequencies = [100.0, 200.0]   # lines kept for maps", ""]
+    monopole = f'kind = "monopole", label = "source", position = {source}, volume_velocity = 1e-4'
+    parts += [
+        "[loads]",
+        f"loads = [{{ {monopole} }}]",
+        "",
+        "[[receivers]]",
+        'name = "ear"',
+        f"position = {ear}",
+        "radius = 0.0",
+        "",
+    ]
+    parts += ["[sweep]", "start = 50.0", "stop = 300.0", "step = 5.0"]
+    parts += ["field_frequencies = [100.0, 200.0]   # lines kept for maps", ""]
     return "\n".join(parts)
 
 
