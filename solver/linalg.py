@@ -53,9 +53,10 @@ class Analysis(Protocol):
 def analyse(lower: sp.csc_matrix, solver: str = "default", threads: int | None = None) -> Analysis:
     """Analyse the pattern of the lower triangle (n, n, CSC, sorted indices) of a symmetric matrix.
 
-    `solver` is "default", "rslab" or "superlu".
+    `solver` is "default", "rslab" or "superlu"; `threads` defaults to the environment variable MURMESH_THREADS, or to the
+    cores, at most four.
     """
-    threads = threads or min(os.cpu_count() or 1, 4)
+    threads = threads or int(os.environ.get("MURMESH_THREADS", "0")) or min(os.cpu_count() or 1, 4)
     if solver == "superlu":
         return SuperLU.analyse(lower)
     if solver not in ("default", "rslab"):

@@ -6,6 +6,7 @@ import os
 
 # before numpy, matplotlib and VTK are imported by any test
 os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
+os.environ.setdefault("MURMESH_THREADS", "1")
 os.environ["MPLBACKEND"] = "Agg"
 
 from collections.abc import Iterator

@@ -9,7 +9,7 @@ from pathlib import Path
 import pytest
 
 ROOT = Path(__file__).parent.parent
-CASE = ("fields", "expression", "spectrum", "porous", "wall", "medium", "motion", "load", "boundary", "catalogue", "model", "hdf5")
+CASE = tuple("fields expression spectrum porous wall medium motion load boundary catalogue model hdf5".split())
 # from the ground up: a module imports only what stands in a row above its own, or beside it
 ROWS: tuple[tuple[str, ...], ...] = (
     ("solver.errors",),

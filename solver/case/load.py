@@ -32,12 +32,10 @@ class Load(Declared):
         return ""
 
 
-@kind("surface_velocity")
-class SurfaceVelocity(Load):
-    """A surface of a kind that moves (vibrating, vibrating_treated, sheet) moves as measured or computed."""
+class SurfaceLoad(Load):
+    """What loads on a surface share: they are called after it."""
 
-    surface: str = quantity(help="name of the surface")
-    motion: Motion = quantity(help="how it moves")
+    surface: str
 
     @property
     def name(self) -> str:
@@ -46,6 +44,14 @@ class SurfaceVelocity(Load):
     @property
     def acts_on(self) -> str:
         return self.surface
+
+
+@kind("surface_velocity")
+class SurfaceVelocity(SurfaceLoad):
+    """A surface of a kind that moves (vibrating, vibrating_treated, sheet) moves as measured or computed."""
+
+    surface: str = quantity(help="name of the surface")
+    motion: Motion = quantity(help="how it moves")
 
     @classmethod
     def example(cls) -> SurfaceVelocity:
@@ -53,19 +59,11 @@ class SurfaceVelocity(Load):
 
 
 @kind("surface_pressure")
-class SurfacePressure(Load):
+class SurfacePressure(SurfaceLoad):
     """The pressure on a surface of kind `pressure` (uniform over the surface)."""
 
     surface: str = quantity(help="name of the surface")
     pressure: complex | Spectrum = quantity(help="complex peak pressure", unit="Pa")
-
-    @property
-    def name(self) -> str:
-        return self.surface
-
-    @property
-    def acts_on(self) -> str:
-        return self.surface
 
     @classmethod
     def example(cls) -> SurfacePressure:
@@ -73,19 +71,11 @@ class SurfacePressure(Load):
 
 
 @kind("incoming_wave")
-class IncomingWave(Load):
+class IncomingWave(SurfaceLoad):
     """A plane wave that enters through a surface of kind `port`; its pressure is that at the port."""
 
     surface: str = quantity(help="name of the port surface")
     pressure: complex | Spectrum = quantity(help="complex peak pressure of the incoming wave at the port", unit="Pa")
-
-    @property
-    def name(self) -> str:
-        return self.surface
-
-    @property
-    def acts_on(self) -> str:
-        return self.surface
 
     @classmethod
     def example(cls) -> IncomingWave:

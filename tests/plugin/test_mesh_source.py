@@ -205,7 +205,7 @@ def test_a_mesh_too_long_is_refused_unless_its_unit_is_stated(gmsh_model: None, 
 
 
 def test_unknown_unit() -> None:
-    with pytest.raises(CaseError, match="unit 'metre' is not known; .*Known: "):
+    with pytest.raises(CaseError, match=r"unit 'metre' is not known; .*Known: "):
         read_mesh(__file__, unit="metre")
 
 
