@@ -51,6 +51,7 @@ def gmsh_session() -> Iterator[Any]:
 def _inside(gmsh: Any) -> Iterator[None]:
     before, current = gmsh.model.list(), gmsh.model.getCurrent()
     kept = {name: gmsh.option.getNumber(name) for name in _KEPT_OPTIONS}
+    target = gmsh.option.getString("Geometry.OCCTargetUnit")
     gmsh.option.setNumber("General.Terminal", 0)
     gmsh.model.add("murmesh")
     try:
@@ -63,7 +64,7 @@ def _inside(gmsh: Any) -> Iterator[None]:
             gmsh.model.setCurrent(current)
         for option, value in kept.items():
             gmsh.option.setNumber(option, value)
-        gmsh.option.setString("Geometry.OCCTargetUnit", "")
+        gmsh.option.setString("Geometry.OCCTargetUnit", target)
 
 
 def open_model(path: Path, size: float | None, unit: str | None, units: Mapping[str, float]) -> float:
@@ -72,9 +73,10 @@ def open_model(path: Path, size: float | None, unit: str | None, units: Mapping[
     suffix = path.suffix.lower()
     factor = units[unit or "m"]
     if suffix in (".step", ".stp"):
-        gmsh.option.setString("Geometry.OCCTargetUnit", "M")
-        # the file's own unit is brought to metres by gmsh; a stated unit replaces it
-        factor = 1.0 if unit is None else units[unit] / step_unit(path)
+        # gmsh brings the file's own unit to millimetres; a stated unit replaces it. Any other target would stay in force
+        # for every later export of the process (observed with gmsh 4.15)
+        gmsh.option.setString("Geometry.OCCTargetUnit", "MM")
+        factor = 1e-3 if unit is None else 1e-3 * units[unit] / step_unit(path)
     if size is not None:
         gmsh.option.setNumber("Mesh.MeshSizeMax", size / factor)
     if suffix == ".py":

@@ -193,7 +193,7 @@ def _by_gmsh(path: Path, size: float | None, unit: str | None, order: int) -> Ta
         factor = open_model(path, size, unit, UNITS)
         if unit is None and cad:
             box = np.reshape(gmsh.model.getBoundingBox(-1, -1), (2, 3))
-            _require_plausible(float(np.ptp(box, axis=0).max()), path, cad=True)
+            _require_plausible(factor * float(np.ptp(box, axis=0).max()), path, cad=True)
         generate(path, None if size is None else size / factor, order)
         return from_gmsh(str(path)).scaled(factor)
 
@@ -218,12 +218,13 @@ def _by_meshio(path: Path) -> TaggedMesh:
     except (Exception, SystemExit) as error:
         words = " ".join((str(error) + " " + said.getvalue()).split())[-300:]
         raise FormatError(f"'{path}' cannot be read as a mesh: {words}; export it as .msh with named groups") from None
+    if not len(mesh.points) or not mesh.cells:
+        raise FormatError(f"'{path}' holds no cells; export the mesh anew, for instance as .msh with named groups")
     return from_meshio(mesh, str(path), _attribute_in(path))
 
 
 def from_meshio(mesh: Any, source: str = "a mesh", job: str = "") -> TaggedMesh:
     """The tagged mesh of a meshio mesh; groups are its named sets, physical names and cell tags."""
-    groups: list[set[str]] = []
     parts: dict[int, list[Block]] = {2: [], 3: []}
     other: dict[str, int] = {}
     low: dict[str, int] = {}
@@ -236,7 +237,6 @@ def from_meshio(mesh: Any, source: str = "a mesh", job: str = "") -> TaggedMesh:
             low.update({name: int(block.type.startswith("line")) for name in labels})
         else:
             other[block.type] = other.get(block.type, 0) + len(block.data)
-        groups.append(set(labels))
     empty = [(np.empty((0, 3), np.int64), (n,)) for n, (_, dim) in _physical(mesh).items() if dim == 2]
     nodes = np.zeros((len(mesh.points), 3))
     nodes[:, : mesh.points.shape[1]] = mesh.points

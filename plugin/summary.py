@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.levels import Band, band_energy, level, third_octaves
+from murmesh.solver.levels import Band, band_energy, level, overall_energy, third_octaves
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
@@ -48,10 +48,9 @@ def levels(result: Result, receiver: str, load_case: str = "", weighting: str = 
     # a tone belongs to the band it lies in, so the outermost bands need not be covered whole
     bands = third_octaves(float(f[0]), float(f[-1]))
     energy, coverage = band_energy(f, square, bands, held.spectrum, weighting)
-    whole = Band("overall", float(np.sqrt(f[0] * f[-1])), float(f[0]), float(f[-1]) * (1 + 1e-9))
-    total, _ = band_energy(f, square, [whole], held.spectrum, weighting)
+    total = overall_energy(f, square, held.spectrum, weighting)
     found = np.asarray(level(energy))
-    return Levels(receiver, held.name, held.spectrum, weighting, float(level(total[0])), tuple(bands), found, coverage)
+    return Levels(receiver, held.name, held.spectrum, weighting, float(level(total)), tuple(bands), found, coverage)
 
 
 def all_levels(result: Result, weighting: str = "A", load_case: str = "") -> list[Levels]:

@@ -11,7 +11,8 @@
     └── MissingLibraryError  a system library is not installed
 
 Every message says what was given, what was expected and how to cure it.
-A `ValidityWarning` marks a number that is still computed but lies outside what its source covers.
+A `ValidityWarning` marks a number that is still computed but lies outside what its source covers, a `FallbackWarning` one
+that was computed in a slower way than usual.
 """
 
 from __future__ import annotations
@@ -58,6 +59,10 @@ class MissingLibraryError(MurmeshError):
 
 class ValidityWarning(UserWarning):
     """A number is computed outside the range its published source covers."""
+
+
+class FallbackWarning(UserWarning):
+    """A number is computed in another way than usual, because the usual one failed."""
 
 
 def nearest(given: str, known: Iterable[str]) -> str:

@@ -19,7 +19,7 @@ import numpy.typing as npt
 import scipy.sparse as sp
 import scipy.sparse.linalg as spla
 
-from murmesh.solver.errors import SolveError
+from murmesh.solver.errors import FallbackWarning, SolveError
 
 Complex = npt.NDArray[np.complex128]
 CHUNK = 32
@@ -87,7 +87,7 @@ class Rslab:
         try:
             return RslabFactor(self.symbolic.factor(lower))
         except RuntimeError as error:
-            warnings.warn(f"LDL^T failed ({error}); this line is solved with SuperLU", RuntimeWarning, stacklevel=2)
+            warnings.warn(f"LDL^T failed ({error}); this line is solved with SuperLU", FallbackWarning, stacklevel=2)
             return SuperLU.analyse(self.pattern).factor(lower)
 
 

@@ -13,7 +13,7 @@ import sys
 import warnings
 
 from murmesh.plugin.cli.command import COMMANDS, Command
-from murmesh.solver.errors import MurmeshError, ValidityWarning
+from murmesh.solver.errors import FallbackWarning, MurmeshError, ValidityWarning
 
 
 def main(arguments: list[str] | None = None) -> int:
@@ -22,7 +22,8 @@ def main(arguments: list[str] | None = None) -> int:
     command: Command = args.command
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
-        warnings.simplefilter("always", ValidityWarning)
+        for shown in (ValidityWarning, FallbackWarning):
+            warnings.simplefilter("always", shown)
         warnings.showwarning = _show_warning
         try:
             return command.run(args)

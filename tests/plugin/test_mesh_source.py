@@ -163,6 +163,17 @@ def test_step_in_millimetres(gmsh_model: None, tmp_path: Path, unit: str | None)
     assert 20 < len(mesh.tets) < 5000
 
 
+def test_reading_step_leaves_later_exports_alone(gmsh_model: None, tmp_path: Path) -> None:
+    """gmsh keeps a target unit for every later export of the process: millimetres, its default, must stay."""
+    import gmsh
+
+    _write_cad(gmsh, tmp_path / "before.step", 1000.0)
+    read_mesh(tmp_path / "before.step", size=0.6)
+    _write_cad(gmsh, tmp_path / "after.step", 1000.0)
+    assert read_mesh(tmp_path / "after.step", size=0.6).extent == pytest.approx(1.5)
+    assert gmsh.option.getString("Geometry.OCCTargetUnit") == ""
+
+
 def test_step_that_states_metres(gmsh_model: None, tmp_path: Path) -> None:
     import gmsh
 
@@ -285,7 +296,7 @@ def test_script_is_run_and_meshed_if_it_did_not(
 
 
 def test_script_that_fails_is_named_with_its_line(gmsh_library: None, tmp_path: Path) -> None:
-    with pytest.raises(CaseError, match=r"model_of_mine\.py', line 12 failed: ZeroDivisionError"):
+    with pytest.raises(CaseError, match=r"model_of_mine\.py', line 11 failed: ZeroDivisionError"):
         read_mesh(_script(tmp_path, "1 / 0"))
 
 
