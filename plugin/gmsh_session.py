@@ -15,6 +15,7 @@ from murmesh.plugin.probe import require_gmsh
 from murmesh.solver.errors import CaseError, FormatError, MeshError
 
 _KEPT_OPTIONS = ("Mesh.MeshSizeMax", "General.Terminal")
+CAD = {".step", ".stp", ".brep"}
 _STEP_UNITS = {"": 1.0, "MILLI": 1e-3, "CENTI": 1e-2, "DECI": 0.1, "MICRO": 1e-6, "KILO": 1e3}
 
 
@@ -150,6 +151,9 @@ def generate(path: Path, size: float | None, order: int) -> None:
     try:
         if size is not None:
             gmsh.option.setNumber("Mesh.MeshSizeMax", size)
+        if size is not None and path.suffix.lower() in CAD:
+            # CAD has no sizes of its own, and gmsh would mesh a tenth of its diagonal fine
+            gmsh.model.mesh.setSize(gmsh.model.getEntities(0), size)
         gmsh.model.mesh.generate(3)
         if order == 2 or (order == 0 and _curved(gmsh)):
             gmsh.model.mesh.setOrder(2)

@@ -20,7 +20,8 @@ from typing import Any
 
 import numpy as np
 
-from murmesh.plugin.mesh_source import CAD, UNITS, TaggedMesh, element_size, read_mesh
+from murmesh.plugin.gmsh_session import CAD
+from murmesh.plugin.mesh_source import UNITS, TaggedMesh, element_size, read_mesh
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.catalogue import Treatment
 from murmesh.solver.case.fields import Declared, quantity, record

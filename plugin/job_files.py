@@ -111,9 +111,9 @@ def _settle_motion(table: Tree, unit: str, measures: str, name: str) -> None:
         raise FieldError(f"'{name}': the unit is not said; write it behind the column, roof_re [mm/s], or as unit = \"mm/s\"")
     what, density = measures.removesuffix(" psd"), measures.endswith(" psd")
     if what not in ("velocity", "acceleration"):
-        raise FieldError(f"'{name}': the unit {unit} is that of a {measures}, not of a velocity or an acceleration")
+        raise FieldError(f"'{name}': the unit {unit} is one of {measures}, not of velocity or acceleration")
     if table.setdefault("measure", what) != what:
-        raise FieldError(f"'{name}': the unit {unit} is that of a {what}, but measure = '{table['measure']}'; mend one")
+        raise FieldError(f"'{name}': the unit {unit} is one of {what}, but measure = '{table['measure']}'; mend one")
     if density != (table.get("form") == "psd"):
         raise FieldError(f"'{name}': the unit {unit} and form = '{table.get('form', '')}' contradict each other; mend one")
 

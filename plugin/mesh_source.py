@@ -19,7 +19,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.plugin.gmsh_session import current_gmsh, generate, gmsh_session, open_model
+from murmesh.plugin.gmsh_session import CAD, current_gmsh, generate, gmsh_session, open_model
 from murmesh.plugin.probe import gmsh_missing
 from murmesh.solver.errors import CaseError, FormatError, MeshError, nearest
 
@@ -33,7 +33,6 @@ LARGEST, SMALLEST = 100.0, 0.05
 """Extents [m] outside which a unit is more likely wrong than meant (common practice, no source)."""
 JOB_ATTRIBUTE = "murmesh job"
 BY_GMSH = {".msh", ".geo", ".geo_unrolled", ".step", ".stp", ".brep", ".py", ".unv"}
-CAD = {".step", ".stp", ".brep"}
 MEAN_EDGE = 1.5
 """The 95 % quantile of the mean edges of a gmsh mesh over its size (measured on a cab and a cylinder, 1.4 .. 1.5)."""
 _VTK_ORDER = np.array([0, 1, 2, 3, 4, 5, 6, 7, 9, 8])  # gmsh numbers the last two mid-edge nodes the other way round

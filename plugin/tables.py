@@ -158,14 +158,14 @@ def read_column(path: str | Path, column: str = "", unit: str = "", time_sign: s
     Raises FormatError for the file, FieldError for a column or unit that is not known or contradicts the header.
     """
     sheet = read_csv(path)
+    at = sheet.find(_FREQUENCY, "frequency")
     known = _quantities(sheet)
     if column not in known:
         if column or len(known) != 1:
-            asked = f"no quantity '{column}'" if column else "several quantities; say which with column = ..."
+            asked = f"no quantity '{column}'" if column else "several quantities: say which with column = ..."
             raise FieldError(f"'{path}' has {asked}; {nearest(column, [name or 're/im' for name in known])}")
         column = next(iter(known))
     parts = known[column]
-    at = sheet.find(_FREQUENCY, "frequency")
     frequencies = sheet.scaled(at, "Hz")
     if np.any(frequencies <= 0) or np.any(np.diff(frequencies) <= 0):
         raise FormatError(f"'{path}': the column '{at}' must rise strictly from above 0; sort it and drop duplicates")

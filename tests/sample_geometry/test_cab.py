@@ -97,7 +97,8 @@ def test_ears_lie_in_the_air_clear_of_every_surface(gmsh_model: None) -> None:
         assert gmsh.model.isInside(3, gmsh.model.getEntities(3)[0][1], ear)
         for _, surface in gmsh.model.getEntities(2):
             closest, _ = gmsh.model.getClosestPoint(2, surface, ear)
-            assert math.dist(closest, ear) > 0.3
+            # the closest point is that of the whole plane: it counts only where the plane is a wall
+            assert math.dist(closest, ear) > 0.3 or not gmsh.model.isInside(2, surface, closest)
 
 
 def test_script_writes_a_mesh_with_names(gmsh_library: None, tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
