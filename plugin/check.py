@@ -19,6 +19,7 @@ RULES: tuple[Callable[[Scene], Iterable[Finding]], ...] = (
     lambda scene: shape.elements(scene.case.mesh.nodes, scene.case.mesh.tets),
     lambda scene: shape.overlaps(scene.skin),
     shape.placement,
+    shape.listing,
     shape.outside,
     shape.separate_parts,
     acoustics.resolution,

@@ -9,7 +9,7 @@ import numpy.typing as npt
 
 from murmesh.plugin.findings.finding import Finding, error, note, warning
 from murmesh.plugin.findings.scene import Scene
-from murmesh.plugin.mesh_source import LARGEST, SMALLEST, TaggedMesh
+from murmesh.plugin.mesh_source import LARGEST, SMALLEST, TaggedMesh, cell_keys
 from murmesh.plugin.skin import Skin
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.errors import CaseError
@@ -171,7 +171,18 @@ def placement(scene: Scene) -> Iterator[Finding]:
             text = f"{loose} of its {len(owners)} triangles are a face of no tetrahedron"
             yield error("triangle_on_no_tetrahedron", surface.name, text, cure)
         yield from _side_finding(surface.name, surface.boundary, inner, outer)
-    free = len(scene.skin.outer) - int(np.sum((scene.owners[:, 0] >= 0) & (scene.owners[:, 1] < 0)))
+
+
+def listing(scene: Scene) -> Iterator[Finding]:
+    """Triangles listed more than once, and outer faces that no surface holds."""
+    named = scene.case.mesh.triangle_surface >= 0
+    keys = cell_keys(scene.case.mesh.triangles[named][:, :3], len(scene.case.mesh.nodes))
+    twice = len(keys) - len(np.unique(keys))
+    if twice:
+        text = f"{twice} triangles are listed more than once; their loads and losses would count as often"
+        yield error("triangle_listed_twice", "mesh", text, "list every triangle once, with one surface")
+    outside = (scene.owners[:, 0] >= 0) & (scene.owners[:, 1] < 0)
+    free = len(scene.skin.outer) - len(np.unique(keys[outside[named]]))
     if free > 0:
         text = f"{free} outer triangles belong to no surface; they are hard walls without any absorption"
         yield warning("surface_without_kind", "mesh", text, "give every outer triangle a surface")

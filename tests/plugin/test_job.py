@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+
 from murmesh.plugin.job import Job, Rule, is_glob
 from murmesh.plugin.job_text import job_of, toml_text
 from murmesh.solver.case.boundary import Boundary, Impedance, Port, Pressure, Rigid, Vibrating
@@ -111,7 +112,8 @@ def test_every_kind_survives_the_text(family: type[Declared]) -> None:
             case = LoadCase("c", (SurfaceVelocity("s", held),), combination=Incoherent())
             job = job.load_case(case)
         else:
-            job = job.load(held)  # type: ignore[arg-type]
+            assert isinstance(held, Load)
+            job = job.load(held)
         assert same(Job.from_json(job.to_json()), job), member
         import tomllib
 
@@ -301,7 +303,8 @@ def test_files_wherever_a_spectrum_stands(folder: Path) -> None:
     job = job_in(folder, text)
     law = job.surfaces[0].boundary.wall.coefficient  # type: ignore[attr-defined]
     np.testing.assert_allclose(law.at(np.array([80.0, 500.0])), [0.2, 0.3])
-    np.testing.assert_allclose(job.loads.loads[0].pressure.at(np.array([80.0])), [200.0])  # type: ignore[attr-defined]
+    pressure = job.loads.loads[0].pressure  # type: ignore[attr-defined]
+    np.testing.assert_allclose(pressure.at(np.array([80.0])), 200.0)
 
 
 def test_measured_levels(folder: Path) -> None:

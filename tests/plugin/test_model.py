@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+
 from meshes import box, quadratic
 from murmesh.plugin.job import Job, Rule
 from murmesh.plugin.load import load_case_file, load_job
@@ -69,7 +70,9 @@ def test_order_is_kept_and_unused_nodes_are_dropped(order: int) -> None:
 
 
 def test_an_exact_name_wins_over_a_glob() -> None:
-    case = build_case(bare().surface("?0", Vibrating()).surface("?1", Rigid()).surface("x0", Impedance(Absorption(0.5))), tagged())
+    case = build_case(
+        bare().surface("?0", Vibrating()).surface("?1", Rigid()).surface("x0", Impedance(Absorption(0.5))), tagged()
+    )
     kinds = {surface.name: surface.boundary.kind_name for surface in case.surfaces}
     assert kinds == {"x0": "impedance", "y0": "vibrating", "z0": "vibrating", "x1": "rigid", "y1": "rigid", "z1": "rigid"}
 
@@ -109,7 +112,9 @@ def test_a_triangle_in_two_groups_is_counted_once() -> None:
 
 
 def test_the_rest_is_rigid_only_if_said() -> None:
-    with pytest.raises(CaseError, match=r'outer triangles, .* m2 .* have no kind; give them a kind .*default_boundary = "rigid"'):
+    with pytest.raises(
+        CaseError, match=r'outer triangles, .* m2 .* have no kind; give them a kind .*default_boundary = "rigid"'
+    ):
         build_case(bare().surface("x0", Rigid()), tagged())
     case = build_case(bare(default_boundary="rigid").surface("x0", Rigid()), tagged())
     assert [surface.name for surface in case.surfaces] == ["x0", UNNAMED]
@@ -212,7 +217,9 @@ def test_the_rule_survives_what_groups_do_not(gmsh_model: None) -> None:
             other = gmsh.model.occ.addBox(0.5, 0, 0, 1, 0.8, 0.6)
             gmsh.model.occ.fragment([(3, cab)], [(3, other)])
             gmsh.model.occ.synchronize()
-            gmsh.model.occ.remove([(3, tag) for _, tag in gmsh.model.getEntities(3) if gmsh.model.occ.getCenterOfMass(3, tag)[0] > 1])
+            gmsh.model.occ.remove(
+                [(3, tag) for _, tag in gmsh.model.getEntities(3) if gmsh.model.occ.getCenterOfMass(3, tag)[0] > 1]
+            )
             gmsh.model.occ.synchronize()
         gmsh.option.setNumber("Mesh.MeshSizeMax", size)
         gmsh.model.mesh.generate(3)
@@ -310,6 +317,7 @@ def test_a_model_carries_its_job(gmsh_model: None, tmp_path: Path, version: floa
 def test_a_long_job_is_not_split(gmsh_model: None, tmp_path: Path) -> None:
     """A table of 5000 rows makes 200 kB of text: more than any line buffer."""
     import gmsh
+
     from murmesh.solver.case.spectrum import Table
 
     f = np.linspace(10.0, 500.0, 5000)

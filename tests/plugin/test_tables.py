@@ -7,6 +7,7 @@ from pathlib import Path
 import h5py
 import numpy as np
 import pytest
+
 from murmesh.plugin.tables import UNITS, quantity_names, read_arrays, read_column, read_csv, read_levels, read_scan
 from murmesh.solver.errors import FieldError, FormatError
 
@@ -89,7 +90,9 @@ def test_units(table: Path, unit: str) -> None:
         ("frequency,a\n0,1\n50,1\n", {}, FormatError, r"must rise strictly from above 0"),
     ],
 )
-def test_what_is_unclear_is_refused(table: Path, text: str, kwargs: dict[str, str], error: type[Exception], words: str) -> None:
+def test_what_is_unclear_is_refused(
+    table: Path, text: str, kwargs: dict[str, str], error: type[Exception], words: str
+) -> None:
     table.write_text(text)
     with pytest.raises(error, match=words):
         read_column(table, **kwargs)
