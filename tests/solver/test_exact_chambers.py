@@ -135,17 +135,16 @@ def test_expansion_chamber_c02(ratio: float) -> None:
 
 
 def test_extended_inlet_and_outlet_c03() -> None:
-    """Thin extensions as rigid sheets; 0.5 dB within 100 Hz of the quarter-wave peaks near 600 and 1300 Hz."""
+    """Thin extensions as rigid sheets. The hardest lines are among these: 600 Hz and 1800 Hz lie beside sharp peaks."""
     table = read_csv_reference("C03_extended_inlet_outlet_TL.csv")
+    rows = np.array([0, 2, 3, 6, 9, 11])
     length, inlet, outlet = 0.2823, 0.131, 0.061
     sheets = [(0.0, inlet), (length - outlet, length)]
-    mesh = silencer(RADII, PIPE, (0.0, length), (-LEAD, length + LEAD), 0.05, 0.003, sheets)
+    radii = (0.5 * PIPE, 0.93 * PIPE, PIPE, 1.07 * PIPE, 1.6 * PIPE, CHAMBER)
+    mesh = silencer(radii, PIPE, (0.0, length), (-LEAD, length + LEAD), 0.05, 0.001, sheets)
     rigid = Sheet(Rigid(), Rigid())
-    found = transmission_loss(mesh, table["f_Hz"], 5, {"sheet_0": rigid, "sheet_1": rigid})
-    off = np.abs(found - table["TL_dB"])
-    print(np.round(found - table["TL_dB"], 3))
-    near_peak = np.min(np.abs(table["f_Hz"][:, None] - np.array([600.0, 1300.0])), axis=1) <= 100
-    assert np.all(off < np.where(near_peak, 0.5, np.maximum(0.1, 3 * table["err_dB"])))
+    found = transmission_loss(mesh, table["f_Hz"][rows], 5, {"sheet_0": rigid, "sheet_1": rigid})
+    assert np.all(np.abs(found - table["TL_dB"][rows]) < np.maximum(0.05, 3 * table["err_dB"][rows]))
 
 
 TUBE, SHELL, LENGTH = 0.0254, 0.0381, 0.0667  # radii and length of C04 [m]
@@ -193,6 +192,5 @@ def test_perforated_tube_c04() -> None:
     a2, b2 = TUBE**2, SHELL**2
     annulus = TUBE / (b2 - a2) * (2 * b2 / (b2 - a2) * (b2 * np.log(SHELL / TUBE) / 2 - (b2 - a2) / 4) - (b2 - a2) / 4)
     with_mass = _two_duct_loss(f, zeta + 2j * np.pi * f / 343.0 * (TUBE / 4 + annulus))
-    print(np.round(found - with_mass, 3), np.round(found - published, 3))
     assert np.abs(found - with_mass).max() < 0.3
     assert np.abs(found - published)[f <= 1300].max() < 1.0
