@@ -65,12 +65,17 @@ def discretise(case: Case, order: int = 0) -> Space:
     """Number the unknowns of `case` at a uniform `order` (0: the order of its sweep, or the automatic one)."""
     order = order or case.sweep.order or automatic_order(case)
     mesh = case.mesh
-    opened = np.isin(mesh.triangle_surface, [i for i, s in enumerate(case.surfaces) if isinstance(s.boundary, Sheet)])
-    topology = Topology.build(mesh.tets, mesh.triangles[opened][:, :3])
+    sheets = [i for i, surface in enumerate(case.surfaces) if isinstance(surface.boundary, Sheet)]
+    try:
+        topology = Topology.build(mesh.tets, mesh.triangles[np.isin(mesh.triangle_surface, sheets)][:, :3])
+    except MeshError as error:
+        raise MeshError(
+            f"surfaces/{', '.join(case.surfaces[i].name for i in sheets)}: {error}" if sheets else str(error)
+        ) from None
     geometry = Geometry(mesh.nodes, mesh.tets)
     dofs = DofMap.build(topology, np.full(len(mesh.tets), order, dtype=np.int64))
-    sides, sheets = _all_sides(case, topology, geometry)
-    return Space(case, order, geometry, topology, dofs, sides, sheets)
+    sides, pairs = _all_sides(case, topology, geometry)
+    return Space(case, order, geometry, topology, dofs, sides, pairs)
 
 
 def automatic_order(case: Case) -> int:
@@ -142,11 +147,6 @@ def _front_first(
     case: Case, geometry: Geometry, sheet: Sheet, triangles: Ints, tet: Ints, face: Ints, name: str
 ) -> tuple[Ints, Ints]:
     """Swap columns so that column 0 is the front: the side whose fluid lies where the front looks."""
-    if np.any(tet[:, 1] < 0):
-        raise MeshError(
-            f"surfaces/{name}: {int(np.sum(tet[:, 1] < 0))} triangles of the sheet have fluid on one side only; "
-            "a sheet lies inside the fluid: give those triangles a surface of their own"
-        )
     if sheet.front_region is not None:
         front = [region.name for region in case.regions].index(sheet.front_region)
         swap = case.mesh.tet_region[tet[:, 0]] != front

@@ -1,0 +1,209 @@
+"""A sweep stops and goes on, survives a kill, keeps its file whole, and falls back to another solver with the same numbers."""
+
+from __future__ import annotations
+
+import os
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import h5py
+import numpy as np
+import pytest
+
+from cases import case_of, lossy
+from meshes import box
+from murmesh.solver import __main__ as command
+from murmesh.solver.case.boundary import Impedance, Vibrating
+from murmesh.solver.case.hdf5 import write_case
+from murmesh.solver.case.load import SurfaceVelocity
+from murmesh.solver.case.model import Case
+from murmesh.solver.case.motion import Uniform
+from murmesh.solver.case.spectrum import Table
+from murmesh.solver.case.wall import Given
+from murmesh.solver.errors import FallbackWarning, FormatError, RangeError, ResultError, SolveError
+from murmesh.solver.linalg import Rslab, analyse
+from murmesh.solver.result import read_result, write_result
+from murmesh.solver.sweep import Journal, Progress, solve
+
+
+def _case(lines: int = 6, end: float = 1000.0, eta: float = 0.03) -> Case:
+    law = Given(Table(np.array([10.0, end]), np.array([2.0 - 3.0j, 4.0 - 1.0j])))
+    loads = [SurfaceVelocity("x0", Uniform(1e-3 + 0j)), SurfaceVelocity("y0", Uniform(1e-3j))]
+    return case_of(
+        box(2, 2, 2), {"x0": Vibrating(), "y0": Vibrating(), "x1": Impedance(law)}, loads,
+        np.linspace(60.0, 110.0, lines), {"ear": (0.4, 0.5, 0.6)}, damping=lossy(eta), order=3,
+        field_frequencies=np.array([60.0]),
+    )  # fmt: skip
+
+
+def _numbers(result: object) -> np.ndarray:
+    held = result.load_cases[0]  # type: ignore[attr-defined]
+    return np.concatenate([held.contributions.ravel(), held.supplied.ravel(), held.absorbed.ravel(), held.fields.ravel()])
+
+
+class _StopError(Exception):
+    pass
+
+
+def test_an_interrupted_sweep_goes_on(tmp_path: Path) -> None:
+    case, journal = _case(), tmp_path / "lines"
+
+    def stop(progress: Progress) -> None:
+        if progress.done == 3:
+            raise _StopError
+
+    with pytest.raises(_StopError):
+        solve(case, journal, report=stop)
+    assert len(list(journal.glob("line*.npz"))) == 3
+    seen: list[Progress] = []
+    result = solve(case, journal, report=seen.append)
+    assert seen[-1].resumed == 3 and seen[-1].done == seen[-1].total == 6
+    assert [p.resumed for p in seen] == [1, 2, 3, 3, 3, 3]
+    assert np.array_equal(_numbers(result), _numbers(solve(case)))
+    Journal(journal).forget()
+    assert not journal.exists()
+
+
+def test_another_case_s_journal_is_refused(tmp_path: Path) -> None:
+    solve(_case(1), tmp_path / "lines")
+    with pytest.raises(ResultError, match="holds finished lines of another case or order"):
+        solve(_case(2), tmp_path / "lines")
+
+
+KILLED = """
+import sys, time
+from pathlib import Path
+from murmesh.solver.case.hdf5 import read_case
+from murmesh.solver.sweep import solve
+solve(read_case(sys.argv[1]), Path(sys.argv[2]), report=lambda p: print(p.done, flush=True))
+"""
+
+
+@pytest.mark.parametrize("lines_before", [1, 4])
+def test_a_killed_sweep_goes_on(tmp_path: Path, lines_before: int) -> None:
+    case = _case(40)
+    write_case(case, tmp_path / "case.h5")
+    child = subprocess.Popen(
+        [sys.executable, "-c", KILLED, str(tmp_path / "case.h5"), str(tmp_path / "lines")], stdout=subprocess.PIPE, text=True
+    )
+    assert child.stdout
+    while int(child.stdout.readline() or "99") < lines_before:
+        pass
+    time.sleep(0.003 * lines_before)  # somewhere inside a line, or in the writing of one
+    child.send_signal(signal.SIGKILL)
+    child.stdout.close()
+    child.wait()
+    seen: list[Progress] = []
+    result = solve(case, tmp_path / "lines", report=seen.append)
+    assert seen[-1].resumed >= lines_before
+    assert np.allclose(_numbers(result), _numbers(solve(case)), rtol=1e-12)
+
+
+def test_result_file(tmp_path: Path) -> None:
+    result, path = solve(_case()), tmp_path / "result.h5"
+    write_result(result, path)
+    again = read_result(path)
+    assert np.array_equal(_numbers(again), _numbers(result))
+    assert again.case.checksum == result.case.checksum == again.provenance["case_checksum"]
+    assert again.provenance["numpy"] == np.__version__
+    point = np.array([[0.3, 0.3, 0.3]])
+    assert np.array_equal(again.pressure_at(point, 60.0), result.pressure_at(point, 60.0))
+    ear = again.pressure_at(np.array([[0.4, 0.5, 0.6]]), 60.0)[0, 0]
+    assert ear == pytest.approx(again.load_cases[0].contributions[0, 0].sum(), rel=1e-9)
+
+
+def test_wrong_result_files(tmp_path: Path) -> None:
+    path = tmp_path / "result.h5"
+    write_result(solve(_case(1)), path)
+    with h5py.File(path, "r+") as file:
+        file["case/mesh/nodes"][0, 0] += 0.01
+    with pytest.raises(FormatError, match="its checksum differs"):
+        read_result(path)
+    write_result(solve(_case(1)), path)
+    with h5py.File(path, "r+") as file:
+        del file["load_cases/0000/supplied"]
+    with pytest.raises(FormatError, match="the result is incomplete"):
+        read_result(path)
+    write_case(_case(1), path)
+    with pytest.raises(FormatError, match="is not a murmesh result"):
+        read_result(path)
+
+
+def test_a_short_table_stops_before_any_factorisation(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(Rslab, "factor", lambda *_: pytest.fail("factorised"))
+    with pytest.raises(RangeError, match=r"holds 10 .. 90 Hz, but 100 Hz is asked"):
+        solve(_case(end=90.0))
+
+
+def test_superlu_gives_the_same_numbers() -> None:
+    case = _case(2)
+    default, other = solve(case), solve(case, solver="superlu")
+    assert other.provenance["linear_solver"] == "SuperLU"
+    assert np.allclose(_numbers(default), _numbers(other), rtol=1e-9)
+
+
+def test_a_failed_factorisation_falls_back_and_says_so(monkeypatch: pytest.MonkeyPatch) -> None:
+    class Broken:
+        def factor(self, _: object) -> None:
+            raise RuntimeError("zero pivot")
+
+    case = _case(1)
+    expected = _numbers(solve(case))
+    monkeypatch.setattr(Rslab, "analyse", classmethod(lambda cls, lower, threads: cls(lower, Broken())))
+    with pytest.warns(FallbackWarning, match=r"LDL\^T failed \(zero pivot\); this line is solved with SuperLU"):
+        assert np.allclose(_numbers(solve(case)), expected, rtol=1e-9)
+
+
+def test_unknown_solver() -> None:
+    with pytest.raises(SolveError, match="no sparse solver is called 'best'"):
+        analyse(None, "best")  # type: ignore[arg-type]
+
+
+def test_the_solver_alone(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    write_case(_case(2), tmp_path / "case.h5")
+    assert command.main([str(tmp_path / "case.h5")]) == 0
+    out, err = capsys.readouterr()
+    assert out == f"{tmp_path / 'case_result.h5'}\n"
+    assert "2/2 lines" in err
+    assert read_result(tmp_path / "case_result.h5").frequencies.size == 2
+    assert not list(tmp_path.glob("*.lines"))
+    assert command.main([str(tmp_path / "none.h5")]) == 2
+    assert "there is no file" in capsys.readouterr().err
+    assert command.main([]) == 2
+    assert command.main(["--help"]) == 0
+    assert "example: python -m murmesh.solver" in capsys.readouterr().out
+
+
+BARRED = """
+import sys
+class Bar:
+    def find_spec(self, name, path=None, target=None):
+        if name.split(".")[0] in ("gmsh", "pyvista", "meshio", "matplotlib", "vtk", "vtkmodules") or name == "murmesh.plugin":
+            raise ImportError(name)
+sys.meta_path.insert(0, Bar())
+from murmesh.solver.__main__ import main
+sys.exit(main(sys.argv[1:]))
+"""
+
+
+def test_the_solver_needs_nothing_of_the_plugin(tmp_path: Path) -> None:
+    write_case(_case(1), tmp_path / "case.h5")
+    done = subprocess.run([sys.executable, "-c", BARRED, str(tmp_path / "case.h5")], capture_output=True, text=True)
+    assert done.returncode == 0, done.stderr
+    assert os.path.exists(done.stdout.strip())
+
+
+def test_an_interrupt_says_how_to_go_on(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    write_case(_case(1), tmp_path / "case.h5")
+
+    def interrupted(*_: object, **__: object) -> None:
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr(command, "solve", interrupted)
+    assert command.main([str(tmp_path / "case.h5")]) == 130
+    assert "the same command goes on from there" in capsys.readouterr().err
