@@ -298,18 +298,10 @@ def _attribute_in(path: Path) -> str:
 # element size
 
 
-def a_priori_error(kh: float, order: int) -> float:
-    """8.686 * 2 (k h / 4)^(p+1) / (p+1)!  [dB], h the mean edge: the rule by which the solver chooses its order.
-
-    Fitted on lossy cavities with exact solutions (common practice, no source); it knows neither damping nor pollution.
-    """
-    return float(8.686 * 2 * (kh / 4) ** (order + 1) / math.factorial(order + 1))
-
-
 def element_size(top_frequency: float, speed: float, order: int = 4, accuracy_db: float = 0.1) -> float:
     """The element size [m] for gmsh whose a-priori error at `top_frequency` [Hz] and `order` is `accuracy_db`.
 
-    Inverts `a_priori_error`; `speed` [m/s] is the lowest speed of sound in the model.
+    Inverts `solver.space.a_priori_error`; `speed` [m/s] is the lowest speed of sound in the model.
     """
     if not (top_frequency > 0 and speed > 0 and accuracy_db > 0 and 1 <= order <= 8):
         raise CaseError(

@@ -10,11 +10,12 @@ import numpy.typing as npt
 
 from murmesh.plugin.findings.finding import Finding, error, note, warning
 from murmesh.plugin.findings.scene import Scene
-from murmesh.plugin.mesh_source import a_priori_error, element_size
+from murmesh.plugin.mesh_source import element_size
 from murmesh.solver.case.boundary import Adjacent, Boundary, Sheet
 from murmesh.solver.case.load import SurfaceVelocity
 from murmesh.solver.errors import CaseError
 from murmesh.solver.scan import interpolation
+from murmesh.solver.space import a_priori_error
 
 Floats = npt.NDArray[np.float64]
 UNCOVERED = 0.01

@@ -64,6 +64,20 @@ def test_dispersion_g01(order) -> None:
         assert found == pytest.approx(exact, rel=1e-2, abs=1e-12)
 
 
+@pytest.mark.parametrize("order", range(1, 9))
+def test_unknowns_per_wavelength_g02(order) -> None:
+    """With D = 2 pi p / (k h) unknowns per wavelength the error is the one the column is for; with fewer it is larger."""
+    table = read_csv_reference("G02_dofs_per_wavelength.csv")
+    row = int(np.flatnonzero(table["p"] == order)[0])
+    for column, allowed in (("D_1pc", 1e-2), ("D_0.1pc", 1e-3), ("D_0.01pc", 1e-4)):
+        kh = 2 * np.pi * order / table[column][row]
+        assert abs(_wavenumber_error(order, kh * 0.999)) <= allowed * 1.001
+        if abs(kh / np.pi - np.round(kh / np.pi)) < 0.005:
+            continue  # a stopping band begins here, so that no error can be read beyond
+        worse = [abs(_wavenumber_error(order, kh * factor)) for factor in (1.002, 1.01, 1.03)]
+        assert max(worse) > allowed
+
+
 def _duct_error(order: int, cells: int, waves: int) -> float:
     """(k_h^2 - k^2)/k^2 of the mode cos(m pi x) in a thin rigid duct."""
     mesh = shuffled(box(cells, 1, 1, (1.0, 0.05, 0.05)))

@@ -17,7 +17,6 @@ from murmesh.plugin.mesh_source import (
     JOB_ATTRIBUTE,
     MEAN_EDGE,
     TaggedMesh,
-    a_priori_error,
     cell_keys,
     element_size,
     from_gmsh,
@@ -26,6 +25,7 @@ from murmesh.plugin.mesh_source import (
     tagged_mesh,
 )
 from murmesh.solver.errors import CaseError, FormatError, MeshError
+from murmesh.solver.space import a_priori_error
 
 VTK_EDGES = np.array([[0, 1], [1, 2], [0, 2], [0, 3], [1, 3], [2, 3]])
 

@@ -117,7 +117,8 @@ def test_a_sheet_with_a_free_edge_lets_sound_around_it() -> None:
     case = case_of(open_mesh, {"x0": Vibrating()}, loads, [200.0], behind, damping=lossy(0.05), order=4)
     nothing = solve(case).load_cases[0].contributions[0, 0, 0]
     assert found[1] == pytest.approx(nothing, rel=1e-3)  # a sheet without resistance is no sheet
-    assert 0.05 < abs(found[0] / nothing - 1) < 1.0  # a rigid one shadows, but sound passes the edge
+    assert abs(found[0] / nothing - 1) > 0.05  # a rigid one shadows,
+    assert abs(found[0]) > 0.05 * abs(nothing)  # but sound passes its edge
 
 
 @pytest.mark.parametrize(
