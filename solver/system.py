@@ -29,11 +29,11 @@ from murmesh.solver.assembly import (
     surface_points,
     volume_matrices,
 )
-from murmesh.solver.case.boundary import Adjacent
+from murmesh.solver.case.boundary import Adjacent, Boundary
 from murmesh.solver.case.expression import parse
 from murmesh.solver.case.load import IncomingWave, Load, Monopole, SurfacePressure, SurfaceVelocity
 from murmesh.solver.case.medium import damped
-from murmesh.solver.case.model import Case
+from murmesh.solver.case.model import Case, Region
 from murmesh.solver.case.motion import Motion
 from murmesh.solver.case.spectrum import as_spectrum
 from murmesh.solver.errors import CaseError, MeshError
@@ -190,12 +190,12 @@ def _volume_terms(space: Space) -> list[Term]:
             raise MeshError(f"regions/{region.name} has no tetrahedron; mesh it, or take the region out of the job")
         stiffness, mass = volume_matrices(space.geometry, space.dofs, tets)
 
-        def phi_k(f: Floats, region: object = region) -> Complex:
-            return 1.0 / damped(region.medium, region.damping, f)[0]  # type: ignore[attr-defined]
+        def phi_k(f: Floats, region: Region = region) -> Complex:
+            return np.asarray(1.0 / damped(region.medium, region.damping, f)[0])
 
-        def phi_m(f: Floats, region: object = region) -> Complex:
-            rho, c = damped(region.medium, region.damping, f)  # type: ignore[attr-defined]
-            return -((2 * np.pi * f) ** 2) / (rho * c**2)
+        def phi_m(f: Floats, region: Region = region) -> Complex:
+            rho, c = damped(region.medium, region.damping, f)
+            return np.asarray(-((2 * np.pi * f) ** 2) / (rho * c**2))
 
         terms += [Term(f"volume/{region.name}", stiffness, phi_k), Term(f"volume/{region.name}", mass, phi_m)]
     return terms
@@ -217,8 +217,7 @@ def _surface_terms(space: Space) -> list[Term]:
             continue
 
         def phi(f: Floats, side: Side = side) -> Complex:
-            admittance = _side_admittance(case, side, f)
-            return np.zeros(len(f), complex) if admittance is None else 2j * np.pi * f * admittance
+            return _i_w(f, _side_admittance(case, side, f))
 
         matrix = surface_mass(space.geometry, space.dofs, side.tet, side.face)
         terms.append(Term(f"surface/{case.surfaces[side.surface].name}", matrix, phi))
@@ -230,19 +229,27 @@ def _sheet_terms(space: Space) -> list[Term]:
     case, terms = space.case, []
     for pair in space.sheets:
         boundary = case.surfaces[pair.surface].boundary
-        if boundary.transfer_admittance(case.sweep.frequencies, adjacent(case, pair.region, case.sweep.frequencies)) is None:
+        if _transfer(case, boundary, pair.region, case.sweep.frequencies) is None:
             continue
         geometry, dofs = space.geometry, space.dofs
         cross = surface_cross_mass(geometry, dofs, pair.front, pair.back)
         own = surface_mass(geometry, dofs, *pair.front) + surface_mass(geometry, dofs, *pair.back)
 
-        def phi(f: Floats, boundary: object = boundary, region: int = pair.region) -> Complex:
-            admittance = boundary.transfer_admittance(f, adjacent(case, region, f))  # type: ignore[attr-defined]
-            return np.asarray(2j * np.pi * f * admittance)
+        def phi(f: Floats, boundary: Boundary = boundary, region: int = pair.region) -> Complex:
+            return _i_w(f, _transfer(case, boundary, region, f))
 
         matrix = (own - cross - cross.T).tocsr()
         terms.append(Term(f"surface/{case.surfaces[pair.surface].name}", matrix, phi))
     return terms
+
+
+def _i_w(f: Floats, admittance: Complex | None) -> Complex:
+    """i w Y (nf,); zero where the surface is hard at these frequencies."""
+    return np.zeros(len(f), dtype=np.complex128) if admittance is None else 2j * np.pi * f * admittance
+
+
+def _transfer(case: Case, boundary: Boundary, region: int, f: Floats) -> Complex | None:
+    return boundary.transfer_admittance(f, adjacent(case, region, f))
 
 
 def pressure_fixed(space: Space) -> npt.NDArray[np.bool_]:

@@ -72,7 +72,7 @@ def test_unknowns_per_wavelength_g02(order) -> None:
     for column, allowed in (("D_1pc", 1e-2), ("D_0.1pc", 1e-3), ("D_0.01pc", 1e-4)):
         kh = 2 * np.pi * order / table[column][row]
         assert abs(_wavenumber_error(order, kh * 0.999)) <= allowed * 1.001
-        if abs(kh / np.pi - np.round(kh / np.pi)) < 0.005:
+        if abs(kh / np.pi - np.round(kh / np.pi)) < 0.02:
             continue  # a stopping band begins here, so that no error can be read beyond
         worse = [abs(_wavenumber_error(order, kh * factor)) for factor in (1.002, 1.01, 1.03)]
         assert max(worse) > allowed
