@@ -82,6 +82,21 @@ def band_argument(text: str) -> tuple[float, float]:
     return low, high
 
 
+def product_arguments(parser: argparse.ArgumentParser, folder: str) -> None:
+    """The arguments that drawing and exporting share; what a picture or format does not take is left aside."""
+    parser.add_argument("result", help="result file")
+    parser.add_argument("folder", help=folder)
+    parser.add_argument("--frequency", type=float, help="frequency [Hz] of maps and fields (default: the loudest kept line)")
+    parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz for rankings (default: the whole sweep)")
+    parser.add_argument("--weighting", choices=("A", "C", "Z"), help="frequency weighting (default A)")
+    parser.add_argument("--load-case", help="load case (default: the first; tables: all)")
+
+
+def product_options(args: argparse.Namespace) -> dict[str, Any]:
+    """The keyword options that `product_arguments` stands for."""
+    return {"frequency": args.frequency, "band": args.band, "weighting": args.weighting, "load_case": args.load_case}
+
+
 def result_path(case: Path) -> Path:
     """Where the result of a case goes unless said otherwise."""
     return case.with_name(f"{case.stem}_result.h5")

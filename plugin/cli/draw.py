@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 from pathlib import Path
 
-from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, band_argument, register, say
+from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, product_arguments, product_options, register, say
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.probe import rendering_missing
 from murmesh.plugin.products import Product
@@ -14,20 +14,14 @@ from murmesh.solver.result import Result, read_result
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     known = ", ".join(product.name for product in PICTURES if product.source == "result")
-    parser.add_argument("result", help="result file")
-    parser.add_argument("folder", help="folder for the PNG files")
+    product_arguments(parser, "folder for the PNG files")
     parser.add_argument("--picture", action="append", default=[], help=f"one of: {known}; repeat for several (default: all)")
-    parser.add_argument("--frequency", type=float, help="frequency [Hz] of maps (default: the loudest kept line)")
-    parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz for rankings (default: the whole sweep)")
-    parser.add_argument("--weighting", choices=("A", "C", "Z"), help="frequency weighting (default A)")
-    parser.add_argument("--load-case", help="load case (default: the first)")
 
 
 def run(args: argparse.Namespace) -> int:
     result = read_result(args.result)
     names = args.picture or [product.name for product in PICTURES if product.source == "result"]
-    options = {"frequency": args.frequency, "band": args.band, "weighting": args.weighting, "load_case": args.load_case}
-    left_out = draw(result, Path(args.folder), [PICTURES[name] for name in names], **options)
+    left_out = draw(result, Path(args.folder), [PICTURES[name] for name in names], **product_options(args))
     return CANNOT if left_out else DONE
 
 

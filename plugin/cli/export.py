@@ -5,7 +5,7 @@ from __future__ import annotations
 import argparse
 from pathlib import Path
 
-from murmesh.plugin.cli.command import DONE, Command, answer, band_argument, register
+from murmesh.plugin.cli.command import DONE, Command, answer, product_arguments, product_options, register
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.products import Product
 from murmesh.solver.result import Result, read_result
@@ -13,20 +13,14 @@ from murmesh.solver.result import Result, read_result
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     known = ", ".join(product.name for product in EXPORTS)
-    parser.add_argument("result", help="result file")
-    parser.add_argument("folder", help="folder for the files")
+    product_arguments(parser, "folder for the files")
     parser.add_argument("--format", action="append", default=[], help=f"one of: {known}; repeat for several (default: all)")
-    parser.add_argument("--frequency", type=float, help="frequency [Hz] of a field (default: the loudest kept line)")
-    parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz for rankings (default: the whole sweep)")
-    parser.add_argument("--weighting", choices=("A", "C", "Z"), help="frequency weighting (default A)")
-    parser.add_argument("--load-case", help="load case (default: the first, or all in tables)")
 
 
 def run(args: argparse.Namespace) -> int:
     result = read_result(args.result)
     formats = [EXPORTS[name] for name in args.format] or list(EXPORTS)
-    options = {"frequency": args.frequency, "band": args.band, "weighting": args.weighting, "load_case": args.load_case}
-    export(result, Path(args.folder), formats, **options)
+    export(result, Path(args.folder), formats, **product_options(args))
     return DONE
 
 

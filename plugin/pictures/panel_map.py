@@ -179,5 +179,5 @@ def _bar(axes: Axes, scale: tuple[float, float], unit: str) -> None:
     bar.outline.set_edgecolor(QUIET)
     bar.set_label(f"share [{unit}]", fontsize=9.5)
     high = axes.get_position().height * axes.figure.bbox.height / axes.figure.dpi
-    axes.text(0.0, 1.05 + 0.1 / high, "raises", transform=axes.transAxes, ha="left", va="bottom", fontsize=9.5)
-    axes.text(0.0, -0.05 - 0.1 / high, "lowers", transform=axes.transAxes, ha="left", va="top", fontsize=9.5)
+    axes.text(0.9, 1.05 + 0.1 / high, "raises", transform=axes.transAxes, ha="left", va="bottom", fontsize=9.5)
+    axes.text(0.9, -0.05 - 0.1 / high, "lowers", transform=axes.transAxes, ha="left", va="top", fontsize=9.5)
