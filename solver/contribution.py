@@ -22,6 +22,8 @@ from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
 
+SILENCE = 1e-12
+"""Part of a mean square below which what is left of it is rounding."""
 QUIETENING = (
     "Ranks quietening a panel (lowering its velocity), not treating it: where an absorber helps takes a new solution "
     "with the absorber in place."
@@ -143,7 +145,8 @@ def sum_(parts: list[Participation], key: str) -> Floats:
 
 
 def _change(without: float, total: float) -> float:
-    return float(level(max(without, 0.0)) - level(total))
+    """Change of level [dB]; -inf where nothing but rounding is left."""
+    return float(level(without if without > SILENCE * total else 0.0) - level(total))
 
 
 class _Band:

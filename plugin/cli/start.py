@@ -37,15 +37,16 @@ def run(args: argparse.Namespace) -> int:
 
 def job_text(mesh: TaggedMesh, file: str, unit: str | None) -> str:
     """A job that solves as it stands: air, hard walls that vibrate nowhere, a source, and a receiver to move."""
-    parts = [HEADER, f'title = "{Path(file).stem}"', ""]
-    parts += ["[mesh]", f'file = "{file}"', *([f'unit = "{unit}"'] if unit else []), ""]
+    parts = [HEADER, f'title = "{Path(file).stem}"']
+    if not mesh.triangle_groups:
+        # a key of the job itself: it must stand before the first table
+        parts += ['default_boundary = "rigid"   # no surface group found: say where surfaces lie, see the README']
+    parts += ["", "[mesh]", f'file = "{file}"', *([f'unit = "{unit}"'] if unit else []), ""]
     for name in list(mesh.tet_groups) or ["all"]:
         parts += [f'[regions."{name}"]', 'medium = { kind = "air", temperature = 20.0 }']
         parts += ['damping = { kind = "loss_factor", value = 0.02 }   # a guess: state what was measured', ""]
     for name in mesh.triangle_groups:
         parts += [f'[surfaces."{name}"]', 'kind = "rigid"   # vibrating, impedance, port ...: murmesh kinds', ""]
-    if not mesh.triangle_groups:
-        parts += ['default_boundary = "rigid"', ""]
     source, ear = _inner_points(mesh)
     monopole = f'kind = "monopole", label = "source", position = {source}, volume_velocity = 1e-4'
     parts += [

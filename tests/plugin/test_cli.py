@@ -8,9 +8,11 @@ import shutil
 from pathlib import Path
 from typing import Any
 
+import meshio
 import numpy as np
 import pytest
 
+from meshes import box
 from murmesh import sample_geometry
 from murmesh.plugin import cli, probe
 from murmesh.plugin.cli import demo as demo_command
@@ -133,6 +135,17 @@ def test_start_check_case_and_back(tmp_path: Path, gmsh_library: None, capsys: p
     assert "0 errors" in capsys.readouterr().out
     assert main(["case", str(job)]) == 0
     assert read_case(tmp_path / "duct.h5").title == "duct"
+
+
+def test_start_from_a_mesh_without_groups(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """The job it writes stands as it is: its outer walls become hard, and the check says so."""
+    mesh = box(2, 2, 2)
+    meshio.write_points_cells(tmp_path / "room.vtu", mesh.nodes, [("tetra", mesh.tets)])
+    assert main(["start", str(tmp_path / "room.vtu")]) == 0
+    capsys.readouterr()
+    assert main(["check", str(tmp_path / "room.toml")]) == 0
+    assert "unnamed_walls" in capsys.readouterr().out
+    assert load_case_file(tmp_path / "room.toml").surfaces[0].name == "unnamed_walls"
 
 
 def test_findings_have_status_one(tmp_path: Path, gmsh_library: None, capsys: pytest.CaptureFixture[str]) -> None:

@@ -210,6 +210,11 @@ def test_averaging_sphere_is_the_mean_over_the_ball() -> None:
     assert np.isnan(result.pressure_at(np.array([[9.0, 0, 0]]), 300.0)).all()
 
 
+def test_a_single_source_leaves_silence() -> None:
+    ranking = rank(solve(_case({"x0": Uniform(1e-3 + 0j)})), ["ear"])
+    assert ranking.rows[0].share == pytest.approx(1.0) and ranking.rows[0].removal_db == -np.inf
+
+
 def test_rankings_that_cannot_be_made() -> None:
     result = solve(_case(MOTIONS))
     with pytest.raises(ResultError, match="no energy between 130 and 200 Hz"):
