@@ -12,6 +12,7 @@ from __future__ import annotations
 import hashlib
 import shutil
 import time
+import warnings
 from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -24,7 +25,7 @@ import numpy.typing as npt
 import scipy.sparse as sp
 
 from murmesh.solver.case.model import Case
-from murmesh.solver.errors import ResultError
+from murmesh.solver.errors import ResultError, ValidityWarning
 from murmesh.solver.linalg import Analysis, analyse, solve_refined
 from murmesh.solver.power import absorbed_power, input_power, power_labels
 from murmesh.solver.receiver_points import Samples, locate_receivers
@@ -195,11 +196,25 @@ def _relative(direct: npt.NDArray[Any], summed: npt.NDArray[Any]) -> float:
 def _check_ranges(system: System) -> None:
     """Ask every coefficient for every line before the first factorisation: a table that ends too early ends here."""
     frequencies = system.space.case.sweep.frequencies
-    system.coefficients(frequencies)
+    _warn_of_active_terms(system, system.coefficients(frequencies))
     for loads in system.load_sets:
         for term in loads.terms:
             term.psi(frequencies)
         system.space.case.load_case(loads.name).combination.factors(frequencies, len(loads.loads))
+
+
+def _warn_of_active_terms(system: System, phi: Complex) -> None:
+    """A term takes the power Im(phi) p^H A p / (2 w), so a negative imaginary part creates sound."""
+    frequencies = system.space.case.sweep.frequencies
+    for j, term in enumerate(system.terms):
+        active = frequencies[phi[:, j].imag < -1e-9 * np.abs(phi[:, j])]
+        if len(active):
+            warnings.warn(
+                f"{term.label}: its law creates sound from {active[0]:g} to {active[-1]:g} Hz (for a wall, Re Z < 0); "
+                "it is used outside its range, or a sign in its data is wrong",
+                ValidityWarning,
+                stacklevel=4,
+            )
 
 
 def _run(engine: _Engine, frequencies: Floats, book: Journal | None, report: Report | None) -> list[Line]:

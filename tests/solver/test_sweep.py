@@ -23,7 +23,7 @@ from murmesh.solver.case.model import Case
 from murmesh.solver.case.motion import Uniform
 from murmesh.solver.case.spectrum import Table
 from murmesh.solver.case.wall import Given
-from murmesh.solver.errors import FallbackWarning, FormatError, RangeError, ResultError, SolveError
+from murmesh.solver.errors import FallbackWarning, FormatError, RangeError, ResultError, SolveError, ValidityWarning
 from murmesh.solver.linalg import Rslab, analyse
 from murmesh.solver.result import read_result, write_result
 from murmesh.solver.sweep import Journal, Progress, solve
@@ -136,6 +136,14 @@ def test_a_short_table_stops_before_any_factorisation(monkeypatch: pytest.Monkey
     monkeypatch.setattr(Rslab, "factor", lambda *_: pytest.fail("factorised"))
     with pytest.raises(RangeError, match=r"holds 10 .. 90 Hz, but 100 Hz is asked"):
         solve(_case(end=90.0))
+
+
+def test_a_wall_that_creates_sound_is_said() -> None:
+    case = _case(2)
+    active = Impedance(Given(-2.0 + 1.0j))
+    surfaces = tuple(s.with_(boundary=active) if s.name == "x1" else s for s in case.surfaces)
+    with pytest.warns(ValidityWarning, match=r"surface/x1: its law creates sound from 60 to 110 Hz .* Re Z < 0"):
+        solve(case.with_(surfaces=surfaces))
 
 
 def test_superlu_gives_the_same_numbers() -> None:
