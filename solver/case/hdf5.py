@@ -114,7 +114,7 @@ def read_case_group(group: h5py.Group) -> Case:
 
 def check_header(group: h5py.Group, expected: str, version: int) -> None:
     """FormatError unless the group says that it is `expected` of at most `version`."""
-    found = group.attrs.get("format")
+    found = _attribute(group.attrs.get("format"))
     if found != expected:
         raise FormatError(f"group '{group.name}' is not a {expected}: its attribute 'format' is {found!r}")
     number = int(group.attrs.get("version", 0))
@@ -162,8 +162,9 @@ def _read_tree(group: h5py.Group) -> Tree:
 
 
 def _attribute(value: Any) -> Any:
+    """An attribute as plain Python; texts of fixed length, as many programs write them, come as bytes."""
     if isinstance(value, np.ndarray):
-        return [item.decode() if isinstance(item, bytes) else item for item in value.tolist()]
+        return [_attribute(item) for item in value.tolist()]
     if isinstance(value, np.generic):
-        return value.item()
-    return value
+        value = value.item()
+    return value.decode() if isinstance(value, bytes) else value

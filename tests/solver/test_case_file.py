@@ -90,6 +90,16 @@ def test_a_file_written_by_hand(tmp_path: Path) -> None:
     assert case.mesh.tets.dtype == np.int64
 
 
+def test_texts_of_fixed_length_are_read(tmp_path: Path) -> None:
+    """Programs in C or Fortran write texts as fixed-length strings."""
+    path = tmp_path / "case.h5"
+    write_case(_case(), path)
+    with h5py.File(path, "r+") as file:
+        file.attrs["format"] = np.bytes_(b"murmesh case")
+        file["regions/air/medium"].attrs["kind"] = np.bytes_(b"fluid")
+    assert read_case(path).checksum == _case().checksum
+
+
 def _broken(path: Path, change: Any) -> Path:
     write_case(_case(), path)
     with h5py.File(path, "r+") as file:
