@@ -3,7 +3,8 @@
     K phi = w^2 M phi,   K = sum_r K_r / rho_r,   M = sum_r M_r / (rho_r c_r^2)
 
 Walls are hard, losses are left out, media take the real part of their values at the frequency looked at; surfaces of
-kind `pressure` keep p = 0. Shapes are normalised to a largest value of 1 at the vertices.
+kind `pressure` keep p = 0. Shapes are normalised to a largest value of 1 at the vertices, edge middles and centres of
+the elements (a coarse mesh may have all its vertices on a shape's nodes).
 """
 
 from __future__ import annotations
@@ -15,7 +16,7 @@ import numpy.typing as npt
 import scipy.sparse as sp
 import scipy.sparse.linalg as spla
 
-from murmesh.solver.assembly import volume_matrices
+from murmesh.solver.assembly import evaluate, volume_matrices
 from murmesh.solver.case.model import Case
 from murmesh.solver.errors import CaseError
 from murmesh.solver.linalg import analyse
@@ -45,8 +46,24 @@ def modes(case: Case, count: int, near: float = 0.0, order: int = 0) -> Modes:
     values, vectors = _nearest(inner[0], inner[1], count, near)
     shapes = np.zeros((space.dofs.n_dofs, count))
     shapes[free] = vectors
+    return Modes(space, _hertz(values), shapes / _peaks(space, shapes))
+
+
+def _hertz(values: Floats) -> Floats:
+    return np.asarray(np.sqrt(np.maximum(values, 0.0)) / (2 * np.pi))
+
+
+def _peaks(space: Space, shapes: Floats) -> Floats:
+    """Largest |p| of every shape at the vertices, edge middles and centres of the elements, (m,)."""
+    corners = np.eye(4)
+    middles = [(corners[a] + corners[b]) / 2 for a in range(4) for b in range(a)]
+    places = np.vstack([*middles, corners.mean(axis=0)])
+    tets = np.arange(len(space.geometry.tets))
     peaks = np.abs(shapes[: space.topology.n_vertices]).max(axis=0)
-    return Modes(space, np.sqrt(np.maximum(values, 0.0)) / (2 * np.pi), shapes / np.where(peaks > 0, peaks, 1.0))
+    for place in places:
+        rows = evaluate(space.geometry, space.dofs, tets, np.tile(place, (len(tets), 1)))
+        peaks = np.maximum(peaks, np.abs(rows @ shapes).max(axis=0))
+    return np.asarray(np.where(peaks > 0, peaks, 1.0))
 
 
 def _matrices(space: Space, f: float) -> tuple[sp.csr_matrix, sp.csr_matrix]:
@@ -61,7 +78,11 @@ def _matrices(space: Space, f: float) -> tuple[sp.csr_matrix, sp.csr_matrix]:
 
 
 def _nearest(stiffness: sp.csc_matrix, mass: sp.csc_matrix, count: int, near: float) -> tuple[Floats, Floats]:
-    """Shift-invert Lanczos around w^2, a little beside it so that the shifted matrix is never singular."""
+    """Shift-invert Lanczos around w^2, a little beside it so that the shifted matrix is never singular.
+
+    It finds what is nearest in w^2. What is nearest in frequency is among the modes up to near + its farthest distance,
+    so more are found until they reach that far.
+    """
     shift = (2 * np.pi * near) ** 2
     scale = stiffness.diagonal().sum() / mass.diagonal().sum()
     shift = shift * (1 + 1e-4) if shift > 0 else -1e-6 * scale
@@ -71,6 +92,13 @@ def _nearest(stiffness: sp.csc_matrix, mass: sp.csc_matrix, count: int, near: fl
     inverse = spla.LinearOperator(
         stiffness.shape, matvec=lambda b: factor.solve(b.reshape(-1, 1).astype(np.complex128)).real.ravel()
     )
-    values, vectors = spla.eigsh(stiffness, count, mass, sigma=shift, OPinv=inverse, v0=np.ones(stiffness.shape[0]))
-    order = np.argsort(values)
-    return values[order], vectors[:, order]
+    found = count
+    while True:
+        values, vectors = spla.eigsh(stiffness, found, mass, sigma=shift, OPinv=inverse, v0=np.ones(stiffness.shape[0]))
+        away = np.abs(_hertz(values) - near)
+        chosen = np.argsort(away, kind="stable")[:count]
+        top = (2 * np.pi * (near + away[chosen[-1]])) ** 2
+        if top - shift <= np.abs(values - shift).max() * (1 + 1e-9) or found == stiffness.shape[0] - 2:
+            order = chosen[np.argsort(values[chosen])]
+            return values[order], vectors[:, order]
+        found = min(2 * found, stiffness.shape[0] - 2)

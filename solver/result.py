@@ -62,7 +62,7 @@ class Line:
 
     @classmethod
     def load(cls, path: Path) -> Line:
-        with np.load(path) as held:
+        with path.open("rb") as stream, np.load(stream) as held:
             count = sum(1 for key in held.files if key.endswith("c"))
             responses = []
             for i in range(count):
@@ -235,7 +235,7 @@ def read_result(path: str | Path) -> Result:
             return _read(file)
         except MurmeshError as error:
             raise type(error)(f"{path}: {error}") from None
-        except (KeyError, OSError, RuntimeError) as error:
+        except (KeyError, OSError, RuntimeError, ValueError, TypeError, AttributeError) as error:
             raise FormatError(f"{path}: the result is incomplete ({error}); solve the case again") from None
 
 
@@ -271,7 +271,7 @@ def _read(file: h5py.File) -> Result:
         group = file["load_cases"][key]
         arrays = [group[name][()] for name in _ARRAYS]
         held.append(LoadCaseResult(str(group.attrs["name"]), text(group.attrs["loads"]), *arrays))
-    return Result(
+    result = Result(
         case,
         int(file.attrs["order"]),
         file["frequencies"][()],
@@ -281,3 +281,31 @@ def _read(file: h5py.File) -> Result:
         tuple(held),
         provenance,
     )
+    _check(result)
+    return result
+
+
+def _check(result: Result) -> None:
+    """Raise FormatError where arrays do not belong to the case or to each other."""
+    case = result.case
+    if not np.array_equal(result.frequencies, case.sweep.frequencies):
+        raise FormatError("frequencies are not those of the case's sweep; solve it again")
+    if [(held.name, held.loads) for held in result.load_cases] != [
+        (load_case.name, tuple(load.name for load in load_case.loads)) for load_case in case.load_cases
+    ]:
+        raise FormatError("load_cases are not those of the case; solve it again")
+    lines, samples, labels = len(result.frequencies), len(result.sample_receiver), len(result.power_labels)
+    for index, held in enumerate(result.load_cases):
+        loads = len(held.loads)
+        shapes = (lines, samples, loads), (lines, loads), (lines, labels), (lines,), (lines,)
+        for name, shape in zip(_ARRAYS, shapes, strict=False):
+            if np.shape(getattr(held, name)) != shape:
+                raise FormatError(
+                    f"load_cases/{index:04d}/{name} has shape {np.shape(getattr(held, name))}, expected {shape}; "
+                    "solve the case again"
+                )
+        if held.fields.ndim != 3 or len(held.fields) != len(result.field_frequencies):
+            raise FormatError(
+                f"load_cases/{index:04d}/fields has shape {held.fields.shape}, expected one block for each of the "
+                f"{len(result.field_frequencies)} field frequencies; solve the case again"
+            )

@@ -167,9 +167,36 @@ def _front_first(
         else:
             a, b, c = (case.mesh.nodes[triangles[:, i]] for i in range(3))
             looks = np.cross(b - a, c - a)
-        swap = np.einsum("ij,ij->i", outward, looks) > 0
+        along = np.einsum("ij,ij->i", outward, looks)
+        swap = along > 0
+        if _front_matters(case, sheet, name):
+            front_looks = np.where(swap[:, None], outward, -outward)
+            _require_one_front(case, triangles, front_looks, name, sideways=bool(np.all(np.abs(along) < 1e-6)))
     flipped = np.where(swap[:, None], tet[:, ::-1], tet), np.where(swap[:, None], face[:, ::-1], face)
     return flipped
+
+
+def _front_matters(case: Case, sheet: Sheet, name: str) -> bool:
+    """Whether exchanging front and back would change anything."""
+    loaded = any(load.acts_on == name for load_case in case.load_cases for load in load_case.loads)
+    return loaded or not all(side.hard for side in sheet.sides)
+
+
+def _require_one_front(case: Case, triangles: Ints, looks: Floats, name: str, sideways: bool) -> None:
+    """Neighbours whose fronts look the same way run through their common edge in opposite directions."""
+    a, b, c = (case.mesh.nodes[triangles[:, i]] for i in range(3))
+    turn = np.einsum("ij,ij->i", np.cross(b - a, c - a), looks) < 0
+    corners = np.where(turn[:, None], triangles[:, [0, 2, 1]], triangles[:, :3])
+    runs = corners[:, [[0, 1], [1, 2], [2, 0]]].reshape(-1, 2)
+    _, edge, count = np.unique(np.sort(runs, axis=1), axis=0, return_inverse=True, return_counts=True)
+    forward = np.bincount(edge.ravel(), weights=runs[:, 0] < runs[:, 1])
+    mixed = int(np.count_nonzero((count == 2) & (forward != 1)))
+    if mixed or sideways:
+        what = f"changes sides along {mixed} of its edges" if mixed else "cannot be told from its front_direction"
+        raise MeshError(
+            f"surfaces/{name}: the front of the sheet {what}, so a motion or the kinds of its sides would be mixed up; "
+            "give front_region, or a front_direction that all of it faces, or orient its triangles alike"
+        )
 
 
 def _sheet_pairs(case: Case, index: int, tet: Ints, face: Ints) -> list[SheetPair]:

@@ -13,6 +13,7 @@ import hashlib
 import shutil
 import time
 import warnings
+import zipfile
 from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -82,8 +83,10 @@ class Journal:
 
     @classmethod
     def open(cls, folder: Path, case: Case, order: int, size: int) -> Journal:
-        """Open or make the folder; ResultError if it belongs to another case."""
+        """Open or make the folder; ResultError if it belongs to another case, or is a file."""
         folder = Path(folder)
+        if folder.is_file():
+            raise ResultError(f"'{folder}' is a file, but finished lines need a folder of their own; remove or rename it")
         key = hashlib.sha256(f"{case.checksum} order {order} size {size}".encode()).hexdigest()
         stamp = folder / "case"
         if stamp.is_file() and stamp.read_text() != key:
@@ -106,9 +109,13 @@ class Journal:
     def _path(self, index: int) -> Path:
         return self.folder / f"line{index:06d}.npz"
 
-    def read(self, index: int) -> Line | None:
-        path = self._path(index)
-        return Line.load(path) if path.is_file() else None
+    def read(self, index: int, frequency: float) -> Line | None:
+        """A finished line; None where it is not there or not whole (a disk that filled up, a machine that went off)."""
+        try:
+            line = Line.load(self._path(index))
+        except (OSError, EOFError, ValueError, KeyError, zipfile.BadZipFile):
+            return None
+        return line if line.frequency == frequency else None
 
     def write(self, index: int, line: Line) -> None:
         part = self._path(index).with_suffix(".part")
@@ -221,7 +228,7 @@ def _run(engine: _Engine, frequencies: Floats, book: Journal | None, report: Rep
     lines: list[Line] = []
     resumed, started = 0, time.monotonic()
     for index, f in enumerate(frequencies):
-        line = book.read(index) if book else None
+        line = book.read(index, float(f)) if book else None
         if line is not None:
             resumed += 1
         else:

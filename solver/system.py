@@ -297,6 +297,7 @@ def _loaded_sides(space: Space, load: Load) -> tuple[Side, ...]:
 
 def _velocity_terms(space: Space, load: SurfaceVelocity, uncovered: dict[str, float]) -> list[LoadTerm]:
     terms = []
+    bare = {1: 0.0, -1: 0.0}
     for side in _loaded_sides(space, load):
         if not (side.boundary.moves or side.boundary.hard):
             continue  # an absorbing side of a sheet does not move with it
@@ -306,9 +307,10 @@ def _velocity_terms(space: Space, load: SurfaceVelocity, uncovered: dict[str, fl
             return np.asarray((-2j * np.pi * f * side.sign * drive)[:, None] * load.motion.outward(f))
 
         vectors, missed = _shape_vectors(space, side, load.motion)
-        if missed > 0:
-            uncovered[load.name] = uncovered.get(load.name, 0.0) + missed
+        bare[side.sign] += missed
         terms.append(LoadTerm(load.name, vectors, psi))
+    if max(bare.values()) > 0:
+        uncovered[load.name] = max(bare.values())  # front and back of a sheet are one area
     return terms
 
 
@@ -335,12 +337,24 @@ def _column(vector: npt.NDArray[Any]) -> sp.csc_matrix:
 
 
 def _pressure_terms(space: Space, load: SurfacePressure) -> list[LoadTerm]:
-    """A uniform pressure is carried by the vertex unknowns alone: they sum to one, the others vanish at vertices."""
+    """A uniform pressure is carried by the vertex unknowns alone: they sum to one, the others vanish at vertices.
+
+    Where surfaces of kind `pressure` meet, each gives its part: the line between them takes the mean of their pressures.
+    """
+    meeting = np.zeros(space.dofs.n_dofs)
+    for index in {side.surface for side in space.sides if side.boundary.fixes_pressure}:
+        meeting += _on_vertices(space, space.sides_of(index))
+    ones = _on_vertices(space, _loaded_sides(space, load)) / np.maximum(meeting, 1.0)
+    return [LoadTerm(load.name, _column(ones), lambda f: as_spectrum(load.pressure).at(f)[:, None], fixes=True)]
+
+
+def _on_vertices(space: Space, sides: tuple[Side, ...]) -> Floats:
+    """One at the vertex unknowns of some sides, (n,)."""
     ones = np.zeros(space.dofs.n_dofs)
-    for side in _loaded_sides(space, load):
+    for side in sides:
         dofs = face_dofs(space.dofs, side.tet, side.face)
         ones[dofs[dofs < space.topology.n_vertices]] = 1.0
-    return [LoadTerm(load.name, _column(ones), lambda f: as_spectrum(load.pressure).at(f)[:, None], fixes=True)]
+    return ones
 
 
 def _wave_terms(space: Space, load: IncomingWave) -> list[LoadTerm]:

@@ -12,7 +12,8 @@ from itertools import pairwise
 import numpy as np
 import numpy.typing as npt
 import pytest
-from scipy.linalg import expm
+from numpy.polynomial import legendre
+from scipy.linalg import block_diag, eig, expm
 
 from cases import case_of
 from meshes import TestMesh, extrude, faces_where, quadratic
@@ -28,19 +29,14 @@ PIPE, CHAMBER = 0.024295, 0.07659  # radii of C02 and C03 [m]
 LEAD = 0.06  # pipe before and behind: higher modes of the pipe decay by e^-9 over it
 
 
-def _sector(radii: Sequence[float]) -> tuple[Floats, npt.NDArray[np.int64]]:
-    """A sixth of a disc: rings of k + 1 nodes at the given radii. Its straight sides are rigid planes of symmetry."""
-    rings = [np.zeros((1, 2))]
-    for k, radius in enumerate(radii, start=1):
-        angle = np.pi / 3 * np.arange(k + 1) / k
-        rings.append(radius * np.column_stack([np.cos(angle), np.sin(angle)]))
-    start = np.cumsum([0, *(len(ring) for ring in rings)])
-    triangles = []
-    for k in range(1, len(rings)):
-        inner, outer = start[k - 1], start[k]
-        triangles += [[inner + i, outer + i, outer + i + 1] for i in range(k)]
-        triangles += [[inner + i, outer + i + 1, inner + i + 1] for i in range(k - 1)]
-    return np.concatenate(rings), np.array(triangles)
+def _wedge(radii: Sequence[float], angle: float = np.pi / 9) -> tuple[Floats, npt.NDArray[np.int64]]:
+    """A slice of a disc, one cell wide; its straight sides are rigid planes of symmetry, as only round waves occur."""
+    rays = np.array([[1.0, 0.0], [np.cos(angle), np.sin(angle)]])
+    points = np.concatenate([np.zeros((1, 2)), *(radius * rays for radius in radii)])
+    triangles = [[0, 1, 2]]
+    for inner in range(1, 2 * len(radii) - 1, 2):
+        triangles += [[inner, inner + 2, inner + 3], [inner, inner + 3, inner + 1]]
+    return points, np.array(triangles)
 
 
 def _graded(start: float, stop: float, size: float, fine: float) -> Floats:
@@ -59,7 +55,7 @@ def silencer(
     """Pipe, chamber, pipe along z; `sheets` are stretches of z where the pipe's wall goes on inside the chamber."""
     stops = sorted({*ends, *chamber, *(z for pair in sheets for z in pair)})
     zs = np.unique(np.round(np.concatenate([_graded(a, b, size, fine) for a, b in pairwise(stops)]), 12))
-    full = extrude(*_sector(radii), zs)
+    full = extrude(*_wedge(radii), zs)
     centre = full.centroids
     keep = ((centre[:, 2] > chamber[0]) & (centre[:, 2] < chamber[1])) | (np.hypot(*centre[:, :2].T) < pipe)
     tets = full.tets[keep]
@@ -122,29 +118,31 @@ def transmission_loss(mesh: TestMesh, frequencies: Floats, order: int, kinds: di
 RADII = (0.5 * PIPE, 0.9 * PIPE, PIPE, 1.15 * PIPE, 1.8 * PIPE, CHAMBER)
 
 
-@pytest.mark.parametrize("ratio", [0.205, 1.0])
+@pytest.mark.parametrize("ratio", [0.205, 1.0, 1.846])
 def test_expansion_chamber_c02(ratio: float) -> None:
     table = read_csv_reference("C02_expansion_chamber_TL.csv")
-    rows = np.flatnonzero(table["L_over_D"] == ratio)[[0, 2, 4, 6, 8, 11]]
+    rows = np.flatnonzero(table["L_over_D"] == ratio)
+    assert len(rows) == 12
     length = ratio * 2 * CHAMBER
     mesh = silencer(RADII, PIPE, (0.0, length), (-LEAD, length + LEAD), 0.05, 0.005)
     found = transmission_loss(mesh, table["f_Hz"][rows], 5)
-    assert np.abs(found - table["TL_exact_dB"][rows]).max() < 0.1
+    assert np.abs(found - table["TL_exact_dB"][rows]).max() < 0.05
     # the plane-wave formula is not what is met
     assert np.abs(found - table["TL_plane_dB"][rows]).max() > 1.0
 
 
 def test_extended_inlet_and_outlet_c03() -> None:
-    """Thin extensions as rigid sheets. The hardest lines are among these: 600 Hz and 1800 Hz lie beside sharp peaks."""
+    """Thin extensions as rigid sheets. The hardest lines are 600 Hz and 1800 Hz, beside sharp peaks."""
     table = read_csv_reference("C03_extended_inlet_outlet_TL.csv")
-    rows = np.array([0, 2, 3, 6, 9, 11])
     length, inlet, outlet = 0.2823, 0.131, 0.061
     sheets = [(0.0, inlet), (length - outlet, length)]
     radii = (0.5 * PIPE, 0.93 * PIPE, PIPE, 1.07 * PIPE, 1.6 * PIPE, CHAMBER)
     mesh = silencer(radii, PIPE, (0.0, length), (-LEAD, length + LEAD), 0.05, 0.001, sheets)
     rigid = Sheet(Rigid(), Rigid())
-    found = transmission_loss(mesh, table["f_Hz"][rows], 5, {"sheet_0": rigid, "sheet_1": rigid})
-    assert np.all(np.abs(found - table["TL_dB"][rows]) < np.maximum(0.05, 3 * table["err_dB"][rows]))
+    found = transmission_loss(mesh, table["f_Hz"], 5, {"sheet_0": rigid, "sheet_1": rigid})
+    error = np.abs(found - table["TL_dB"])
+    assert len(error) == 12 and np.all(error < np.maximum(0.05, 3 * table["err_dB"]))
+    assert error.max() < 0.5
 
 
 TUBE, SHELL, LENGTH = 0.0254, 0.0381, 0.0667  # radii and length of C04 [m]
@@ -173,24 +171,60 @@ def _two_duct_loss(f: Floats, zeta: npt.NDArray[np.complex128]) -> Floats:
     return np.array(loss)
 
 
-def test_perforated_tube_c04() -> None:
-    """In three dimensions the air that turns from tube to annulus adds a mass that the one-dimensional model lacks.
+def _radial(low: float, high: float, count: int) -> tuple[Floats, Floats, Floats]:
+    """Legendre polynomials on (low, high): int r q p dr, int r q' p' dr, and their values at both ends."""
+    x, weight = legendre.leggauss(count + 2)
+    half = (high - low) / 2
+    value = legendre.legvander(x, count - 1)
+    slope = np.stack([legendre.legval(x, legendre.legder(one)) for one in np.eye(count)], axis=1) / half
+    weight = (weight * half * (low + half * (x + 1)))[:, None]
+    ends = legendre.legvander(np.array([-1.0, 1.0]), count - 1)
+    return value.T @ (weight * value), slope.T @ (weight * slope), ends
 
-    For a uniform radial flow v at r = a the wall's pressure exceeds the section's mean by i k rho c v times a/4 in the
-    tube, and by i k rho c v times the length below in the annulus a < r < b (both by integrating the radial momentum).
+
+def _axial_waves(k: float, mass: Floats, stiffness: npt.NDArray[np.complex128]) -> tuple[np.ndarray, np.ndarray]:
+    """Wave numbers k_z (decaying or outgoing as e^{-i k_z z}) and radial shapes: S v = (k^2 - k_z^2) M v."""
+    squares, shapes = eig(k**2 * mass - stiffness, mass)
+    k_z = np.sqrt(squares.astype(np.complex128))
+    return np.where(k_z.imag > 1e-9 * k, -k_z, k_z), shapes
+
+
+def _matched_loss(k: float, zeta: complex, count: int = 20) -> float:
+    """The same tube in full: all round waves of tube and annulus, exact along z, matched to those of the pipes.
+
+    Across the wall u = (p_inner - p_outer)/Z_t; at both ends p and dp/dz meet the pipe's, and dp/dz = 0 on the annulus.
+    """
+    (inner, own, edge), (outer, other, rim) = _radial(0.0, TUBE, count), _radial(TUBE, SHELL, count)
+    jump = np.concatenate([edge[1], -rim[0]])
+    mass, take = block_diag(inner, outer), np.eye(count, 2 * count)
+    stiffness = block_diag(own, other) + 1j * k / zeta * TUBE * np.outer(jump, jump)
+    pipe_k, pipe = _axial_waves(k, inner, own)
+    k_z, shapes = _axial_waves(k, mass, stiffness)
+    over = np.exp(-1j * k_z * LENGTH)
+    # dp/dz = i q (p - 2 p_in) before, -i q p behind, with q the pipe's wave numbers as an operator
+    leave = 1j * take.T @ inner @ (pipe * pipe_k) @ np.linalg.inv(pipe) @ take @ shapes
+    slope = mass @ (shapes * (-1j * k_z))
+    system = np.block([[slope - leave, -(slope + leave) * over], [(slope + leave) * over, leave - slope]])
+    drive = np.concatenate([-2j * k * take.T @ inner[:, 0], np.zeros(2 * count)])
+    forth, back = np.split(np.linalg.solve(system, drive), 2)
+    behind = take @ shapes @ (over * forth + back)
+    return float(-20 * np.log10(abs(inner[0] @ behind / inner[0, 0])))
+
+
+def test_perforated_tube_c04() -> None:
+    """The published model has plane waves only; the air that turns from tube to annulus adds a mass that it lacks.
+
+    That moves the peaks (2.25 kHz to 2 kHz), so above 1.3 kHz the solution is held against all round waves instead.
     """
     table = read_csv_reference("C04_concentric_tube_resonator.csv")
-    f = table["f"][[1, 6, 9, 12, 16, 19, 24]]
+    f = table["f"]
     zeta = PLATE.impedance(f, Fluid(1.21, 343.0)) / (1.21 * 343.0)
-    published = np.interp(f, table["f"], table["TL_dB"])
-    assert np.abs(_two_duct_loss(f, zeta) - published).max() < 0.01  # the model is the published one
+    assert np.abs(_two_duct_loss(f, zeta) - table["TL_dB"]).max() < 0.01  # the wall and the model are the published ones
     mesh = silencer(
         (0.5 * TUBE, 0.9 * TUBE, TUBE, 1.1 * TUBE, SHELL), TUBE, (0.0, LENGTH), (-LEAD, LENGTH + LEAD), 0.03, 0.004,
         [(0.0, LENGTH)],
     )  # fmt: skip
     found = transmission_loss(mesh, f, 4, {"sheet_0": Sheet(Rigid(), Rigid(), PLATE)})
-    a2, b2 = TUBE**2, SHELL**2
-    annulus = TUBE / (b2 - a2) * (2 * b2 / (b2 - a2) * (b2 * np.log(SHELL / TUBE) / 2 - (b2 - a2) / 4) - (b2 - a2) / 4)
-    with_mass = _two_duct_loss(f, zeta + 2j * np.pi * f / 343.0 * (TUBE / 4 + annulus))
-    assert np.abs(found - with_mass).max() < 0.3
-    assert np.abs(found - published)[f <= 1300].max() < 1.0
+    assert np.abs(found - table["TL_dB"])[f <= 1300].max() < 1.0
+    matched = [_matched_loss(2 * np.pi * line / 343.0, z) for line, z in zip(f, zeta, strict=True)]
+    assert np.abs(found - matched).max() < 0.02

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from cases import RHO_C, case_of, lossy, monopole
-from meshes import box
+from meshes import TestMesh, box
 from murmesh.solver.case.boundary import Boundary, Impedance, Pressure, Vibrating
 from murmesh.solver.case.load import (
     Combination,
@@ -24,7 +24,7 @@ from murmesh.solver.case.wall import Given
 from murmesh.solver.contribution import participation, rank
 from murmesh.solver.errors import CaseError, ResultError
 from murmesh.solver.levels import third_octaves
-from murmesh.solver.receiver_points import locate_receivers
+from murmesh.solver.receiver_points import locate_receivers, sphere_points
 from murmesh.solver.result import Result
 from murmesh.solver.space import discretise
 from murmesh.solver.sweep import solve
@@ -160,6 +160,41 @@ def test_prescribed_pressure_drives_a_duct() -> None:
     assert np.abs(lined.imbalance()).max() < 1e-9
 
 
+def _split_end() -> TestMesh:
+    """A box whose end x0 is two surfaces, "low" and "high", that meet along a line."""
+    mesh = box(3, 2, 2, SIZE)
+    end = mesh.surfaces["x0"]
+    low = mesh.nodes[end].mean(axis=1)[:, 1] < SIZE[1] / 2
+    rest = {name: triangles for name, triangles in mesh.surfaces.items() if name != "x0"}
+    return TestMesh(mesh.nodes, mesh.tets, rest | {"low": end[low], "high": end[~low]})
+
+
+def test_pressures_that_meet_along_a_line() -> None:
+    """Two halves at the same pressure are one surface: the line between them is not driven twice."""
+    f, ear, pressure = [100.0, 250.0], {"ear": EAR}, 1.0 - 0.5j
+    wall: dict[str, Boundary] = {"y1": Impedance(Given(2.0 + 1.0j))}
+    whole = solve(case_of(box(3, 2, 2, SIZE), {"x0": Pressure()} | wall, [SurfacePressure("x0", pressure)], f, ear, order=4))
+    loads = [SurfacePressure("low", pressure), SurfacePressure("high", pressure)]
+    ends: dict[str, Boundary] = {"low": Pressure(), "high": Pressure()}
+    halves = solve(case_of(_split_end(), ends | wall, loads, f, ear, order=4))
+    assert np.allclose(_pressure(halves), _pressure(whole), rtol=1e-9)
+    assert halves.load_cases[0].closure.max() < 1e-9
+    assert np.abs(halves.imbalance()).max() < 1e-9
+    assert np.allclose(halves.load_cases[0].absorbed, whole.load_cases[0].absorbed, rtol=1e-9)
+
+
+def test_contributions_of_pressures_and_velocities() -> None:
+    """Every contribution is that of its load alone, the others held at zero; their input is what the wall takes."""
+    ends: dict[str, Boundary] = {"low": Pressure(), "high": Pressure(), "y1": Impedance(Given(2.0 + 1.0j)), "z0": Vibrating()}
+    loads = [SurfacePressure("low", 1.0), SurfacePressure("high", -0.3j), SurfaceVelocity("z0", Uniform(2e-3 + 0j))]
+    mesh, f, ear = _split_end(), [100.0, 250.0], {"ear": EAR}
+    result = solve(case_of(mesh, ends, loads, f, ear, order=4))
+    alone = [_pressure(solve(case_of(mesh, ends, [load], f, ear, order=4))) for load in loads]
+    assert np.allclose(result.load_cases[0].contributions[:, 0], np.stack(alone, axis=1), rtol=1e-9)
+    assert result.load_cases[0].closure.max() < 1e-9
+    assert np.abs(result.imbalance()).max() < 1e-9
+
+
 def test_several_load_cases_in_one_sweep() -> None:
     case = _case(MOTIONS)
     second = LoadCase("idle", (monopole((0.2, 0.2, 0.2)),), spectrum="tones")
@@ -208,6 +243,40 @@ def test_averaging_sphere_is_the_mean_over_the_ball() -> None:
     assert result.mean_square("ear")[0] == pytest.approx(mean, rel=0.01)
     assert abs(result.mean_square("point")[0] / mean - 1) > 0.01
     assert np.isnan(result.pressure_at(np.array([[9.0, 0, 0]]), 300.0)).all()
+
+
+def test_averaging_sphere_is_exact_for_cubic_functions() -> None:
+    """Means over a ball of radius a about c: of x its c_x, of x^2 c_x^2 + a^2/5, of x^2 y (c_x^2 + a^2/5) c_y."""
+    points, weights = sphere_points(Receiver("ear", EAR, 0.1))
+    x, y, z = points.T
+    spread = EAR[0] ** 2 + 0.1**2 / 5
+    assert weights.sum() == pytest.approx(1.0)
+    for values, mean in (
+        (x, EAR[0]), (x**2, spread), (x * y, EAR[0] * EAR[1]), (x**2 * y, spread * EAR[1]),
+        (z**3, EAR[2] ** 3 + 3 * EAR[2] * 0.1**2 / 5),
+    ):  # fmt: skip
+        assert weights @ values == pytest.approx(mean, rel=1e-12)
+    assert abs(weights @ x**4 - (EAR[0] ** 4 + 6 * EAR[0] ** 2 * 0.1**2 / 5 + 3 * 0.1**4 / 35)) > 1e-6
+    alone, one = sphere_points(Receiver("ear", EAR))
+    assert np.array_equal(alone, [EAR]) and np.array_equal(one, [1.0])
+
+
+@pytest.mark.parametrize(("form", "value"), [("peak", 2e-3), ("rms", np.sqrt(2) * 1e-3)])
+def test_autospectra_as_amplitudes(form: str, value: float) -> None:
+    motion = Autospectrum(value + 0j, form=form)
+    found = solve(_case({"x0": motion}, [120.0], combination=Incoherent())).mean_square("ear")
+    assert found == pytest.approx(np.abs(_pressure(solve(_case({"x0": Uniform(2e-3 + 0j)}, [120.0])))) ** 2 / 2)
+
+
+def test_scans_say_what_was_measured() -> None:
+    """An rms acceleration out of the fluid at scan points, interpolated over frequency, against the same velocity."""
+    y, z = (a.ravel() for a in np.meshgrid(np.linspace(0, SIZE[1], 4), np.linspace(0, SIZE[2], 4)))
+    points = np.column_stack([np.zeros(len(y)), y, z])
+    values = np.outer([1.0, 3.0], np.ones(len(points))) * 1j
+    scan = Scan(points, np.array([100.0, 300.0]), values, "acceleration", "rms", "out_of_fluid")
+    velocity = -2.0j * np.sqrt(2) / (2j * np.pi * 200.0)
+    found, exact = (_pressure(solve(_case({"x0": motion}, [200.0]))) for motion in (scan, Uniform(velocity)))
+    assert np.allclose(found, exact, rtol=1e-6)
 
 
 def test_a_single_source_leaves_silence() -> None:
