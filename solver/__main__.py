@@ -21,8 +21,7 @@ example: python -m murmesh.solver cab.h5 cab_result.h5
 
 def show(progress: Progress) -> None:
     """One line on standard error, rewritten as lines are done."""
-    left = f"{progress.seconds_left:.0f} s left"
-    sys.stderr.write(f"\r{progress.done}/{progress.total} lines, {progress.frequency:g} Hz, {left}   ")
+    sys.stderr.write(f"\r{progress.words}   ")
     if progress.done == progress.total:
         sys.stderr.write("\n")
     sys.stderr.flush()

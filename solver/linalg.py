@@ -50,13 +50,15 @@ class Analysis(Protocol):
         """Factorise the values (nnz,) of the lower triangle, in the order of the analysed pattern."""
 
 
-def analyse(lower: sp.csc_matrix, solver: str = "default", threads: int | None = None) -> Analysis:
-    """Analyse the pattern of the lower triangle (n, n, CSC, sorted indices) of a symmetric matrix.
+def analyse(lower: sp.csc_matrix, solver: str = "default", threads: int | None = None, *, symmetric: bool = True) -> Analysis:
+    """Analyse the pattern of the lower triangle (n, n, CSC, sorted indices) of a symmetric matrix, or of a whole one.
 
     `solver` is "default", "rslab" or "superlu"; `threads` defaults to the environment variable MURMESH_THREADS, or to the
     cores, at most four.
     """
     threads = threads or int(os.environ.get("MURMESH_THREADS", "0")) or min(os.cpu_count() or 1, 4)
+    if not symmetric:
+        return General(lower)
     if solver == "superlu":
         return SuperLU.analyse(lower)
     if solver not in ("default", "rslab"):
@@ -146,6 +148,18 @@ class SuperLUFactor:
         return self._solve(b, "T")
 
 
+@dataclass(frozen=True)
+class General:
+    """SuperLU of unsymmetric matrices."""
+
+    pattern: sp.csc_matrix
+    name: str = "SuperLU"
+
+    def factor(self, lower: Complex) -> Factor:
+        matrix = sp.csc_matrix((lower, self.pattern.indices, self.pattern.indptr), shape=self.pattern.shape)
+        return SuperLUFactor(spla.splu(matrix), np.arange(matrix.shape[0]))
+
+
 def _metis_order(lower: sp.csc_matrix) -> npt.NDArray[np.int64]:
     """Nested dissection; SciPy's reverse Cuthill-McKee where METIS is not installed."""
     graph = sp.tril(lower, -1)
@@ -159,16 +173,19 @@ def _metis_order(lower: sp.csc_matrix) -> npt.NDArray[np.int64]:
         return np.asarray(sp.csgraph.reverse_cuthill_mckee(graph, symmetric_mode=True), dtype=np.int64)
 
 
-def solve_refined(factor: Factor, matrix: sp.csr_matrix, b: Complex) -> tuple[Complex, float]:
-    """x with A x = b and the worst relative residual |b - A x| / |b| over the columns; refined once where needed.
+def solve_refined(factor: Factor, matrix: Any, b: Complex, *, transpose: bool = False) -> tuple[Complex, float]:
+    """x with A x = b (or A^T x = b) and the worst relative residual |b - A x| / |b| over the columns.
 
+    Refined once where needed.
     Raises SolveError if the residual stays above `GOOD_RESIDUAL`.
     """
-    x = factor.solve(b)
+    solve = factor.solve_transpose if transpose else factor.solve
+    matrix = matrix.T if transpose else matrix
+    x = solve(b)
     residual = b - matrix @ x
     worst = _worst(residual, b)
     if worst > REFINE_ABOVE:
-        x = x + factor.solve(residual)
+        x = x + solve(residual)
         worst = _worst(b - matrix @ x, b)
     if not worst < GOOD_RESIDUAL:
         raise SolveError(

@@ -8,10 +8,10 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import astuple, dataclass, fields
 from functools import cached_property
 from pathlib import Path
-from typing import IO, cast
+from typing import cast
 
 import h5py
 import numpy as np
@@ -20,65 +20,36 @@ import numpy.typing as npt
 from murmesh.solver.assembly import evaluate
 from murmesh.solver.case.hdf5 import check_header, open_hdf5, read_case_group, write_atomically, write_case_group
 from murmesh.solver.case.load import LoadCase
-from murmesh.solver.case.model import Case
+from murmesh.solver.case.model import HIGHEST_ORDER, Case
+from murmesh.solver.engine import Engine, Line
 from murmesh.solver.errors import FormatError, MurmeshError, ResultError, nearest
-from murmesh.solver.receiver_points import Samples
+from murmesh.solver.receiver_points import Samples, locate_receivers
+from murmesh.solver.reduced import Certificate, Check
 from murmesh.solver.space import Space, discretise
+from murmesh.solver.system import Projected, build_system
 
 Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 Ints = npt.NDArray[np.int64]
 FORMAT = "murmesh result"
-VERSION = 1
+VERSION = 2
 
 
 @dataclass(frozen=True, eq=False)
-class Response:
-    """One load case at one line."""
+class Model:
+    """The reduced model of a sweep: W (n, K) in single precision for fields, and the projected sum in double."""
 
-    contributions: Complex
-    supplied: Floats
-    absorbed: Floats
-    closure: float
-    field: Complex | None
-
-
-@dataclass(frozen=True, eq=False)
-class Line:
-    """One solved frequency, as the journal keeps it."""
-
-    frequency: float
-    responses: tuple[Response, ...]
-    residual: float
-
-    def save(self, stream: IO[bytes]) -> None:
-        arrays: dict[str, npt.NDArray[np.generic]] = {"head": np.array([self.frequency, self.residual])}
-        for i, r in enumerate(self.responses):
-            arrays |= {f"{i}c": r.contributions, f"{i}s": r.supplied, f"{i}a": r.absorbed}
-            arrays[f"{i}r"] = np.array([r.closure])
-            if r.field is not None:
-                arrays[f"{i}f"] = r.field
-        np.savez(stream, **arrays)  # type: ignore[arg-type]
-
-    @classmethod
-    def load(cls, path: Path) -> Line:
-        with path.open("rb") as stream, np.load(stream) as held:
-            count = sum(1 for key in held.files if key.endswith("c"))
-            responses = []
-            for i in range(count):
-                field = held[f"{i}f"] if f"{i}f" in held.files else None
-                arrays = held[f"{i}c"], held[f"{i}s"], held[f"{i}a"]
-                responses.append(Response(*arrays, float(held[f"{i}r"][0]), field))
-            f, worst = (float(v) for v in held["head"])
-        return cls(f, tuple(responses), worst)
+    basis: npt.NDArray[np.float32]
+    projected: Projected
 
 
 @dataclass(frozen=True, eq=False)
 class LoadCaseResult:
     """One load case over the sweep.
 
-    contributions (nf, samples, loads) [Pa]; supplied (nf, loads) and absorbed (nf, labels) [W per line]; residual and
-    closure (nf,); fields (k, unknowns, r) at the field frequencies: r solutions whose mean squares add.
+    contributions (nf, samples, loads) [Pa]; supplied (nf, loads) and absorbed (nf, labels) [W per line]; residual (nf,),
+    nan on lines of a reduced model; closure (nf,); fields (k, unknowns, r) at the field frequencies: r solutions whose
+    mean squares add (none where the result holds a model, which gives the field of any line).
     """
 
     name: str
@@ -96,29 +67,32 @@ class Result:
     """A solved case."""
 
     case: Case
-    order: int
+    orders: npt.NDArray[np.int8]
     frequencies: Floats
     sample_receiver: Ints
     sample_weight: Floats
     power_labels: tuple[str, ...]
     load_cases: tuple[LoadCaseResult, ...]
     provenance: dict[str, str]
+    model: Model | None = None
+    certificate: Certificate | None = None
 
     @classmethod
     def of(
         cls,
-        case: Case,
-        order: int,
+        space: Space,
         samples: Samples,
         labels: tuple[str, ...],
         lines: list[Line],
         provenance: dict[str, str],
+        model: Model | None = None,
+        certificate: Certificate | None = None,
     ) -> Result:
         """Stack the lines of a sweep."""
-        gathered = []
+        case, gathered = space.case, []
         for i, load_case in enumerate(case.load_cases):
             rows = [line.responses[i] for line in lines]
-            fields = [row.field for row in rows if row.field is not None]
+            fields = [row.field for row in rows if row.field.size] if model is None else []
             gathered.append(
                 LoadCaseResult(
                     load_case.name,
@@ -132,7 +106,13 @@ class Result:
                 )
             )
         frequencies = np.array([line.frequency for line in lines])
-        return cls(case, order, frequencies, samples.receiver, samples.weight, labels, tuple(gathered), provenance)
+        head = case, space.dofs.orders.astype(np.int8), frequencies, samples.receiver, samples.weight, labels
+        return cls(*head, tuple(gathered), provenance, model, certificate)
+
+    @property
+    def order(self) -> int:
+        """The highest order of an element."""
+        return int(self.orders.max())
 
     def load_case(self, name: str = "") -> LoadCaseResult:
         """The load case called `name`; the first one if no name is given."""
@@ -186,21 +166,52 @@ class Result:
     @cached_property
     def space(self) -> Space:
         """The discretised case, rebuilt on first use (for maps and cuts)."""
-        return discretise(self.case, self.order)
+        return discretise(self.case, orders=self.orders.astype(np.int64))
 
     @property
     def field_frequencies(self) -> Floats:
-        """Lines whose whole field is kept."""
+        """The lines named for maps; every line where none is named and a model gives them all."""
         wanted = self.case.sweep.field_frequencies
+        if self.model is not None and not len(wanted):
+            return self.frequencies
         return self.frequencies[[np.any(np.isclose(f, wanted, rtol=1e-9)) for f in self.frequencies]]
 
     def field(self, frequency: float, load_case: str = "") -> Complex:
-        """Unknowns (n, r) of the field kept nearest to `frequency`; ResultError if none is kept within 0.1 %."""
+        """Unknowns (n, r) of the field at any frequency of the sweep's band from the model; without a model, of the field
+        kept nearest to it.
+
+        Raises: ResultError outside the band; without a model, where none is kept within 0.1 %.
+        """
+        if self.model is not None:
+            return self._modelled(self.model, frequency, load_case)
         lines = self.field_frequencies
         if not len(lines) or np.abs(lines - frequency).min() > 1e-3 * frequency:
             kept = ", ".join(f"{f:g}" for f in lines) or "none"
             raise ResultError(f"no field is kept at {frequency:g} Hz (kept: {kept} Hz); add it to field_frequencies")
         return np.asarray(self.load_case(load_case).fields[int(np.abs(lines - frequency).argmin())])
+
+    def _modelled(self, model: Model, frequency: float, load_case: str) -> Complex:
+        low, high = self.frequencies[0], self.frequencies[-1]
+        if not low * (1 - 1e-9) <= frequency <= high * (1 + 1e-9):
+            raise ResultError(
+                f"a field is asked at {frequency:g} Hz, but the sweep covers {low:g} .. {high:g} Hz; solve a wider sweep"
+            )
+        number = [held.name for held in self.load_cases].index(self.load_case(load_case).name)
+        line = self.model_line(float(np.clip(frequency, low, high)))
+        return np.asarray(model.basis @ line.responses[number].field)
+
+    def model_line(self, frequency: float) -> Line:
+        """A line of the band, evaluated from the model without the solver; ResultError where there is no model."""
+        if self._engine is None:
+            raise ResultError("the result holds no reduced model, only solved lines; solve it with the method 'reduced'")
+        return self._engine.line(self._engine.system.values(np.array([frequency]))[0])
+
+    @cached_property
+    def _engine(self) -> Engine | None:
+        if self.model is None:
+            return None
+        system = build_system(self.space, locate_receivers(self.case, self.space.geometry))
+        return Engine.of(system.on(self.model.projected))
 
     def pressure_at(self, points: Floats, frequency: float, load_case: str = "") -> Complex:
         """Pressure (k, r) [Pa] at points (k, 3) from the elements themselves; nan outside the fluid."""
@@ -244,10 +255,10 @@ _ARRAYS = ("contributions", "supplied", "absorbed", "residual", "closure", "fiel
 
 def _write(result: Result, file: h5py.File) -> None:
     file.attrs["format"], file.attrs["version"] = FORMAT, VERSION
-    file.attrs["order"] = result.order
     file.attrs["provenance"] = json.dumps(result.provenance)
     file.attrs["power_labels"] = json.dumps(result.power_labels)
     write_case_group(result.case, file.create_group("case"))
+    file["orders"] = result.orders
     file["frequencies"] = result.frequencies
     file["sample_receiver"] = result.sample_receiver
     file["sample_weight"] = result.sample_weight
@@ -256,6 +267,39 @@ def _write(result: Result, file: h5py.File) -> None:
         group.attrs["name"], group.attrs["loads"] = held.name, json.dumps(held.loads)
         for name in _ARRAYS:
             group.create_dataset(name, data=getattr(held, name))
+    if result.model is not None:
+        _write_model(result.model, file.create_group("model"))
+    if result.certificate is not None:
+        _write_certificate(result.certificate, file.create_group("certificate"))
+
+
+def _write_model(model: Model, group: h5py.Group) -> None:
+    group["basis"] = model.basis
+    group["matrices"], group["receivers"] = model.projected.matrices, model.projected.receivers
+    group["fixed"] = model.projected.fixed
+    for i, terms in enumerate(model.projected.loads):
+        for j, vectors in enumerate(terms):
+            group[f"loads/{i:04d}/{j:04d}"] = vectors
+
+
+def _read_model(group: h5py.Group) -> Model:
+    loads = tuple(tuple(group["loads"][i][j][()] for j in sorted(group["loads"][i])) for i in sorted(group.get("loads", ())))
+    projected = Projected(group["matrices"][()], loads, group["receivers"][()], group["fixed"][()].astype(bool))
+    return Model(group["basis"][()], projected)
+
+
+def _write_certificate(certificate: Certificate, group: h5py.Group) -> None:
+    group.attrs["tolerance"], group.attrs["certified"] = certificate.tolerance, certificate.certified
+    group.attrs["size"] = certificate.size
+    group["estimate"] = certificate.estimate
+    group["checks"] = np.array([[float(v) for v in astuple(check)] for check in certificate.checks]).reshape(-1, 5)
+    group["checks"].attrs["columns"] = json.dumps([field.name for field in fields(Check)])
+
+
+def _read_certificate(group: h5py.Group) -> Certificate:
+    checks = tuple(Check.of(row) for row in group["checks"][()])
+    head = float(group.attrs["tolerance"]), bool(group.attrs["certified"])
+    return Certificate(*head, checks, group["estimate"][()], int(group.attrs["size"]))
 
 
 def _read(file: h5py.File) -> Result:
@@ -273,13 +317,15 @@ def _read(file: h5py.File) -> Result:
         held.append(LoadCaseResult(str(group.attrs["name"]), text(group.attrs["loads"]), *arrays))
     result = Result(
         case,
-        int(file.attrs["order"]),
+        file["orders"][()],
         file["frequencies"][()],
         file["sample_receiver"][()],
         file["sample_weight"][()],
         text(file.attrs["power_labels"]),
         tuple(held),
         provenance,
+        _read_model(file["model"]) if "model" in file else None,
+        _read_certificate(file["certificate"]) if "certificate" in file else None,
     )
     _check(result)
     return result
@@ -294,6 +340,11 @@ def _check(result: Result) -> None:
         (load_case.name, tuple(load.name for load in load_case.loads)) for load_case in case.load_cases
     ]:
         raise FormatError("load_cases are not those of the case; solve it again")
+    if result.orders.shape != (len(case.mesh.tets),) or not np.all((result.orders >= 1) & (result.orders <= HIGHEST_ORDER)):
+        raise FormatError(
+            f"orders has shape {result.orders.shape}; expected one order 1..{HIGHEST_ORDER} for each of the "
+            f"{len(case.mesh.tets)} tetrahedra; solve the case again"
+        )
     lines, samples, labels = len(result.frequencies), len(result.sample_receiver), len(result.power_labels)
     for index, held in enumerate(result.load_cases):
         loads = len(held.loads)
@@ -304,8 +355,9 @@ def _check(result: Result) -> None:
                     f"load_cases/{index:04d}/{name} has shape {np.shape(getattr(held, name))}, expected {shape}; "
                     "solve the case again"
                 )
-        if held.fields.ndim != 3 or len(held.fields) != len(result.field_frequencies):
+        kept = 0 if result.model is not None else len(result.field_frequencies)
+        if held.fields.ndim != 3 or len(held.fields) != kept:
             raise FormatError(
                 f"load_cases/{index:04d}/fields has shape {held.fields.shape}, expected one block for each of the "
-                f"{len(result.field_frequencies)} field frequencies; solve the case again"
+                f"{kept} field frequencies; solve the case again"
             )

@@ -61,9 +61,13 @@ class Space:
         return tuple(side for side in self.sides if side.surface == surface)
 
 
-def discretise(case: Case, order: int = 0) -> Space:
-    """Number the unknowns of `case` at a uniform `order` (0: the order of its sweep, or the automatic one)."""
-    order = order or case.sweep.order or automatic_order(case)
+def discretise(case: Case, order: int = 0, orders: Ints | None = None) -> Space:
+    """Number the unknowns of `case` at a uniform `order` (0: the order of its sweep, or the automatic one).
+
+    `orders` (t,) gives every element its own.
+    """
+    if orders is None:
+        orders = np.full(len(case.mesh.tets), order or case.sweep.order or automatic_order(case), dtype=np.int64)
     mesh = case.mesh
     sheets = [i for i, surface in enumerate(case.surfaces) if isinstance(surface.boundary, Sheet)]
     try:
@@ -73,9 +77,9 @@ def discretise(case: Case, order: int = 0) -> Space:
             f"surfaces/{', '.join(case.surfaces[i].name for i in sheets)}: {error}" if sheets else str(error)
         ) from None
     geometry = Geometry(mesh.nodes, mesh.tets)
-    dofs = DofMap.build(topology, np.full(len(mesh.tets), order, dtype=np.int64))
+    dofs = DofMap.build(topology, orders)
     sides, pairs = _all_sides(case, topology, geometry)
-    return Space(case, order, geometry, topology, dofs, sides, pairs)
+    return Space(case, dofs.max_order, geometry, topology, dofs, sides, pairs)
 
 
 def a_priori_error(kh: float, order: int) -> float:

@@ -12,8 +12,8 @@ Nothing outside this module knows how the sum is made up: solving, adjoints, pow
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
-from functools import cached_property
+from dataclasses import dataclass, replace
+from functools import cache, cached_property, partial
 from typing import Any
 
 import numpy as np
@@ -39,21 +39,32 @@ from murmesh.solver.case.spectrum import as_spectrum
 from murmesh.solver.errors import CaseError, MeshError
 from murmesh.solver.receiver_points import Samples
 from murmesh.solver.scan import interpolation
-from murmesh.solver.space import Side, Space
+from murmesh.solver.space import SheetPair, Side, Space
 
 Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 Ints = npt.NDArray[np.int64]
 Coefficient = Callable[[Floats], Complex]
+Matrix = Any
+"""Sparse (csr, or csc for columns) on the unknowns of a mesh, an array on the few of a reduced model."""
 
 
 @dataclass(frozen=True, eq=False)
 class Term:
-    """phi(f) A: `label` says to whom the power it takes belongs ("volume/air", "surface/roof")."""
+    """phi(f) A: `label` says to whom the power it takes belongs ("volume/air", "surface/roof").
+
+    The matrix is built when it is first asked for: a stored result needs the coefficients alone.
+    """
 
     label: str
-    matrix: sp.csr_matrix
     phi: Coefficient
+    build: Callable[[], Matrix]
+    symmetric: bool = True
+
+    @cached_property
+    def matrix(self) -> Matrix:
+        """A (n, n), real."""
+        return self.build()
 
 
 @dataclass(frozen=True, eq=False)
@@ -61,38 +72,57 @@ class LoadTerm:
     """F psi(f): F (n, m) real, psi(f) (nf, m) complex. `fixes` terms give pressures of constrained unknowns instead."""
 
     load: str
-    vectors: sp.csc_matrix
     psi: Coefficient
+    build: Callable[[], Matrix]
     fixes: bool = False
+
+    @cached_property
+    def vectors(self) -> Matrix:
+        """F (n, m), real."""
+        return self.build()
 
 
 @dataclass(frozen=True, eq=False)
 class LoadSet:
-    """The loads of one load case, in its order; `uncovered` is the area [m2] of each surface that no scan point covers."""
+    """The loads of one load case, in its order."""
 
     name: str
     loads: tuple[str, ...]
     terms: tuple[LoadTerm, ...]
-    uncovered: dict[str, float]
 
-    def vectors(self, f: float) -> tuple[Complex, Complex]:
-        """Right-hand sides and prescribed pressures, both (n, loads), at one frequency."""
+    def vectors(self, psi: tuple[Complex, ...]) -> tuple[Complex, Complex]:
+        """Right-hand sides and prescribed pressures, both (n, loads), for one row of coefficients per term."""
         n = self.terms[0].vectors.shape[0]
         forces, given = (np.zeros((n, len(self.loads)), dtype=np.complex128) for _ in range(2))
-        for term in self.terms:
+        for term, row in zip(self.terms, psi, strict=True):
             target = given if term.fixes else forces
-            target[:, self.loads.index(term.load)] += term.vectors @ term.psi(np.array([f]))[0]
+            target[:, self.loads.index(term.load)] += term.vectors @ row
         return forces, given
 
 
 @dataclass(frozen=True, eq=False)
+class Values:
+    """The coefficients of the sum at one frequency: phi (terms,), psi (m,) per load case and load term, and per load case
+    the columns mix (loads, r) whose mean squares add up to the field's."""
+
+    frequency: float
+    phi: Complex
+    psi: tuple[tuple[Complex, ...], ...]
+    mix: tuple[Complex, ...]
+
+
+@dataclass(frozen=True, eq=False)
 class System:
-    """The sum of terms of one case on one space."""
+    """The sum of terms of one case, on the unknowns of a space or, projected, on those of a reduced model.
+
+    receivers (samples, n)   one output row per receiver sample
+    fixed (n,)               unknowns whose pressure is prescribed
+    """
 
     space: Space
     terms: tuple[Term, ...]
     load_sets: tuple[LoadSet, ...]
-    receivers: sp.csr_matrix
+    receivers: Matrix
     fixed: npt.NDArray[np.bool_]
 
     @property
@@ -100,41 +130,168 @@ class System:
         """Number of unknowns, constrained ones included."""
         return int(self.fixed.size)
 
+    @property
+    def symmetric(self) -> bool:
+        """Whether A = A^T, so that one solve serves forward and adjoint."""
+        return all(term.symmetric for term in self.terms)
+
     @cached_property
-    def pattern(self) -> Pattern:
-        return Pattern.of(tuple(term.matrix for term in self.terms), ~self.fixed)
+    def form(self) -> Pattern | Stack:
+        """How the terms are added up."""
+        matrices = tuple(term.matrix for term in self.terms)
+        if isinstance(matrices[0], np.ndarray):
+            return Stack(np.stack(matrices))
+        return Pattern.of(matrices, ~self.fixed, self.symmetric)
 
     def coefficients(self, f: Floats) -> Complex:
         """phi_j(f), (nf, terms)."""
         return np.stack([term.phi(f) for term in self.terms], axis=1)
 
-    def matrix(self, phi: Complex) -> sp.csr_matrix:
-        """A = sum_j phi_j A_j for one row of coefficients."""
-        data = np.zeros(self.pattern.nnz, dtype=np.complex128)
-        for coefficient, term, slots in zip(phi, self.terms, self.pattern.slots, strict=True):
-            if slots is None:
-                data += coefficient * term.matrix.data
-            else:
-                data[slots] += coefficient * term.matrix.data
-        return sp.csr_matrix((data, self.pattern.indices, self.pattern.indptr), shape=(self.size, self.size))
+    def values(self, f: Floats) -> list[Values]:
+        """Every coefficient at the frequencies (nf,), the laws asked once for all of them.
+
+        Raises: RangeError where a table ends before the frequencies do.
+        """
+        phi = self.coefficients(f)
+        psi = [[term.psi(f) for term in held.terms] for held in self.load_sets]
+        rules = [self.space.case.load_case(held.name).combination for held in self.load_sets]
+        mix = [rule.factors(f, len(held.loads)) for rule, held in zip(rules, self.load_sets, strict=True)]
+        return [
+            Values(float(at), phi[i], tuple(tuple(p[i] for p in held) for held in psi), tuple(m[i] for m in mix))
+            for i, at in enumerate(f)
+        ]
+
+    def matrix(self, phi: Complex) -> Any:
+        """A = sum_j phi_j A_j for one row of coefficients: sparse, or dense for a projected system."""
+        return self.form.combine(phi)
+
+    def on(self, projected: Projected) -> System:
+        """The same sum on p = W y, from its projected matrices: A_j -> W^T A_j W, F -> W^T F, e -> W^T e."""
+        terms = tuple(replace(t, build=_constant(m)) for t, m in zip(self.terms, projected.matrices, strict=True))
+        sets = tuple(
+            replace(held, terms=tuple(replace(t, build=_constant(v)) for t, v in zip(held.terms, vectors, strict=True)))
+            for held, vectors in zip(self.load_sets, projected.loads, strict=True)
+        )
+        return System(self.space, terms, sets, projected.receivers, projected.fixed)
+
+    @cached_property
+    def prescribed_shapes(self) -> Floats:
+        """Distinct shapes (n, m) of prescribed pressures over all load cases; m is 0 where nothing is prescribed."""
+        found = [dense(t.vectors) for loads in self.load_sets for t in loads.terms if t.fixes]
+        if not found:
+            return np.zeros((self.size, 0))
+        return np.unique(np.hstack(found), axis=1)
+
+
+@dataclass(frozen=True, eq=False)
+class Projected:
+    """The numbers of a sum on p = W y; with the laws of its case they are a `System` (see `System.on`).
+
+    matrices (terms, K, K); loads: per load case, per load term (K, m); receivers (samples, K); fixed (K,).
+    A column of W that is the shape of a prescribed pressure stays prescribed: its coordinate is that pressure.
+    """
+
+    matrices: Floats
+    loads: tuple[tuple[Floats, ...], ...]
+    receivers: Floats
+    fixed: npt.NDArray[np.bool_]
+
+    @classmethod
+    def empty(cls, system: System) -> Projected:
+        """No column yet."""
+        loads = tuple(tuple(np.zeros((0, t.vectors.shape[1])) for t in held.terms) for held in system.load_sets)
+        matrices = np.zeros((len(system.terms), 0, 0))
+        return cls(matrices, loads, np.zeros((system.receivers.shape[0], 0)), np.zeros(0, dtype=bool))
+
+    def extended(
+        self,
+        system: System,
+        basis: Floats,
+        columns: Floats,
+        products: tuple[list[Floats], list[Floats]],
+        *,
+        prescribed: bool,
+    ) -> Projected:
+        """W = [basis, columns], from the projection on `basis` and the products A_j columns and A_j^T columns."""
+        size = basis.shape[1] + columns.shape[1]
+        matrices = np.empty((len(self.matrices), size, size))
+        at = basis.shape[1]
+        for out, old, right, left in zip(matrices, self.matrices, *products, strict=True):
+            out[:at, :at], out[at:, at:] = old, columns.T @ right
+            out[:at, at:], out[at:, :at] = basis.T @ right, left.T @ basis
+        loads = tuple(
+            tuple(np.vstack([v, _coordinates(t, columns, prescribed)]) for t, v in zip(held.terms, vectors, strict=True))
+            for held, vectors in zip(system.load_sets, self.loads, strict=True)
+        )
+        receivers = np.hstack([self.receivers, np.asarray(system.receivers @ columns)])
+        fixed = np.concatenate([self.fixed, np.full(columns.shape[1], prescribed)])
+        return Projected(matrices, loads, receivers, fixed)
+
+
+def _coordinates(term: LoadTerm, columns: Floats, prescribed: bool) -> Floats:
+    """Rows (k, m) of a load for more columns of W: W^T F of a force, the place of its shape of a prescribed pressure."""
+    if not term.fixes:
+        return np.asarray(term.vectors.T @ columns).T
+    out = np.zeros((columns.shape[1], term.vectors.shape[1]))
+    if prescribed:
+        for column, vector in enumerate(dense(term.vectors).T):
+            out[np.flatnonzero((columns == vector[:, None]).all(axis=0))[0], column] = 1.0
+    return out
+
+
+def _constant(value: Any) -> Callable[[], Any]:
+    return lambda: value
+
+
+def dense(matrix: Any) -> Floats:
+    """A sparse matrix as an array; an array as it is."""
+    return np.asarray(matrix if isinstance(matrix, np.ndarray) else matrix.toarray())
+
+
+@dataclass(frozen=True, eq=False)
+class Stack:
+    """Dense matrices (terms, n, n) of a projected system."""
+
+    matrices: Floats
+
+    def combine(self, phi: Complex) -> Complex:
+        """sum_j phi_j A_j, real and imaginary part apart: the matrices are real."""
+        return np.asarray(np.tensordot(phi.real, self.matrices, axes=1) + 1j * np.tensordot(phi.imag, self.matrices, axes=1))
 
 
 @dataclass(frozen=True, eq=False)
 class Pattern:
-    """One sparsity pattern for all frequencies, where each term's entries go (None: everywhere), the free lower triangle."""
+    """One sparsity pattern for all frequencies: where each term's entries go (None: everywhere), and what is factorised.
+
+    core        pattern of what a direct solver is given, on the free unknowns, CSC: the lower triangle where A is
+                symmetric, the whole matrix otherwise
+    core_slots  where its entries stand in A's
+    """
 
     indptr: Ints
     indices: Ints
     slots: tuple[Ints | None, ...]
-    lower: sp.csc_matrix
-    lower_slots: Ints
+    matrices: tuple[sp.csr_matrix, ...]
+    core: sp.csc_matrix
+    core_slots: Ints
 
     @property
     def nnz(self) -> int:
         return len(self.indices)
 
+    def combine(self, phi: Complex) -> sp.csr_matrix:
+        """sum_j phi_j A_j."""
+        data = np.zeros(self.nnz, dtype=np.complex128)
+        for coefficient, matrix, slots in zip(phi, self.matrices, self.slots, strict=True):
+            if slots is None:
+                data += coefficient * matrix.data
+            else:
+                data[slots] += coefficient * matrix.data
+        n = len(self.indptr) - 1
+        return sp.csr_matrix((data, self.indices, self.indptr), shape=(n, n))
+
     @classmethod
-    def of(cls, matrices: tuple[sp.csr_matrix, ...], free: npt.NDArray[np.bool_]) -> Pattern:
+    def of(cls, matrices: tuple[sp.csr_matrix, ...], free: npt.NDArray[np.bool_], symmetric: bool) -> Pattern:
         n = len(free)
         keys = [_keys(matrix) for matrix in matrices]
         union = keys[0]
@@ -143,13 +300,20 @@ class Pattern:
                 union = np.union1d(union, key)
         rows, columns = union // n, union % n
         indptr = np.searchsorted(rows, np.arange(n + 1))
-        # a row of the upper triangle is, by symmetry, a column of the lower one
-        upper = np.flatnonzero((rows <= columns) & free[rows] & free[columns])
-        number = np.cumsum(free) - 1
-        count = int(free.sum())
-        pointer = np.searchsorted(number[rows[upper]], np.arange(count + 1))
-        lower = sp.csc_matrix((np.ones(len(upper)), number[columns[upper]], pointer), shape=(count, count))
-        return cls(indptr, columns, tuple(_slots(union, key) for key in keys), lower, upper)
+        core, slots = _core(rows, columns, free, symmetric)
+        return cls(indptr, columns, tuple(_slots(union, key) for key in keys), matrices, core, slots)
+
+
+def _core(rows: Ints, columns: Ints, free: npt.NDArray[np.bool_], symmetric: bool) -> tuple[sp.csc_matrix, Ints]:
+    """The part that a direct solver is given. A row of A's upper triangle is, by symmetry, a column of the lower one."""
+    kept = free[rows] & free[columns] & ((rows <= columns) if symmetric else True)
+    slots = np.flatnonzero(kept)
+    if not symmetric:  # column by column
+        slots = slots[np.lexsort((rows[slots], columns[slots]))]
+    number, count = np.cumsum(free) - 1, int(free.sum())
+    major, minor = (rows, columns) if symmetric else (columns, rows)
+    pointer = np.searchsorted(number[major[slots]], np.arange(count + 1))
+    return sp.csc_matrix((np.ones(len(slots)), number[minor[slots]], pointer), shape=(count, count)), slots
 
 
 def _slots(union: Ints, key: Ints) -> Ints | None:
@@ -188,7 +352,10 @@ def _volume_terms(space: Space) -> list[Term]:
         tets = np.flatnonzero(space.case.mesh.tet_region == index)
         if not len(tets):
             raise MeshError(f"regions/{region.name} has no tetrahedron; mesh it, or take the region out of the job")
-        stiffness, mass = volume_matrices(space.geometry, space.dofs, tets)
+
+        @cache
+        def matrices(tets: Ints = tets) -> tuple[sp.csr_matrix, sp.csr_matrix]:
+            return volume_matrices(space.geometry, space.dofs, tets)
 
         def phi_k(f: Floats, region: Region = region) -> Complex:
             return np.asarray(1.0 / damped(region.medium, region.damping, f)[0])
@@ -197,8 +364,13 @@ def _volume_terms(space: Space) -> list[Term]:
             rho, c = damped(region.medium, region.damping, f)
             return np.asarray(-((2 * np.pi * f) ** 2) / (rho * c**2))
 
-        terms += [Term(f"volume/{region.name}", stiffness, phi_k), Term(f"volume/{region.name}", mass, phi_m)]
+        label = f"volume/{region.name}"
+        terms += [Term(label, phi, partial(_part, matrices, i)) for i, phi in enumerate((phi_k, phi_m))]
     return terms
+
+
+def _part(both: Callable[[], tuple[Matrix, Matrix]], number: int) -> Matrix:
+    return both()[number]
 
 
 def _side_admittance(case: Case, side: Side, f: Floats) -> Complex | None:
@@ -219,8 +391,8 @@ def _surface_terms(space: Space) -> list[Term]:
         def phi(f: Floats, side: Side = side) -> Complex:
             return _i_w(f, _side_admittance(case, side, f))
 
-        matrix = surface_mass(space.geometry, space.dofs, side.tet, side.face)
-        terms.append(Term(f"surface/{case.surfaces[side.surface].name}", matrix, phi))
+        build = partial(surface_mass, space.geometry, space.dofs, side.tet, side.face)
+        terms.append(Term(f"surface/{case.surfaces[side.surface].name}", phi, build))
     return terms
 
 
@@ -231,16 +403,18 @@ def _sheet_terms(space: Space) -> list[Term]:
         boundary = case.surfaces[pair.surface].boundary
         if _transfer(case, boundary, pair.region, case.sweep.frequencies) is None:
             continue
-        geometry, dofs = space.geometry, space.dofs
-        cross = surface_cross_mass(geometry, dofs, pair.front, pair.back)
-        own = surface_mass(geometry, dofs, *pair.front) + surface_mass(geometry, dofs, *pair.back)
 
         def phi(f: Floats, boundary: Boundary = boundary, region: int = pair.region) -> Complex:
             return _i_w(f, _transfer(case, boundary, region, f))
 
-        matrix = (own - cross - cross.T).tocsr()
-        terms.append(Term(f"surface/{case.surfaces[pair.surface].name}", matrix, phi))
+        terms.append(Term(f"surface/{case.surfaces[pair.surface].name}", phi, partial(_jump_mass, space, pair)))
     return terms
+
+
+def _jump_mass(space: Space, pair: SheetPair) -> Matrix:
+    cross = surface_cross_mass(space.geometry, space.dofs, pair.front, pair.back)
+    own = [surface_mass(space.geometry, space.dofs, *side) for side in (pair.front, pair.back)]
+    return (own[0] + own[1] - cross - cross.T).tocsr()
 
 
 def _i_w(f: Floats, admittance: Complex | None) -> Complex:
@@ -267,17 +441,14 @@ def pressure_fixed(space: Space) -> npt.NDArray[np.bool_]:
 
 def _load_set(space: Space, index: int) -> LoadSet:
     load_case = space.case.load_cases[index]
-    terms: list[LoadTerm] = []
-    uncovered: dict[str, float] = {}
-    for load in load_case.loads:
-        terms += _load_terms(space, load, uncovered)
-    return LoadSet(load_case.name, tuple(load.name for load in load_case.loads), tuple(terms), uncovered)
+    terms = [term for load in load_case.loads for term in _load_terms(space, load)]
+    return LoadSet(load_case.name, tuple(load.name for load in load_case.loads), tuple(terms))
 
 
-def _load_terms(space: Space, load: Load, uncovered: dict[str, float]) -> list[LoadTerm]:
+def _load_terms(space: Space, load: Load) -> list[LoadTerm]:
     match load:
         case SurfaceVelocity():
-            return _velocity_terms(space, load, uncovered)
+            return _velocity_terms(space, load)
         case SurfacePressure():
             return _pressure_terms(space, load)
         case IncomingWave():
@@ -295,41 +466,53 @@ def _loaded_sides(space: Space, load: Load) -> tuple[Side, ...]:
     return sides
 
 
-def _velocity_terms(space: Space, load: SurfaceVelocity, uncovered: dict[str, float]) -> list[LoadTerm]:
+def _moving_sides(space: Space, load: SurfaceVelocity) -> tuple[Side, ...]:
+    """The sides a velocity drives: an absorbing side of a sheet does not move with it."""
+    return tuple(side for side in _loaded_sides(space, load) if side.boundary.moves or side.boundary.hard)
+
+
+def _velocity_terms(space: Space, load: SurfaceVelocity) -> list[LoadTerm]:
     terms = []
-    bare = {1: 0.0, -1: 0.0}
-    for side in _loaded_sides(space, load):
-        if not (side.boundary.moves or side.boundary.hard):
-            continue  # an absorbing side of a sheet does not move with it
+    for side in _moving_sides(space, load):
 
         def psi(f: Floats, side: Side = side) -> Complex:
             drive = side.boundary.drive(f, adjacent(space.case, side.region, f))
             return np.asarray((-2j * np.pi * f * side.sign * drive)[:, None] * load.motion.outward(f))
 
-        vectors, missed = _shape_vectors(space, side, load.motion)
-        bare[side.sign] += missed
-        terms.append(LoadTerm(load.name, vectors, psi))
-    if max(bare.values()) > 0:
-        uncovered[load.name] = max(bare.values())  # front and back of a sheet are one area
+        terms.append(LoadTerm(load.name, psi, partial(_shape_vectors, space, side, load.motion)))
     return terms
 
 
-def _shape_vectors(space: Space, side: Side, motion: Motion) -> tuple[sp.csc_matrix, float]:
-    """integral q shape_m dS as columns (n, m), and the area no scan point covers [m2]."""
+def _shape_vectors(space: Space, side: Side, motion: Motion) -> sp.csc_matrix:
+    """integral q shape_m dS as columns (n, m)."""
     shape = motion.shape()
     geometry, dofs = space.geometry, space.dofs
     if shape is None:
-        return _column(surface_load(geometry, dofs, side.tet, side.face, None)), 0.0
+        return _uniform_vector(space, side)
     if isinstance(shape, str):
         function = parse(shape)
-        load = surface_load(geometry, dofs, side.tet, side.face, lambda x: function(x[:, 0], x[:, 1], x[:, 2]))
-        return _column(load), 0.0
-    points, weights, _ = surface_points(geometry, side.tet, side.face, 4)
-    missed = float(weights[~interpolation(shape, points).covered].sum())
+        return _column(surface_load(geometry, dofs, side.tet, side.face, lambda x: function(x[:, 0], x[:, 1], x[:, 2])))
     load = surface_load(
         geometry, dofs, side.tet, side.face, lambda x: interpolation(shape, x).weights.toarray(), degree=space.order + 4
     )
-    return sp.csc_matrix(load), missed
+    return sp.csc_matrix(load)
+
+
+def _uniform_vector(space: Space, side: Side) -> sp.csc_matrix:
+    """integral q dS as one column (n, 1)."""
+    return _column(surface_load(space.geometry, space.dofs, side.tet, side.face, None))
+
+
+def uncovered_area(space: Space, load: SurfaceVelocity) -> float:
+    """Area [m2] of a load's surface that no scan point covers; front and back of a sheet are one area."""
+    bare = {1: 0.0, -1: 0.0}
+    shape = load.motion.shape()
+    if shape is None or isinstance(shape, str):
+        return 0.0
+    for side in _moving_sides(space, load):
+        points, weights, _ = surface_points(space.geometry, side.tet, side.face, 4)
+        bare[side.sign] += float(weights[~interpolation(shape, points).covered].sum())
+    return max(bare.values())
 
 
 def _column(vector: npt.NDArray[Any]) -> sp.csc_matrix:
@@ -341,11 +524,14 @@ def _pressure_terms(space: Space, load: SurfacePressure) -> list[LoadTerm]:
 
     Where surfaces of kind `pressure` meet, each gives its part: the line between them takes the mean of their pressures.
     """
-    meeting = np.zeros(space.dofs.n_dofs)
-    for index in {side.surface for side in space.sides if side.boundary.fixes_pressure}:
-        meeting += _on_vertices(space, space.sides_of(index))
-    ones = _on_vertices(space, _loaded_sides(space, load)) / np.maximum(meeting, 1.0)
-    return [LoadTerm(load.name, _column(ones), lambda f: as_spectrum(load.pressure).at(f)[:, None], fixes=True)]
+
+    def build() -> sp.csc_matrix:
+        meeting = np.zeros(space.dofs.n_dofs)
+        for index in {side.surface for side in space.sides if side.boundary.fixes_pressure}:
+            meeting += _on_vertices(space, space.sides_of(index))
+        return _column(_on_vertices(space, _loaded_sides(space, load)) / np.maximum(meeting, 1.0))
+
+    return [LoadTerm(load.name, lambda f: as_spectrum(load.pressure).at(f)[:, None], build, fixes=True)]
 
 
 def _on_vertices(space: Space, sides: tuple[Side, ...]) -> Floats:
@@ -365,8 +551,7 @@ def _wave_terms(space: Space, load: IncomingWave) -> list[LoadTerm]:
             admittance = 1.0 / adjacent(space.case, side.region, f).impedance
             return np.asarray((4j * np.pi * f * admittance * as_spectrum(load.pressure).at(f))[:, None])
 
-        load_vector = surface_load(space.geometry, space.dofs, side.tet, side.face, None)
-        terms.append(LoadTerm(load.name, _column(load_vector), psi))
+        terms.append(LoadTerm(load.name, psi, partial(_uniform_vector, space, side)))
     return terms
 
 
@@ -379,9 +564,8 @@ def _monopole_term(space: Space, load: Monopole) -> LoadTerm:
             f"the source '{load.name}' at {load.position} lies outside every region; the nearest point of the fluid is "
             f"({near[0]:.4g}, {near[1]:.4g}, {near[2]:.4g})"
         )
-    row = evaluate(space.geometry, space.dofs, tet, bary)
 
     def psi(f: Floats) -> Complex:
         return np.asarray((2j * np.pi * f * as_spectrum(load.volume_velocity).at(f))[:, None])
 
-    return LoadTerm(load.name, row.T.tocsc(), psi)
+    return LoadTerm(load.name, psi, lambda: evaluate(space.geometry, space.dofs, tet, bary).T.tocsc())

@@ -52,14 +52,11 @@ def say(text: str) -> None:
 
 
 def show(progress: Progress) -> None:
-    """Progress of a sweep; one rewritten line on a terminal, a line per tenth elsewhere."""
-    text = f"  {progress.done}/{progress.total} lines, {progress.frequency:g} Hz"
-    if progress.resumed:
-        text += f", {progress.resumed} kept from before"
-    text += f", {progress.seconds_left:.0f} s left" if progress.done < progress.total else ", done"
+    """Progress of a sweep; one rewritten line on a terminal; elsewhere a line per tenth, and per step of a reduced model."""
+    text, last = f"  {progress.words}", progress.done == progress.total
     if sys.stderr.isatty():
-        sys.stderr.write(f"\r{text:<70}" + ("\n" if progress.done == progress.total else ""))
-    elif progress.done == progress.total or progress.done % max(progress.total // 10, 1) == 0:
+        sys.stderr.write(f"\r{text:<70}" + ("\n" if last else ""))
+    elif last or progress.certificate or progress.done % max(progress.total // 10, 1) == 0:
         sys.stderr.write(f"{text}\n")
     sys.stderr.flush()
 

@@ -5,6 +5,8 @@ from __future__ import annotations
 import argparse
 from pathlib import Path
 
+import numpy as np
+
 from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, register, result_path, say, show
 from murmesh.plugin.load import load_case_file
 from murmesh.solver.result import Result, write_result
@@ -15,6 +17,12 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("case", help="case file (.h5), job file (.toml), or a .msh that carries its job")
     parser.add_argument("result", nargs="?", help="result file (default: CASE_result.h5)")
     parser.add_argument("--order", type=int, default=0, help="polynomial order 1..8 (default: chosen)")
+    parser.add_argument(
+        "--method",
+        choices=("auto", "reduced", "direct"),
+        default="",
+        help="reduced: a certified model of all lines; direct: every line by itself (default: the sweep's)",
+    )
     parser.add_argument("--solver", choices=("default", "rslab", "superlu"), default="default", help="linear solver")
     parser.add_argument("--force", action="store_true", help="solve although the check finds errors")
 
@@ -31,7 +39,7 @@ def run(args: argparse.Namespace) -> int:
         return CANNOT
     target = Path(args.result) if args.result else result_path(Path(args.case))
     journal = Journal.at(target)
-    result = solve(case, journal, report=show, order=args.order, solver=args.solver)
+    result = solve(case, journal, report=show, order=args.order, solver=args.solver, method=args.method)
     write_result(result, target)
     Journal(journal).forget()
     say(summary(result))
@@ -42,10 +50,11 @@ def run(args: argparse.Namespace) -> int:
 def summary(result: Result) -> str:
     """What the solver can say about its own numbers."""
     parts = [f"order {result.order}, {result.provenance['unknowns']} unknowns, {result.provenance['linear_solver']}"]
+    parts += [result.certificate.words] if result.certificate is not None else []
     for held in result.load_cases:
         imbalance = float(abs(result.imbalance(held.name)).max())
         parts.append(
-            f"load case '{held.name}': worst residual {held.residual.max(initial=0):.0e}, power imbalance {imbalance:.0e}, "
+            f"load case '{held.name}': worst residual {np.nanmax(held.residual):.0e}, power imbalance {imbalance:.0e}, "
             f"contributions against the field {held.closure.max(initial=0):.0e}"
         )
     return "\n".join(parts)

@@ -108,6 +108,17 @@ class Sweep(Declared):
         default=0,
     )
     accuracy: float = quantity(help="accuracy wanted at the receivers", unit="dB", positive=True, default=0.1)
+    method: str = quantity(
+        help="reduced: a certified model of all lines; direct: every line by itself; auto: reduced if there are many lines",
+        choices=("auto", "reduced", "direct"),
+        default="auto",
+    )
+    tolerance: float = quantity(
+        help="difference from the direct solution that a reduced sweep may make on any line",
+        unit="dB",
+        positive=True,
+        default=0.01,
+    )
     field_frequencies: npt.NDArray[np.float64] = quantity(
         help="lines whose whole field is kept for maps, (k,)", unit="Hz", positive=True, default=np.empty(0)
     )

@@ -246,7 +246,7 @@ def test_recipe_for_a_load(monkeypatch: pytest.MonkeyPatch) -> None:
     line = _declare("solver/case/load", Load, monkeypatch)
     term = _run("solver/system")["_line_term"]
     known = system._load_terms
-    both = lambda space, load, missed: [term(space, load)] if isinstance(load, line) else known(space, load, missed)  # noqa: E731
+    both = lambda space, load: [term(space, load)] if isinstance(load, line) else known(space, load)  # noqa: E731
     monkeypatch.setattr(system, "_load_terms", both)
     at = (0.2, 0.3, 0.25)
     point = Monopole("pipe", at, 1e-3)

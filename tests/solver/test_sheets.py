@@ -15,10 +15,9 @@ from murmesh.solver.case.model import Case, Region
 from murmesh.solver.case.motion import Scan, Uniform
 from murmesh.solver.case.wall import Given
 from murmesh.solver.errors import MeshError
-from murmesh.solver.receiver_points import locate_receivers
 from murmesh.solver.space import discretise
 from murmesh.solver.sweep import solve
-from murmesh.solver.system import build_system
+from murmesh.solver.system import uncovered_area
 
 LENGTH, AT = 1.2, 0.7
 RECEIVERS = {"a": (0.3, 0.05, 0.05), "b": (1.0, 0.05, 0.05)}
@@ -95,8 +94,7 @@ def test_a_scan_of_a_sheet_counts_its_area_once() -> None:
     scan = Scan(points, np.array([50.0, 500.0]), np.full((2, len(y)), 0.01 + 0j))
     sheet = Sheet(front_direction=(1.0, 0.0, 0.0))
     case = case_of(_duct(), {"sheet": sheet}, [SurfaceVelocity("sheet", scan)], [150.0], RECEIVERS, order=6)
-    space = discretise(case)
-    uncovered = build_system(space, locate_receivers(case, space.geometry)).load_sets[0].uncovered["sheet"]
+    uncovered = uncovered_area(discretise(case), SurfaceVelocity("sheet", scan))
     assert 0.4 < uncovered / 0.1**2 < 0.75
     right = _closed(0.3, LENGTH - AT, np.array([150.0]))[0]
     found = solve(case.with_(regions=(case.regions[0].with_(damping=lossy(0.02)),))).load_cases[0].contributions[0, 1, 0]

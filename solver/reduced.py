@@ -1,0 +1,443 @@
+"""The reduced model of a sweep: the same sum of terms on a few hundred unknowns, and the certificate that it may be trusted.
+
+    p = W y,   W^T A(w) W y = W^T f(w),   A(w) = sum_j phi_j(w) A_j with the exact phi_j at every line
+
+W holds, at each *expansion line* w_0, the exact adjoints of the receivers and the exact fields of the load cases, and the
+Krylov vectors that follow them,
+
+    v_{k+1} = -A(w_0)^{-1} A'(w_0) v_k,   A' = dA/d(w^2)     (block Arnoldi, real and imaginary parts, orthonormal),
+
+so that one factorisation serves a whole neighbourhood of lines. Forward and adjoint spaces are one: an output is wrong by
+the *product* of what both spaces miss. (Arnoldi's moments: Z. Bai, Appl. Numer. Math. 43 (2002) 9; primal and dual spaces
+together: K. Willcox and A. Megretski, SIAM J. Sci. Comput. 26 (2005) 944; both cited from memory.)
+
+No line is trusted because a residual is small. The model is certified when it agrees with `PASSES` further lines, solved
+directly and never seen by it, one of them the line with the worst estimate; a line that disagrees becomes an expansion.
+Where no certificate can be had, `reduce` says so and the caller solves every line directly.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+import scipy.linalg
+
+from murmesh.solver.engine import Engine, Line
+from murmesh.solver.linalg import Factor
+from murmesh.solver.receiver_points import Samples
+from murmesh.solver.system import LoadSet, LoadTerm, Projected, Stack, System, Values
+
+Floats = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
+Ints = npt.NDArray[np.int64]
+
+FIRST_LINES = (0.06, 0.4, 0.7, 0.95)
+"""Where in the band the first expansion lines lie: modes crowd towards its upper end."""
+KRYLOV_COLUMNS = 32
+"""Krylov vectors wanted per expansion line, in blocks of the start's width, at least `FEWEST_MOMENTS` blocks."""
+FEWEST_MOMENTS, MOST_MOMENTS = 3, 8
+KEEP_ABOVE = 1e-5
+"""Part of a unit vector that must be new for it to enter the basis."""
+PASSES = 3
+"""Lines in a row, unseen by the model, that must agree."""
+PASS_PART = 0.3
+"""Part of the tolerance that an agreeing line may be off."""
+FIELD_TOLERANCE = 0.1
+"""Deviation [dB] that an agreeing line's whole field may have, root mean square over the mesh's vertices."""
+SKETCH = 64
+"""Rows of the random matrix that measures residuals."""
+SCANNED_LINES = 120
+"""Lines at which the estimate is looked at while the basis grows."""
+DB = 20 / np.log(10)
+
+
+@dataclass(frozen=True)
+class Check:
+    """A line solved directly, and how far the model that had not seen it was off [dB]: the worst level or contribution
+    at a receiver, the whole field, and what the estimate had said. `grew` tells whether the line then entered the basis."""
+
+    frequency: float
+    deviation: float
+    field: float
+    estimate: float
+    grew: bool
+
+    def agrees(self, tolerance: float) -> bool:
+        """Whether the line speaks for the model."""
+        return self.deviation <= PASS_PART * tolerance and self.field <= FIELD_TOLERANCE
+
+    @classmethod
+    def of(cls, row: Floats) -> Check:
+        """From its numbers in the order of the fields."""
+        deviation_, field, estimate = (float(v) for v in row[1:4])
+        return cls(float(row[0]), deviation_, field, estimate, bool(row[4]))
+
+
+@dataclass(frozen=True, eq=False)
+class Certificate:
+    """Why the lines of a reduced sweep may be trusted, or that they may not.
+
+    tolerance [dB]; certified; checks: every line that was factorised, in order; estimate (nf,) [dB] of every line's
+    deviation, scaled by the worst ratio seen at the checks; size: unknowns of the model.
+    """
+
+    tolerance: float
+    certified: bool
+    checks: tuple[Check, ...]
+    estimate: Floats
+    size: int
+
+    @property
+    def factorisations(self) -> int:
+        """Factorised lines."""
+        return len(self.checks)
+
+    @property
+    def worst_check(self) -> float:
+        """Largest deviation [dB] among the lines that the model agreed with last."""
+        return max(check.deviation for check in self.checks[-PASSES:])
+
+    @property
+    def words(self) -> str:
+        """One sentence for people."""
+        if not self.certified:
+            return (
+                f"no certificate for {self.tolerance:g} dB after {self.factorisations} factorised lines: "
+                "every line was solved directly"
+            )
+        return (
+            f"certified within {self.tolerance:g} dB of the direct solution: {self.factorisations} factorised lines, "
+            f"{self.size} unknowns in the model; the last {PASSES}, unseen by the model, agree within "
+            f"{self.worst_check:.1e} dB, and the estimate stays below {float(self.estimate.max(initial=0.0)):.1e} dB"
+        )
+
+
+@dataclass(frozen=True, eq=False)
+class Step:
+    """One factorised line of the construction, as the journal keeps it: columns (n, k) added to the basis, maybe none."""
+
+    index: int
+    line: Line
+    columns: Floats
+    check: Check
+
+
+@dataclass(frozen=True, eq=False)
+class Reduction:
+    """A model under construction: basis (n, K), prescribed shapes first, its projection, and the sketched residuals."""
+
+    system: System
+    samples: Samples
+    basis: Floats
+    projected: Projected
+    sketch: Sketch
+    steps: tuple[Step, ...] = ()
+
+    @classmethod
+    def start(cls, system: System, samples: Samples) -> Reduction:
+        """The model without any expansion line."""
+        shapes = system.prescribed_shapes
+        empty = cls(system, samples, np.zeros((system.size, 0)), Projected.empty(system), Sketch.start(system))
+        return empty.with_columns(shapes, prescribed=True)
+
+    def with_columns(self, columns: Floats, *, prescribed: bool = False) -> Reduction:
+        """The model with more columns in its basis."""
+        right = [np.asarray(term.matrix @ columns) for term in self.system.terms]
+        left = right if self.system.symmetric else [np.asarray(term.matrix.T @ columns) for term in self.system.terms]
+        projected = self.projected.extended(self.system, self.basis, columns, (right, left), prescribed=prescribed)
+        sketch = self.sketch.extended(right, left)
+        return replace(self, basis=np.hstack([self.basis, columns]), projected=projected, sketch=sketch)
+
+    def with_step(self, step: Step) -> Reduction:
+        """The model after one more factorised line."""
+        grown = self.with_columns(step.columns) if step.columns.shape[1] else self
+        return replace(grown, steps=(*self.steps, step))
+
+    def engine(self) -> Engine:
+        """Solves lines of the model."""
+        return Engine.of(self.system.on(self.projected))
+
+    @property
+    def size(self) -> int:
+        """Free unknowns of the model."""
+        return int(np.count_nonzero(~self.projected.fixed))
+
+
+@dataclass(frozen=True, eq=False)
+class Sketch:
+    """Norms of residuals from a few rows: |r| ~ |S r|, S = T D^-1/2 with random signs T / sqrt(rows), D = sum_j |phi_j A_j|_ii
+    in the middle of the band.
+
+    matrix (rows, n); forward, adjoint (terms, rows, K): S A_j W and S A_j^T W; load_sets with vectors S F; receivers
+    (rows, samples). (Signs preserve norms: D. Achlioptas, J. Comput. Syst. Sci. 66 (2003) 671; cited from memory.)
+    """
+
+    matrix: Floats
+    forward: Floats
+    adjoint: Floats
+    load_sets: tuple[LoadSet, ...]
+    receivers: Floats
+
+    @classmethod
+    def start(cls, system: System) -> Sketch:
+        """Without any column of W."""
+        middle = np.median(system.space.case.sweep.frequencies, keepdims=True)
+        phi = np.abs(system.coefficients(middle)[0])
+        diagonal = sum(c * np.abs(term.matrix.diagonal()) for c, term in zip(phi, system.terms, strict=True))
+        signs = np.random.default_rng(0).choice((-1.0, 1.0), size=(SKETCH, system.size))
+        matrix = np.where(system.fixed, 0.0, signs / np.sqrt(SKETCH * np.maximum(diagonal, 1e-300)))
+        none = np.zeros((len(system.terms), SKETCH, 0))
+        sets = tuple(replace(held, terms=tuple(_sketched(t, matrix) for t in held.terms)) for held in system.load_sets)
+        return cls(matrix, none, none, sets, np.asarray((system.receivers @ matrix.T).T))
+
+    def extended(self, right: list[Floats], left: list[Floats]) -> Sketch:
+        """With the products A_j columns and A_j^T columns."""
+        forward = np.concatenate([self.forward, np.stack([self.matrix @ product for product in right])], axis=2)
+        if left is right:
+            return replace(self, forward=forward, adjoint=forward)
+        adjoint = np.concatenate([self.adjoint, np.stack([self.matrix @ product for product in left])], axis=2)
+        return replace(self, forward=forward, adjoint=adjoint)
+
+    def forward_residual(self, number: int, values: Values, field: Complex) -> float:
+        """|f - A W y| of the columns (K, r) of load case `number` together."""
+        forces = self.load_sets[number].vectors(values.psi[number])[0] @ values.mix[number]
+        return float(np.linalg.norm(forces - Stack(self.forward).combine(values.phi) @ field))
+
+    def adjoint_residual(self, values: Values, adjoints: Complex) -> Floats:
+        """|e - A^T W z| of every receiver sample, (samples,)."""
+        return np.asarray(np.linalg.norm(self.receivers - Stack(self.adjoint).combine(values.phi) @ adjoints, axis=0))
+
+
+def _sketched(term: LoadTerm, matrix: Floats) -> LoadTerm:
+    vectors = np.zeros((SKETCH, term.vectors.shape[1])) if term.fixes else np.asarray(term.vectors.T @ matrix.T).T
+    return replace(term, build=lambda: vectors)
+
+
+# ---------------------------------------------------------------------------------------------------------------------
+# growing
+
+
+def reduce(
+    full: Engine,
+    samples: Samples,
+    lines: list[Values],
+    tolerance: float,
+    *,
+    steps: Iterable[Step] = (),
+    keep: Callable[[int, Step], None] = lambda number, step: None,
+    report: Callable[[Reduction], None] = lambda model: None,
+    lighten: Callable[[Line], Line] = lambda line: line,
+) -> tuple[Reduction, Certificate]:
+    """Grow a model of `full` until it is certified to `tolerance` [dB] on every line, or has cost a quarter of the lines.
+
+    `steps` are those of an interrupted run; `keep` is called with each new one as soon as it is known; `lighten` says what
+    is kept of an exact line.
+    """
+    model = Reduction.start(full.system, samples)
+    for step in steps:
+        model = model.with_step(step)
+    while not _agreed(model, tolerance) and len(model.steps) < most_lines(len(lines)):
+        step = _next_step(full, model, lines, tolerance)
+        step = replace(step, line=lighten(step.line))
+        keep(len(model.steps), step)
+        model = model.with_step(step)
+        report(model)
+    agreed = _agreed(model, tolerance)
+    estimate = estimates(model, lines) if agreed else np.full(len(lines), np.inf)
+    done = agreed and bool(estimate.max() <= tolerance)
+    return model, Certificate(tolerance, done, tuple(step.check for step in model.steps), estimate, model.size)
+
+
+def most_lines(lines: int) -> int:
+    """Factorised lines after which a certificate is given up: a quarter of all, at least twelve."""
+    return min(lines, max(12, lines // 4))
+
+
+def _agreed(model: Reduction, tolerance: float) -> bool:
+    last = model.steps[-PASSES:]
+    return len(model.steps) >= len(FIRST_LINES) + PASSES - 1 and all(step.check.agrees(tolerance) for step in last)
+
+
+def _next_step(full: Engine, model: Reduction, lines: list[Values], tolerance: float) -> Step:
+    index = _next_line(model, lines, tolerance)
+    line, factor = full.solved(lines[index])
+    check = _check(model, lines[index], line)
+    grows = len(model.steps) < len(FIRST_LINES) or not check.agrees(tolerance)
+    columns = _new_columns(full, model, line, factor, _frequencies(lines)) if grows else np.zeros((full.system.size, 0))
+    return Step(index, line, columns, replace(check, grew=grows))
+
+
+def _frequencies(lines: list[Values]) -> Floats:
+    return np.array([values.frequency for values in lines])
+
+
+def _next_line(model: Reduction, lines: list[Values], tolerance: float) -> int:
+    """The first lines; then the line with the worst estimate and, while lines agree, the middles of the widest gaps."""
+    frequencies = _frequencies(lines)
+    seen = [step.index for step in model.steps]
+    if len(seen) < len(FIRST_LINES):
+        wanted = frequencies[0] + FIRST_LINES[len(seen)] * (frequencies[-1] - frequencies[0])
+        order = np.argsort(np.abs(frequencies - wanted), kind="stable")
+        return int(next(i for i in order if i not in seen))
+    passed = next((n for n, step in enumerate(reversed(model.steps)) if not step.check.agrees(tolerance)), len(seen))
+    if passed in (0, PASSES - 1):
+        scanned = _unseen(len(frequencies), seen)
+        return int(scanned[np.argmax(estimates(model, [lines[i] for i in scanned]))])
+    edges = np.sort(np.array([-1, *seen, len(frequencies)]))
+    gap = int(np.argmax(np.diff(edges)))
+    middle = (edges[gap] + edges[gap + 1]) // 2
+    return int(np.clip(middle, 0, len(frequencies) - 1))
+
+
+def _unseen(lines: int, seen: list[int]) -> Ints:
+    """About `SCANNED_LINES` lines that were not factorised yet."""
+    every = np.setdiff1d(np.arange(lines), seen)
+    return every[np.unique(np.linspace(0, len(every) - 1, min(SCANNED_LINES, len(every))).round().astype(np.int64))]
+
+
+def _new_columns(full: Engine, model: Reduction, line: Line, factor: Factor, frequencies: Floats) -> Floats:
+    """Exact solutions at the line and their Krylov vectors, real, orthonormal and orthogonal to the basis."""
+    free = full.free
+    fields = np.hstack([response.field for response in line.responses]) if line.responses else line.adjoints[:, :0]
+    adjoints = line.adjoints
+    start = _start(adjoints, model.samples)
+    slope = full.inner(full.system.matrix(_slope(full.system, line.frequency, frequencies)))
+    blocks = [adjoints[free], fields[free]]
+    if full.system.symmetric:
+        blocks.append(_krylov(factor.solve, slope, np.hstack([start, fields])[free]))
+    else:
+        blocks.append(_krylov(factor.solve_transpose, slope.T.tocsr(), start[free]))
+        blocks.append(_krylov(factor.solve, slope, fields[free]))
+    columns = np.zeros((full.system.size, 2 * sum(block.shape[1] for block in blocks)))
+    columns[free] = np.hstack([part for block in blocks for part in (block.real, block.imag)])
+    return orthonormal(model.basis[:, ~model.projected.fixed], columns)
+
+
+def _start(adjoints: Complex, samples: Samples) -> Complex:
+    """One adjoint per receiver: the mean over its samples. The samples' own enter the basis without followers."""
+    receivers = np.unique(samples.receiver)
+    weights = np.where(samples.receiver[:, None] == receivers, samples.weight[:, None], 0.0)
+    return np.asarray(adjoints @ weights)
+
+
+def _slope(system: System, f: float, frequencies: Floats) -> Complex:
+    """d phi_j / d(w^2) by a central difference of a step that stays inside the band, where the laws are defined."""
+    low, high = float(frequencies[0]), float(frequencies[-1])
+    step = max(0.02 * (high - low), 1e-6 * f)
+    a, b = max(low, f - step), min(high, f + step)
+    phi = system.coefficients(np.array([a, b]))
+    return np.asarray((phi[1] - phi[0]) / ((2 * np.pi) ** 2 * (b**2 - a**2)))
+
+
+def _krylov(solve: Callable[[Complex], Complex], slope: Any, start: Complex) -> Complex:
+    """Orthonormal followers of `start` under A^-1 A': block Arnoldi, orthogonalised twice (once loses rank)."""
+    block = scipy.linalg.qr(start, mode="economic")[0]
+    blocks = [block]
+    moments = int(np.clip(KRYLOV_COLUMNS // max(block.shape[1], 1), FEWEST_MOMENTS, MOST_MOMENTS))
+    for _ in range(moments):
+        following = solve(np.ascontiguousarray(slope @ blocks[-1]))
+        for _ in range(2):
+            for earlier in blocks:
+                following = following - earlier @ (earlier.conj().T @ following)
+        block, triangle, _ = scipy.linalg.qr(following, mode="economic", pivoting=True)
+        size = np.abs(np.diag(triangle))
+        block = block[:, size > 1e-10 * size.max(initial=0.0)]
+        if not block.shape[1]:
+            break
+        blocks.append(block)
+    return np.hstack(blocks[1:])
+
+
+def orthonormal(basis: Floats, columns: Floats) -> Floats:
+    """Orthonormal columns that, with `basis` (orthonormal), span what `columns` span, but for parts below `KEEP_ABOVE`."""
+    size = np.linalg.norm(columns, axis=0)
+    rest = columns / np.where(size > 0, size, 1.0)
+    for _ in range(2):
+        rest = rest - basis @ (basis.T @ rest)
+    q, triangle, _ = scipy.linalg.qr(rest, mode="economic", pivoting=True, overwrite_a=True)
+    kept = q[:, np.abs(np.diag(triangle)) > KEEP_ABOVE]
+    return np.asarray(scipy.linalg.qr(kept - basis @ (basis.T @ kept), mode="economic")[0])
+
+
+# ---------------------------------------------------------------------------------------------------------------------
+# judging
+
+
+def _check(model: Reduction, values: Values, exact: Line) -> Check:
+    if not model.size:
+        return Check(exact.frequency, np.inf, np.inf, np.inf, True)
+    line = model.engine().line(values)
+    pairs = list(zip(line.responses, exact.responses, strict=True))
+    field = max((_field_deviation(model, a.field, b.field) for a, b in pairs), default=0.0)
+    heard = [
+        deviation(model.samples, a.contributions, b.contributions, mix) for (a, b), mix in zip(pairs, values.mix, strict=True)
+    ]
+    level = max(heard, default=0.0) if len(model.samples.receiver) else field
+    estimate = float(_raw_estimate(model, values, line).max(initial=0.0))
+    return Check(exact.frequency, level, field, estimate, False)
+
+
+def deviation(samples: Samples, found: Complex, exact: Complex, mix: Complex) -> float:
+    """Largest difference [dB] of a receiver's level, and of a contribution against the largest one at its sample.
+
+    found, exact (samples, loads); mix (loads, r).
+    """
+    parts = np.abs(found - exact).max(axis=1) / np.maximum(np.abs(exact).max(axis=1), 1e-300)
+    levels = [_mean_square(samples, p @ mix) for p in (found, exact)]
+    change = np.abs(10 * np.log10(np.maximum(levels[0], 1e-300) / np.maximum(levels[1], 1e-300)))
+    return float(max(np.max(DB * np.log1p(parts), initial=0.0), np.max(change, initial=0.0)))
+
+
+def _mean_square(samples: Samples, pressure: Complex) -> Floats:
+    """Weighted over the samples of each receiver, (receivers,)."""
+    square = samples.weight * (np.abs(pressure) ** 2).sum(axis=1)
+    return np.asarray(np.bincount(samples.receiver, weights=square), dtype=np.float64)
+
+
+def _field_deviation(model: Reduction, coordinates: Complex, exact: Complex) -> float:
+    vertices = model.system.space.topology.n_vertices
+    miss = np.linalg.norm(model.basis[:vertices] @ coordinates - exact[:vertices])
+    return float(DB * np.log1p(miss / max(float(np.linalg.norm(exact[:vertices])), 1e-300)))
+
+
+def evaluate(model: Reduction, lines: list[Values]) -> list[Line]:
+    """Every line from the model; no residual is known for them (nan)."""
+    engine = model.engine()
+    none = np.zeros((0, 0), dtype=np.complex128)
+    found = []
+    for values in lines:
+        line = engine.line(values)
+        responses = tuple(replace(response, field=none) for response in line.responses)
+        found.append(Line(line.frequency, responses, float("nan"), none))
+    return found
+
+
+def estimates(model: Reduction, lines: list[Values]) -> Floats:
+    """Estimated deviation [dB] of the model at every line, (nf,), scaled by the worst ratio seen at the checks."""
+    engine = model.engine()
+    raw = [float(_raw_estimate(model, values, engine.line(values)).max(initial=0.0)) for values in lines]
+    return np.asarray(raw) * _scale(model)
+
+
+def _scale(model: Reduction) -> float:
+    """Worst ratio of true deviation to raw estimate at the checked lines; 1 while there is none."""
+    known = [s.check for s in model.steps if np.isfinite(s.check.estimate) and s.check.estimate > 0]
+    return max([1.0, *(c.deviation / c.estimate for c in known)])
+
+
+def _raw_estimate(model: Reduction, values: Values, line: Line) -> Floats:
+    """|r_z| |r_p| / |p| in dB for every load case and receiver sample: an output misses r_z^T A^-1 r_p."""
+    adjoint = model.sketch.adjoint_residual(values, line.adjoints)
+    out = []
+    for number, response in enumerate(line.responses):
+        forward = model.sketch.forward_residual(number, values, response.field)
+        if len(model.samples.receiver):
+            heard = np.sqrt(_mean_square(model.samples, model.projected.receivers @ response.field))
+            out.append(DB * np.log1p(adjoint * forward / np.maximum(heard[model.samples.receiver], 1e-300)))
+        else:
+            out.append(np.atleast_1d(DB * np.log1p(forward / max(float(np.linalg.norm(response.field)), 1e-300))))
+    return np.concatenate(out) if out else np.zeros(1)
