@@ -22,6 +22,8 @@ from murmesh.solver.system import LoadSet, Pattern, System, Values, dense
 
 Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
+EMPTY: Complex = np.zeros((0, 0), dtype=np.complex128)
+EMPTY.setflags(write=False)
 
 
 @dataclass(frozen=True, eq=False)
@@ -29,7 +31,8 @@ class Response:
     """One load case at one line.
 
     contributions (samples, loads) [Pa]; supplied (loads,) and absorbed (labels,) [W]; closure: the field against the sum
-    of the contributions at the receivers; field (n, r): r solutions whose mean squares add.
+    of the contributions at the receivers; field (n, r): r solutions whose mean squares add; mesh_error (samples, r) [Pa]:
+    what the next order would add (see `accuracy`), empty where it was not asked for.
     """
 
     contributions: Complex
@@ -37,6 +40,7 @@ class Response:
     absorbed: Floats
     closure: float
     field: Complex
+    mesh_error: Complex
 
 
 @dataclass(frozen=True, eq=False)
@@ -123,7 +127,7 @@ class Engine:
         f = values.frequency
         supplied = input_power(f, drive.forces, drive.given, reaction, field, drive.mix)
         absorbed = absorbed_power(system, values.phi, f, field, self.labels)
-        return Response(contributions, supplied, absorbed, closure, field)
+        return Response(contributions, supplied, absorbed, closure, field, EMPTY)
 
 
 @dataclass(frozen=True, eq=False)

@@ -17,7 +17,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.engine import Line, Response
+from murmesh.solver.engine import EMPTY, Line, Response
 from murmesh.solver.errors import ResultError
 from murmesh.solver.reduced import Check, Step
 
@@ -107,24 +107,21 @@ def _line_arrays(line: Line) -> Arrays:
     arrays: Arrays = {"head": np.array([line.frequency, line.residual])}
     for i, r in enumerate(line.responses):
         arrays |= {f"{i}c": r.contributions, f"{i}s": r.supplied, f"{i}a": r.absorbed, f"{i}r": np.array([r.closure])}
-        if r.field.size:
-            arrays[f"{i}f"] = r.field
+        arrays |= {f"{i}{key}": part for key, part in (("f", r.field), ("m", r.mesh_error)) if part.size}
     return arrays
 
 
 def _line(arrays: dict[str, Any]) -> Line:
     count = sum(1 for key in arrays if key.endswith("c") and key[:-1].isdigit())
-    none = np.zeros((0, 0), dtype=np.complex128)
-    responses = [
-        Response(arrays[f"{i}c"], arrays[f"{i}s"], arrays[f"{i}a"], float(arrays[f"{i}r"][0]), arrays.get(f"{i}f", none))
-        for i in range(count)
-    ]
+    responses = []
+    for i in range(count):
+        head = arrays[f"{i}c"], arrays[f"{i}s"], arrays[f"{i}a"], float(arrays[f"{i}r"][0])
+        responses.append(Response(*head, arrays.get(f"{i}f", EMPTY), arrays.get(f"{i}m", EMPTY)))
     f, worst = (float(v) for v in arrays["head"])
-    return Line(f, tuple(responses), worst, none)
+    return Line(f, tuple(responses), worst, EMPTY)
 
 
 def light(line: Line, *, keep_field: bool) -> Line:
     """The line without its adjoints and, unless it is to be kept, without its fields."""
-    none = np.zeros((0, 0), dtype=np.complex128)
-    responses = line.responses if keep_field else tuple(replace(r, field=none) for r in line.responses)
-    return replace(line, responses=responses, adjoints=none)
+    responses = line.responses if keep_field else tuple(replace(r, field=EMPTY) for r in line.responses)
+    return replace(line, responses=responses, adjoints=EMPTY)

@@ -18,7 +18,7 @@ Where no certificate can be had, `reduce` says so and the caller solves every li
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -230,7 +230,7 @@ def reduce(
     steps: Iterable[Step] = (),
     keep: Callable[[int, Step], None] = lambda number, step: None,
     report: Callable[[Reduction], None] = lambda model: None,
-    lighten: Callable[[Line], Line] = lambda line: line,
+    lighten: Callable[[Values, Line], Line] = lambda values, line: line,
 ) -> tuple[Reduction, Certificate]:
     """Grow a model of `full` until it is certified to `tolerance` [dB] on every line, or has cost a quarter of the lines.
 
@@ -242,7 +242,7 @@ def reduce(
         model = model.with_step(step)
     while not _agreed(model, tolerance) and len(model.steps) < most_lines(len(lines)):
         step = _next_step(full, model, lines, tolerance)
-        step = replace(step, line=lighten(step.line))
+        step = replace(step, line=lighten(lines[step.index], step.line))
         keep(len(model.steps), step)
         model = model.with_step(step)
         report(model)
@@ -404,16 +404,10 @@ def _field_deviation(model: Reduction, coordinates: Complex, exact: Complex) -> 
     return float(DB * np.log1p(miss / max(float(np.linalg.norm(exact[:vertices])), 1e-300)))
 
 
-def evaluate(model: Reduction, lines: list[Values]) -> list[Line]:
-    """Every line from the model; no residual is known for them (nan)."""
+def evaluate(model: Reduction, lines: list[Values]) -> Iterator[Line]:
+    """Every line from the model, in its coordinates; no residual is known for them (nan)."""
     engine = model.engine()
-    none = np.zeros((0, 0), dtype=np.complex128)
-    found = []
-    for values in lines:
-        line = engine.line(values)
-        responses = tuple(replace(response, field=none) for response in line.responses)
-        found.append(Line(line.frequency, responses, float("nan"), none))
-    return found
+    return (replace(engine.line(values), residual=float("nan")) for values in lines)
 
 
 def estimates(model: Reduction, lines: list[Values]) -> Floats:

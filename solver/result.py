@@ -31,6 +31,7 @@ from murmesh.solver.system import Projected, build_system
 Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 Ints = npt.NDArray[np.int64]
+NOTHING: Complex = np.empty((0, 0, 0), dtype=np.complex128)
 FORMAT = "murmesh result"
 VERSION = 2
 
@@ -49,7 +50,8 @@ class LoadCaseResult:
 
     contributions (nf, samples, loads) [Pa]; supplied (nf, loads) and absorbed (nf, labels) [W per line]; residual (nf,),
     nan on lines of a reduced model; closure (nf,); fields (k, unknowns, r) at the field frequencies: r solutions whose
-    mean squares add (none where the result holds a model, which gives the field of any line).
+    mean squares add (none where the result holds a model, which gives the field of any line); mesh_error (nf, samples, r)
+    [Pa]: what elements of the next order would add to the r pressures, (0, 0, 0) where it was not asked for.
     """
 
     name: str
@@ -60,6 +62,7 @@ class LoadCaseResult:
     residual: Floats
     closure: Floats
     fields: Complex
+    mesh_error: Complex
 
 
 @dataclass(frozen=True, eq=False)
@@ -102,7 +105,8 @@ class Result:
                     np.stack([row.absorbed for row in rows]),
                     np.array([line.residual for line in lines]),
                     np.array([row.closure for row in rows]),
-                    np.stack(fields) if fields else np.empty((0, 0, 0), dtype=np.complex128),
+                    np.stack(fields) if fields else NOTHING,
+                    np.stack([row.mesh_error for row in rows]) if all(row.mesh_error.size for row in rows) else NOTHING,
                 )
             )
         frequencies = np.array([line.frequency for line in lines])
@@ -140,6 +144,33 @@ class Result:
     def mean_square(self, receiver: str, load_case: str = "") -> Floats:
         """(1/2) sum_ij G_ij p_i conj(p_j), averaged over the receiver's samples: (nf,) [Pa2], per hertz for a density."""
         return np.asarray(self.shares(receiver, load_case).sum(axis=1))
+
+    def mesh_bar(self, receiver: str, load_case: str = "") -> Floats | None:
+        """20 lg(1 + |eta| / |p|) [dB] of a receiver's level, root mean squares over its samples, (nf,); None where the
+        sweep was solved without an error bar."""
+        held = self.load_case(load_case)
+        if not held.mesh_error.size:
+            return None
+        size, error = (self._weighted(receiver, p) for p in (self._pressures(held), held.mesh_error))
+        return np.asarray(20 * np.log10(1 + np.sqrt(error / np.maximum(size, 1e-300))))
+
+    def corrected(self, receiver: str, load_case: str = "") -> Floats | None:
+        """The mean square (nf,) with the mesh error added to the pressures: the solution of the next order, or close to it."""
+        held = self.load_case(load_case)
+        if not held.mesh_error.size:
+            return None
+        square = 0.5 * self._weighted(receiver, self._pressures(held) + held.mesh_error)
+        return np.asarray(square / self._bandwidth(load_case))
+
+    def _pressures(self, held: LoadCaseResult) -> Complex:
+        """The r pressures (nf, samples, r) whose mean squares add."""
+        mix = self.case.load_case(held.name).combination.factors(self.frequencies, len(held.loads))
+        return np.asarray(np.einsum("fsl,flr->fsr", held.contributions, mix))
+
+    def _weighted(self, receiver: str, pressures: Complex) -> Floats:
+        """sum over the receiver's samples and the r columns of w |p|^2, (nf,)."""
+        index = self.samples(receiver)
+        return np.asarray(np.einsum("s,fsr->f", self.sample_weight[index], np.abs(pressures[:, index]) ** 2))
 
     def shares(self, receiver: str, load_case: str = "") -> Floats:
         """Mean square that belongs to each load, (1/2) Re sum_j G_ij p_i conj(p_j): (nf, loads), summing to the total."""
@@ -250,7 +281,7 @@ def read_result(path: str | Path) -> Result:
             raise FormatError(f"{path}: the result is incomplete ({error}); solve the case again") from None
 
 
-_ARRAYS = ("contributions", "supplied", "absorbed", "residual", "closure", "fields")
+_ARRAYS = ("contributions", "supplied", "absorbed", "residual", "closure", "fields", "mesh_error")
 
 
 def _write(result: Result, file: h5py.File) -> None:

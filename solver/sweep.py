@@ -11,7 +11,7 @@ from __future__ import annotations
 import hashlib
 import time
 import warnings
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
@@ -20,9 +20,10 @@ from pathlib import Path
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.case.model import Case
+from murmesh.solver.accuracy import MeshError, calibration_lines, kappa, scaled, true_errors
+from murmesh.solver.case.model import HIGHEST_ORDER, Case
 from murmesh.solver.engine import Engine, Line
-from murmesh.solver.errors import FallbackWarning, ValidityWarning
+from murmesh.solver.errors import FallbackWarning, SolveError, ValidityWarning
 from murmesh.solver.journal import Journal, light
 from murmesh.solver.receiver_points import Samples, locate_receivers
 from murmesh.solver.reduced import Certificate, Reduction, Step, evaluate, most_lines, reduce
@@ -91,6 +92,8 @@ class _Sweep:
     journal: Journal | None
     report: Report
     started: float
+    solver: str
+    mesh_error: MeshError | None
 
     @classmethod
     def of(cls, case: Case, journal: Path | None, report: Report, order: int, solver: str, method: str) -> _Sweep:
@@ -101,7 +104,9 @@ class _Sweep:
         _warn_of_active_terms(system, lines)
         what = f"{case.checksum} {_digest(space)} size {system.size} {solver}"
         book = Journal.open(journal, what) if journal else None
-        return cls(Engine.of(system, solver), samples, lines, method or case.sweep.method, book, report, time.monotonic())
+        judge = MeshError.of(system, samples) if case.sweep.error_bar and space.dofs.orders.min() < HIGHEST_ORDER else None
+        engine = Engine.of(system, solver)
+        return cls(engine, samples, lines, method or case.sweep.method, book, report, time.monotonic(), solver, judge)
 
     @property
     def case(self) -> Case:
@@ -110,14 +115,14 @@ class _Sweep:
     def run(self) -> Result:
         """The reduced sweep if it is wanted and certified, the direct one otherwise."""
         if self.method == "direct" or (self.method == "auto" and len(self.lines) < FEWEST_LINES):
-            return self._collect(self._direct({}), None, None)
+            return self._collect(self._scaled(self._direct({})), None, None)
         resumed = tuple(self.journal.steps()) if self.journal else ()
         model, certificate = self._reduce(resumed)
         exact = {step.index: step.line for step in model.steps}
         if not certificate.certified:
             warnings.warn(f"reduced sweep: {certificate.words}", FallbackWarning, stacklevel=3)
-            return self._collect(self._direct(exact), None, certificate)
-        lines = [exact.get(i, line) for i, line in enumerate(evaluate(model, self.lines))]
+            return self._collect(self._scaled(self._direct(exact)), None, certificate)
+        lines = self._scaled([exact.get(i, line) for i, line in enumerate(self._modelled(model))])
         self._tell(len(lines), len(resumed), lines[-1].frequency, 0.0, len(exact), certificate.words)
         return self._collect(lines, model, certificate)
 
@@ -146,6 +151,11 @@ class _Sweep:
             lighten=self._light,
         )
 
+    def _modelled(self, model: Reduction) -> Iterator[Line]:
+        judge = self.mesh_error.on(model.basis) if self.mesh_error else None
+        for values, line in zip(self.lines, evaluate(model, self.lines), strict=True):
+            yield light(judge.judged(values, line) if judge else line, keep_field=False)
+
     # -- direct
 
     def _direct(self, exact: dict[int, Line]) -> list[Line]:
@@ -155,7 +165,7 @@ class _Sweep:
         for index, values in enumerate(self.lines):
             line = exact.get(index) or (self.journal.line(index, values.frequency) if self.journal else None)
             if line is None:
-                line = self._light(self.engine.line(values))
+                line = self._light(values, self.engine.line(values))
                 solved += 1
                 if self.journal:
                     self.journal.write_line(index, line)
@@ -166,9 +176,25 @@ class _Sweep:
             self._tell(index + 1, resumed, values.frequency, pace * (len(self.lines) - index - 1), solved + len(exact))
         return lines
 
-    def _light(self, line: Line) -> Line:
+    def _light(self, values: Values, line: Line) -> Line:
+        """What is kept of an exact line: its mesh error, and its field where it is asked for."""
         wanted = self.case.sweep.field_frequencies
-        return light(line, keep_field=bool(np.any(np.isclose(line.frequency, wanted, rtol=1e-9))))
+        judged = self.mesh_error.judged(values, line) if self.mesh_error else line
+        return light(judged, keep_field=bool(np.any(np.isclose(line.frequency, wanted, rtol=1e-9))))
+
+    def _scaled(self, lines: list[Line]) -> list[Line]:
+        """Lines with calibrated mesh errors: a few are solved in the next order."""
+        if self.mesh_error is None or not len(self.samples.receiver) or not self.case.load_cases:
+            return lines
+        factors, exact = {}, {}
+        try:
+            finer = Engine.of(self.mesh_error.finer, self.solver)
+            for index in calibration_lines(len(lines)):
+                exact[index] = true_errors(finer, lines[index], self.lines[index])
+                factors[index] = kappa(tuple(r.mesh_error for r in lines[index].responses), exact[index])
+        except SolveError as error:
+            warnings.warn(f"the error bar is not calibrated: {error}", FallbackWarning, stacklevel=4)
+        return scaled(lines, factors, exact)
 
     def _tell(self, done: int, resumed: int, f: float, left: float, factorised: int, words: str = "") -> None:
         self.report(Progress(done, len(self.lines), resumed, f, left, factorised, words))

@@ -42,7 +42,7 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("solver.system",),
     ("solver.power",),
     ("solver.engine",),
-    ("solver.reduced",),
+    ("solver.reduced", "solver.accuracy"),
     ("solver.result", "solver.journal"),
     ("solver.sweep", "solver.modes", "solver.contribution"),
     ("solver.__main__", "sample_geometry"),

@@ -119,6 +119,7 @@ class Sweep(Declared):
         positive=True,
         default=0.01,
     )
+    error_bar: bool = quantity(help="estimate the mesh error of every receiver level in the next order", default=True)
     field_frequencies: npt.NDArray[np.float64] = quantity(
         help="lines whose whole field is kept for maps, (k,)", unit="Hz", positive=True, default=np.empty(0)
     )
