@@ -22,6 +22,17 @@ CAUTIONS = (
 
 
 @dataclass(frozen=True, eq=False)
+class Bars:
+    """Mesh error bars [dB] of the levels, as if every line of a band erred the same way, and the levels corrected by the
+    next order."""
+
+    overall: float
+    bands: Floats
+    corrected_overall: float
+    corrected_bands: Floats
+
+
+@dataclass(frozen=True, eq=False)
 class Levels:
     """Levels [dB re 20 uPa, rms] at one receiver for one load case; -inf where nothing falls into a band."""
 
@@ -33,6 +44,7 @@ class Levels:
     bands: tuple[Band, ...]
     band_levels: Floats
     coverage: Floats
+    bars: Bars | None = None
 
     @property
     def unit(self) -> str:
@@ -47,10 +59,21 @@ def levels(result: Result, receiver: str, load_case: str = "", weighting: str = 
     f = result.frequencies
     # a tone belongs to the band it lies in, so the outermost bands need not be covered whole
     bands = third_octaves(float(f[0]), float(f[-1]))
-    energy, coverage = band_energy(f, square, bands, held.spectrum, weighting)
-    total = overall_energy(f, square, held.spectrum, weighting)
-    found = np.asarray(level(energy))
-    return Levels(receiver, held.name, held.spectrum, weighting, float(level(total)), tuple(bands), found, coverage)
+    coverage = band_energy(f, square, bands, held.spectrum, weighting)[1]
+
+    def read(squares: Floats) -> tuple[float, Floats]:
+        energy = band_energy(f, squares, bands, held.spectrum, weighting)[0]
+        return float(level(overall_energy(f, squares, held.spectrum, weighting))), np.asarray(level(energy))
+
+    overall, found = read(square)
+    bar, corrected = result.mesh_bar(receiver, load_case), result.corrected(receiver, load_case)
+    bars = None
+    if bar is not None and corrected is not None:
+        high, high_bands = read(square * 10 ** (bar / 10))
+        heard = np.isfinite(found)
+        widths = np.subtract(high_bands, found, out=np.full(len(found), np.nan), where=heard)
+        bars = Bars(high - overall, widths, *read(corrected))
+    return Levels(receiver, held.name, held.spectrum, weighting, overall, tuple(bands), found, coverage, bars)
 
 
 def all_levels(result: Result, weighting: str = "A", load_case: str = "") -> list[Levels]:
@@ -59,6 +82,21 @@ def all_levels(result: Result, weighting: str = "A", load_case: str = "") -> lis
     return [levels(result, receiver.name, name, weighting) for name in names for receiver in result.case.receivers]
 
 
-def shown(value: float) -> str:
-    """A level as people read it: one decimal, or a dash where there is none."""
-    return f"{value:.1f}" if np.isfinite(value) else "-"
+def shown(value: float, bar: float = float("nan")) -> str:
+    """A level as people read it, rounded to what its error bar justifies; a dash where there is none."""
+    if not np.isfinite(value):
+        return "-"
+    if not np.isfinite(bar):
+        return f"{value:.1f}"
+    digits = 0 if bar >= 0.5 else 1
+    return f"{value:.{digits}f} ±{max(bar, 0.1):.{digits}f}"
+
+
+def trust(result: Result) -> str:
+    """What is known about the numerical error of the levels: mesh bar and certificate; an empty text where nothing is."""
+    parts = []
+    if any(held.mesh_error.size for held in result.load_cases):
+        parts.append("± dB (mesh): what elements of the next order would change, every line of a band erring the same way")
+    if result.certificate is not None:
+        parts.append(f"reduced sweep: {result.certificate.words}")
+    return "\n".join(parts)

@@ -19,7 +19,7 @@ from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.load import load_case_file
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.probe import gmsh_missing
-from murmesh.plugin.summary import CAUTIONS, all_levels
+from murmesh.plugin.summary import CAUTIONS, all_levels, trust
 from murmesh.solver.case.hdf5 import read_case, write_case
 from murmesh.solver.case.model import Case
 from murmesh.solver.contribution import rank
@@ -96,6 +96,7 @@ def _solve(case: Case, folder: Path) -> Result:
 def _answers(result: Result) -> None:
     say("3/5  levels and rankings")
     answer(levels_command.text(all_levels(result)))
+    answer(f"\n{trust(result)}")
     for held in result.load_cases:
         answer("")
         answer(rank_command.text(rank(result, [], load_case=held.name)))

@@ -13,10 +13,11 @@ from murmesh.plugin.export.tables import chosen, decibels, quantity, write_table
 from murmesh.solver.levels import A_weighting, level
 from murmesh.solver.result import Result
 
-COLUMNS = ("load_case", "spectrum", "receiver", "frequency_hz", "mean_square_pa2", "level_db", "level_dba")
+COLUMNS = ("load_case", "spectrum", "receiver", "frequency_hz", "mean_square_pa2", "level_db", "level_dba", "mesh_bar_db")
 REMARKS = (
     "mean_square_pa2: rms pressure squared (per hertz where the spectrum is a density)",
     "level_db: dB re 20 uPa (per hertz for a density), unweighted; level_dba: A-weighted at the line's own frequency",
+    "mesh_bar_db: +- error bar of the mesh (what elements of the next order would change); empty where not solved",
 )
 
 
@@ -32,5 +33,7 @@ def _rows(result: Result, receivers: tuple[str, ...], load_case: str) -> Iterato
         square = result.mean_square(receiver, case)
         levels = np.asarray(level(square))
         kind = "density" if is_density(result, case) else "tones"
-        for f, p2, plain_db, weight in zip(result.frequencies, square, levels, weights, strict=True):
-            yield case, kind, receiver, f"{f:.9g}", quantity(p2), decibels(plain_db), decibels(plain_db + weight)
+        bar = result.mesh_bar(receiver, case)
+        bars = [""] * len(square) if bar is None else [f"{value:.4f}" for value in bar]
+        for f, p2, plain_db, weight, width in zip(result.frequencies, square, levels, weights, bars, strict=True):
+            yield case, kind, receiver, f"{f:.9g}", quantity(p2), decibels(plain_db), decibels(plain_db + weight), width

@@ -23,7 +23,7 @@ from murmesh.plugin.describe import (
 from murmesh.plugin.fields import listed_receivers
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.style import ACCENT, INK, LINES, Page, frequency_axis, look, page, save
-from murmesh.plugin.summary import PARTIAL, Levels, levels
+from murmesh.plugin.summary import PARTIAL, Levels, levels, shown
 from murmesh.solver.case.model import Measured, Receiver
 from murmesh.solver.levels import level
 from murmesh.solver.levels import weighting as weighting_db
@@ -69,7 +69,7 @@ def figure(
         if any(r.measured for r in chosen)
         else WEIGHTING[weighting],
     ]
-    notes = [f"Convention: {CONVENTION}.", *_partial_note(found), f"{origin(result)}."]
+    notes = [f"Convention: {CONVENTION}.", *_partial_note(found), *_bar_note(found), f"{origin(result)}."]
     sheet = page("Sound pressure level at the receivers", facts, notes, len(found) * (_HEADING + _ROW + _UNDER))
     curves = [np.asarray(level(result.mean_square(item.receiver, load_case))) for item in found]
     curves = [curve + weighting_db(weighting, result.frequencies) for curve in curves]
@@ -86,6 +86,10 @@ def figure(
 def _partial_note(found: list[Levels]) -> list[str]:
     partial = any(_is_partial(item, i) for item in found for i in range(len(item.bands)))
     return ["Hatched bands lie only partly inside the sweep: the true band level is higher."] if partial else []
+
+
+def _bar_note(found: list[Levels]) -> list[str]:
+    return ["± is the error bar of the mesh, from elements of the next order."] if any(item.bars for item in found) else []
 
 
 def _is_partial(item: Levels, index: int) -> bool:
@@ -155,12 +159,12 @@ def _label_tones(axes: Axes, f: Floats, curve: Floats, scale: tuple[float, float
 def _bands(sheet: Page, up: float, item: Levels, scale: tuple[float, float]) -> None:
     axes = sheet.axes(8.0, up, sheet.width - 8.0, _ROW)
     for i, value in enumerate(item.band_levels):
-        shown = bool(np.isfinite(value)) and value > scale[0]
+        visible = bool(np.isfinite(value)) and value > scale[0]
         partial = _is_partial(item, i)
-        if shown:
+        if visible:
             axes.bar(i, value - scale[0], 0.82, bottom=scale[0], facecolor="white" if partial else "#8fa9c0",
                      edgecolor=LINES[0][0], hatch="////" if partial else "", linewidth=0.9)  # fmt: skip
-        axes.annotate(number(float(value)), (i, value if shown else scale[0]), (0, 3), textcoords="offset points",
+        axes.annotate(number(float(value)), (i, value if visible else scale[0]), (0, 3), textcoords="offset points",
                       ha="center", va="bottom", fontsize=8.5, rotation=90 if len(item.bands) > 12 else 0)  # fmt: skip
     axes.set_xticks(range(len(item.bands)), [band.nominal for band in item.bands], fontsize=9)
     axes.set_xlim(-0.6, len(item.bands) - 0.4)
@@ -169,5 +173,6 @@ def _bands(sheet: Page, up: float, item: Levels, scale: tuple[float, float]) -> 
     axes.set_axisbelow(True)
     axes.set_xlabel("third octave [Hz]")
     axes.set_ylabel(f"band level [{level_unit(item.weighting)}]", fontsize=9.5)
-    overall = f"overall {number(item.overall)} {level_unit(item.weighting).split(' re ')[0]}, inside the sweep"
+    bar = item.bars.overall if item.bars else float("nan")
+    overall = f"overall {shown(item.overall, bar)} {level_unit(item.weighting).split(' re ')[0]}, inside the sweep"
     axes.set_title(overall, loc="left", fontsize=11)

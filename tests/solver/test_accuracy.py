@@ -6,8 +6,8 @@ from functools import cache
 
 import numpy as np
 import pytest
-
 from exact_box import ExactBox, random_box, random_planes
+
 from murmesh.solver.accuracy import UNCALIBRATED, kappa, next_order
 from murmesh.solver.result import read_result, write_result
 from murmesh.solver.space import discretise
