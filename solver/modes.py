@@ -46,14 +46,14 @@ def modes(case: Case, count: int, near: float = 0.0, order: int = 0) -> Modes:
     values, vectors = _nearest(inner[0], inner[1], count, near)
     shapes = np.zeros((space.dofs.n_dofs, count))
     shapes[free] = vectors
-    return Modes(space, _hertz(values), shapes / _peaks(space, shapes))
+    return Modes(space, _hertz(values), shapes / peaks(space, shapes))
 
 
 def _hertz(values: Floats) -> Floats:
     return np.asarray(np.sqrt(np.maximum(values, 0.0)) / (2 * np.pi))
 
 
-def _peaks(space: Space, shapes: Floats) -> Floats:
+def peaks(space: Space, shapes: npt.NDArray[np.inexact]) -> Floats:
     """Largest |p| of every shape at the vertices, edge middles and centres of the elements, (m,)."""
     corners = np.eye(4)
     middles = [(corners[a] + corners[b]) / 2 for a in range(4) for b in range(a)]
@@ -62,7 +62,7 @@ def _peaks(space: Space, shapes: Floats) -> Floats:
     peaks = np.abs(shapes[: space.topology.n_vertices]).max(axis=0)
     for place in places:
         rows = evaluate(space.geometry, space.dofs, tets, np.tile(place, (len(tets), 1)))
-        peaks = np.maximum(peaks, np.abs(rows @ shapes).max(axis=0))
+        peaks = np.maximum(peaks, np.abs(np.asarray(rows @ shapes)).max(axis=0))
     return np.asarray(np.where(peaks > 0, peaks, 1.0))
 
 

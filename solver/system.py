@@ -53,12 +53,14 @@ Matrix = Any
 class Term:
     """phi(f) A: `label` says to whom the power it takes belongs ("volume/air", "surface/roof").
 
+    `power` n says that phi is w^n times something that changes slowly (0 for K, 1 for walls, 2 for M).
     The matrix is built when it is first asked for: a stored result needs the coefficients alone.
     """
 
     label: str
     phi: Coefficient
     build: Callable[[], Matrix]
+    power: int = 1
     symmetric: bool = True
 
     @cached_property
@@ -365,7 +367,7 @@ def _volume_terms(space: Space) -> list[Term]:
             return np.asarray(-((2 * np.pi * f) ** 2) / (rho * c**2))
 
         label = f"volume/{region.name}"
-        terms += [Term(label, phi, partial(_part, matrices, i)) for i, phi in enumerate((phi_k, phi_m))]
+        terms += [Term(label, phi, partial(_part, matrices, i), 2 * i) for i, phi in enumerate((phi_k, phi_m))]
     return terms
 
 
