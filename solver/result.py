@@ -162,6 +162,26 @@ class Result:
         square = 0.5 * self._weighted(receiver, self._pressures(held) + held.mesh_error)
         return np.asarray(square / self._bandwidth(load_case))
 
+    @property
+    def mesh_error_db(self) -> float | None:
+        """Root mean square change of level [dB] by the mesh error, over lines with sound, receivers and load cases; None
+        without an error bar."""
+        changes = [
+            self._corrections(receiver.name, held.name)
+            for held in self.load_cases
+            for receiver in self.case.receivers
+            if held.mesh_error.size
+        ]
+        return float(np.sqrt(np.mean(np.concatenate(changes) ** 2))) if changes else None
+
+    def _corrections(self, receiver: str, load_case: str) -> Floats:
+        """Changes of level [dB] by the mesh error on the lines with sound."""
+        square, corrected = self.mean_square(receiver, load_case), self.corrected(receiver, load_case)
+        if corrected is None:
+            return np.zeros(0)
+        heard = (square > 0) & (corrected > 0)
+        return np.asarray(10 * np.log10(corrected[heard] / square[heard]))
+
     def _pressures(self, held: LoadCaseResult) -> Complex:
         """The r pressures (nf, samples, r) whose mean squares add."""
         mix = self.case.load_case(held.name).combination.factors(self.frequencies, len(held.loads))

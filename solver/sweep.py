@@ -12,7 +12,7 @@ import hashlib
 import time
 import warnings
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
@@ -20,7 +20,7 @@ from pathlib import Path
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.accuracy import MeshError, calibration_lines, kappa, scaled, true_errors
+from murmesh.solver.accuracy import MeshError, calibration_lines, kappa, next_order, scaled, true_errors
 from murmesh.solver.case.model import HIGHEST_ORDER, Case
 from murmesh.solver.engine import Engine, Line
 from murmesh.solver.errors import FallbackWarning, SolveError, ValidityWarning
@@ -76,9 +76,21 @@ def solve(
     """Solve `case` on every line of its sweep; `method` (auto, direct, reduced) replaces that of the sweep.
 
     `journal` is a folder for finished work; it is read first, and removed by `forget` once the result is safe.
+    Where the orders are the rule's own and the error bar shows more than the accuracy wanted, every order is raised by one
+    and the case is solved once more.
     Raises CaseError, MeshError or SolveError; an interrupt leaves the journal as it is.
     """
-    return _Sweep.of(case, journal, report or (lambda progress: None), order, solver, method).run()
+    tell = report or (lambda progress: None)
+    space = discretise(case, order)
+    sweep = _Sweep.of(space, journal, tell, solver, method)
+    result = sweep.run()
+    error = result.mesh_error_db
+    if order or case.sweep.order or error is None or error <= case.sweep.accuracy:
+        return result
+    above = journal / "raised" if journal else None
+    raised = _Sweep.of(next_order(space), above, tell, solver, method).run()
+    words = f"by one: the error bar showed {error:.2g} dB rms where {case.sweep.accuracy:g} dB are wanted"
+    return replace(raised, provenance={**raised.provenance, "orders_raised": words})
 
 
 @dataclass(frozen=True, eq=False)
@@ -96,8 +108,8 @@ class _Sweep:
     mesh_error: MeshError | None
 
     @classmethod
-    def of(cls, case: Case, journal: Path | None, report: Report, order: int, solver: str, method: str) -> _Sweep:
-        space = discretise(case, order)
+    def of(cls, space: Space, journal: Path | None, report: Report, solver: str, method: str) -> _Sweep:
+        case = space.case
         samples = locate_receivers(case, space.geometry)
         system = build_system(space, samples)
         lines = system.values(case.sweep.frequencies)

@@ -50,6 +50,12 @@ def run(args: argparse.Namespace) -> int:
 def summary(result: Result) -> str:
     """What the solver can say about its own numbers."""
     parts = [f"order {result.order}, {result.provenance['unknowns']} unknowns, {result.provenance['linear_solver']}"]
+    if result.mesh_error_db is not None:
+        parts.append(
+            f"mesh error at the receivers {result.mesh_error_db:.2g} dB rms (wanted {result.case.sweep.accuracy:g} dB)"
+        )
+    if "orders_raised" in result.provenance:
+        parts.append(f"orders raised {result.provenance['orders_raised']}")
     parts += [result.certificate.words] if result.certificate is not None else []
     for held in result.load_cases:
         imbalance = float(abs(result.imbalance(held.name)).max())

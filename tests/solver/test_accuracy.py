@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 from functools import cache
+from pathlib import Path
 
 import numpy as np
 import pytest
 from exact_box import ExactBox, random_box, random_planes
 
+from murmesh.solver import sweep
 from murmesh.solver.accuracy import UNCALIBRATED, kappa, next_order
 from murmesh.solver.result import read_result, write_result
 from murmesh.solver.space import discretise
-from murmesh.solver.sweep import solve
+from murmesh.solver.sweep import Progress, solve
 
 CASES = 60
 DB = 20 / np.log(10)
@@ -68,10 +70,10 @@ def test_reduced_and_direct_sweeps_have_the_same_bar() -> None:
     assert np.allclose(bars[0], bars[1], rtol=0.02, atol=1e-4)
 
 
-def test_the_bar_survives_the_file(tmp_path: object) -> None:
+def test_the_bar_survives_the_file(tmp_path: Path) -> None:
     result = _swept(method="reduced")[2]
-    write_result(result, tmp_path / "result.h5")  # type: ignore[arg-type,operator]
-    again = read_result(tmp_path / "result.h5")  # type: ignore[operator]
+    write_result(result, tmp_path / "result.h5")  # type: ignore[arg-type]
+    again = read_result(tmp_path / "result.h5")
     bar, square = again.mesh_bar("r1"), again.corrected("r1")
     assert bar is not None and square is not None and np.all(bar > 0)
     assert np.array_equal(bar, result.mesh_bar("r1"))  # type: ignore[attr-defined]
@@ -96,3 +98,18 @@ def test_kappa() -> None:
     e = (np.array([[1.0 + 1j], [2.0]]),)
     assert kappa(e, (2.5 * e[0],)) == pytest.approx(2.5)
     assert kappa((0 * e[0],), e) == UNCALIBRATED
+
+
+def test_orders_are_raised_once_where_the_bar_says_so(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A rule that is too easy is found out; an interrupted raised sweep goes on without solving the first one again."""
+    box = random_box(np.random.default_rng(7))
+    planes = random_planes(np.random.default_rng(7), box.lengths, 3)
+    case = box.case(planes, np.linspace(200.0, 400.0, 9), np.array([[0.2, 0.3, 0.2], [0.4, 0.2, 0.5]]), accuracy=0.2)
+    monkeypatch.setattr(sweep, "discretise", lambda case, order=0: discretise(case, order or 2))
+    first, raised = solve(case, order=2), solve(case, tmp_path / "lines")
+    assert first.mesh_error_db is not None and first.mesh_error_db > 0.2 and "orders_raised" not in first.provenance
+    assert raised.order == 3 and "rms where 0.2 dB are wanted" in raised.provenance["orders_raised"]
+    assert raised.mesh_error_db is not None and raised.mesh_error_db < first.mesh_error_db
+    seen: list[Progress] = []
+    solve(case, tmp_path / "lines", report=seen.append)
+    assert [p.resumed for p in seen if p.done == p.total] == [9, 9]
