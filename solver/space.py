@@ -6,16 +6,17 @@ its fluid; a sheet inside the fluid has sides in front and behind, because the n
 
 from __future__ import annotations
 
-import math
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.assembly import DofMap, Geometry, surface_normals
+from murmesh.solver.assembly import DofMap, Geometry, surface_area, surface_normals
 from murmesh.solver.case.boundary import Boundary, Sheet
-from murmesh.solver.case.model import HIGHEST_ORDER, Case
+from murmesh.solver.case.model import Case
 from murmesh.solver.errors import MeshError
+from murmesh.solver.orders import Wall, element_orders
 from murmesh.solver.topology import Topology
 
 Ints = npt.NDArray[np.int64]
@@ -56,18 +57,21 @@ class Space:
     sides: tuple[Side, ...]
     sheets: tuple[SheetPair, ...]
 
+    @property
+    def walls(self) -> tuple[Wall, ...]:
+        """Kind and area of every side."""
+        return walls_of(self.geometry, self.sides)
+
     def sides_of(self, surface: int) -> tuple[Side, ...]:
         """The sides of one surface."""
         return tuple(side for side in self.sides if side.surface == surface)
 
 
 def discretise(case: Case, order: int = 0, orders: Ints | None = None) -> Space:
-    """Number the unknowns of `case` at a uniform `order` (0: the order of its sweep, or the automatic one).
+    """Number the unknowns of `case`: `orders` (t,) per element, or a uniform `order`, or that of its sweep, or the rule's.
 
-    `orders` (t,) gives every element its own.
+    The rule of `orders.element_orders` looks at the highest frequency of the sweep; `order` of a space is its highest.
     """
-    if orders is None:
-        orders = np.full(len(case.mesh.tets), order or case.sweep.order or automatic_order(case), dtype=np.int64)
     mesh = case.mesh
     sheets = [i for i, surface in enumerate(case.surfaces) if isinstance(surface.boundary, Sheet)]
     try:
@@ -77,46 +81,17 @@ def discretise(case: Case, order: int = 0, orders: Ints | None = None) -> Space:
             f"surfaces/{', '.join(case.surfaces[i].name for i in sheets)}: {error}" if sheets else str(error)
         ) from None
     geometry = Geometry(mesh.nodes, mesh.tets)
-    dofs = DofMap.build(topology, orders)
     sides, pairs = _all_sides(case, topology, geometry)
+    if orders is None:
+        uniform = order or case.sweep.order
+        orders = np.full(len(mesh.tets), uniform) if uniform else element_orders(case, topology, walls_of(geometry, sides))
+    dofs = DofMap.build(topology, orders)
     return Space(case, dofs.max_order, geometry, topology, dofs, sides, pairs)
 
 
-def a_priori_error(kh: float, order: int) -> float:
-    """8.686 * 2 (k h / 4)^(p+1) / (p+1)!  [dB], h the mean edge: the error the automatic order keeps below the accuracy.
-
-    Fitted on lossy cavities with exact solutions (common practice, no source); it knows neither damping nor pollution.
-    """
-    return float(8.686 * 2 * (kh / 4) ** (order + 1) / math.factorial(order + 1))
-
-
-def automatic_order(case: Case) -> int:
-    """The smallest p whose `a_priori_error` is below the accuracy wanted [dB], for 95 % of the elements.
-
-    h is an element's mean edge, k that of its region at the highest frequency; p >= 3 once the model is longer than 10/k.
-    """
-    size = elements_kh(case)
-    kh = float(np.quantile(size, 0.95))
-    extent = float(np.linalg.norm(np.ptp(case.mesh.nodes, axis=0)))
-    lowest = 3 if kh / mean_edges(case).mean() * extent > 10 else 1
-    for p in range(lowest, HIGHEST_ORDER + 1):
-        if a_priori_error(kh, p) < case.sweep.accuracy:
-            return p
-    return HIGHEST_ORDER
-
-
-def mean_edges(case: Case) -> Floats:
-    """Mean edge length of every tetrahedron, (t,) [m]."""
-    corners = case.mesh.nodes[case.mesh.tets[:, :4]]
-    pairs = ((0, 1), (0, 2), (0, 3), (1, 2), (1, 3), (2, 3))
-    return np.asarray(np.mean([np.linalg.norm(corners[:, a] - corners[:, b], axis=1) for a, b in pairs], axis=0))
-
-
-def elements_kh(case: Case) -> Floats:
-    """|k| h at the highest frequency for every tetrahedron, (t,)."""
-    top = case.sweep.frequencies[-1:]
-    k = np.array([np.abs(2 * np.pi * top[0] / region.medium.c(top)[0]) for region in case.regions])
-    return np.asarray(k[case.mesh.tet_region] * mean_edges(case))
+def walls_of(geometry: Geometry, sides: Iterable[Side]) -> tuple[Wall, ...]:
+    """Kind and area of every side, as the rule of orders wants them."""
+    return tuple(Wall(side.region, side.boundary, surface_area(geometry, side.tet, side.face)) for side in sides)
 
 
 def _all_sides(case: Case, topology: Topology, geometry: Geometry) -> tuple[tuple[Side, ...], tuple[SheetPair, ...]]:
