@@ -10,6 +10,7 @@ from collections.abc import Iterable
 import numpy as np
 
 from murmesh.solver.case.load import LoadCase
+from murmesh.solver.orders import orders_text
 from murmesh.solver.result import Result
 
 CONVENTION = "exp(+iωt), complex peak amplitudes; levels rms re 20 µPa; normals point out of the fluid"
@@ -77,6 +78,6 @@ def short(name: str, most: int) -> str:
 
 
 def origin(result: Result) -> str:
-    """Where a number comes from: the case, its checksum, the order of the elements."""
+    """Where a number comes from: the case, its checksum, the orders of the elements."""
     title = result.case.title or "untitled case"
-    return f"{title} · case {result.case.checksum[:8]} · elements of order {result.order}"
+    return f"{title} · case {result.case.checksum[:8]} · elements of {orders_text(result.orders)}"

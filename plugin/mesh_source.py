@@ -301,7 +301,7 @@ def _attribute_in(path: Path) -> str:
 def element_size(top_frequency: float, speed: float, order: int = 4, accuracy_db: float = 0.1) -> float:
     """The element size [m] for gmsh whose a-priori error at `top_frequency` [Hz] and `order` is `accuracy_db`.
 
-    Inverts `solver.space.a_priori_error`; `speed` [m/s] is the lowest speed of sound in the model.
+    Inverts `solver.orders.a_priori_error`; `speed` [m/s] is the lowest speed of sound in the model.
     """
     if not (top_frequency > 0 and speed > 0 and accuracy_db > 0 and 1 <= order <= 8):
         raise CaseError(

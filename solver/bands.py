@@ -44,7 +44,7 @@ def plan_bands(space: Space) -> tuple[Band, ...]:
     A band ends at one of eight frequencies, an equal ratio apart. A stated order leaves one band.
     """
     frequencies, top = space.case.sweep.frequencies, space.dofs.orders
-    whole = (Band(slice(0, len(frequencies)), top, space.dofs.n_dofs),)
+    whole: tuple[Band, ...] = (Band(slice(0, len(frequencies)), top, space.dofs.n_dofs),)
     if space.case.sweep.order or len(frequencies) < 2:
         return whole
     candidates = _candidates(space, top)

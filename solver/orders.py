@@ -4,8 +4,9 @@
     D   = mean over the volume of d(k h, p),   d = 1/2 [p!/(2p)!]^2 (k h)^(2p) / (2p + 1)
     L^2 = mean over the volume of l(k h, p)^2, l = 5.2 (k h / 4)^(p+1) / ((p + 1) (p + 1)!)  [dB]
 
-h is an element's mean edge, k = |w/c| of its medium. d is the relative shift of the wavenumber (Ihlenburg & Babuska, SINUM 34
-(1997) 315; Ainsworth, SINUM 42 (2004) 553; leading term): a mode of loss factor eta answers it by at most 8.686 d / eta dB,
+h is an element's mean edge (0.8 of its longest where that is more: stretched elements), k = |w/c| of its medium.
+d is the relative shift of the wavenumber (Ihlenburg & Babuska, SINUM 34 (1997) 315; Ainsworth, SINUM 42 (2004) 553;
+leading term): a mode of loss factor eta answers it by at most 8.686 d / eta dB,
 and it feels the *mean* over the volume it fills. l is the error of the best polynomial for plane waves on a regular
 tetrahedron (fitted to L2 projections, kh = 0.5 to 6, p = 1 to 8, within 20 %), taken at the orders that the minimum rule
 leaves on an element's edges. 13 = 6.4 x 2: what the receivers of lossy boxes with exact solutions showed, times a margin
@@ -46,6 +47,8 @@ LOCAL_CAP = 1 / 6
 """Largest l of one element, in accuracies."""
 SHIFT_CAP = 10.0
 """Largest d of one element, in means."""
+STRETCHED = 0.8
+"""Share of the longest edge that counts: 1.2 times the mean is common among regular tetrahedra."""
 SMALLEST_LOSS = 0.003
 """Loss factor taken where none is stated: peaks are unbounded then, and the check warns."""
 
@@ -64,7 +67,7 @@ def a_priori_error(kh: float, order: int) -> float:
 
     Fitted on lossy cavities with exact solutions (common practice, no source); it knows neither damping nor pollution.
     """
-    return float(NEPER * 2 * (kh / 4) ** (order + 1) / factorial(order + 1))
+    return float(8.686 * 2 * (kh / 4) ** (order + 1) / factorial(order + 1))
 
 
 def local_error(kh: Floats) -> Floats:
@@ -85,9 +88,13 @@ def wavenumber_shift(kh: Floats) -> Floats:
 
 def mean_edges(case: Case) -> Floats:
     """Mean edge length of every tetrahedron, (t,) [m]."""
+    return np.asarray(_edges(case).mean(axis=0))
+
+
+def _edges(case: Case) -> Floats:
     corners = case.mesh.nodes[case.mesh.tets[:, :4]]
     pairs = ((0, 1), (0, 2), (0, 3), (1, 2), (1, 3), (2, 3))
-    return np.asarray(np.mean([np.linalg.norm(corners[:, a] - corners[:, b], axis=1) for a, b in pairs], axis=0))
+    return np.stack([np.linalg.norm(corners[:, a] - corners[:, b], axis=1) for a, b in pairs])
 
 
 def elements_kh(case: Case, frequency: float = 0.0) -> Floats:
@@ -120,7 +127,7 @@ def modal_loss(case: Case, walls: Iterable[Wall], frequency: float) -> float:
         _, c = damped(region.medium, region.damping, f)
         inside[index] = np.maximum(-np.imag(c**-2) / np.real(c**-2), 0.0) if np.all(np.real(c**-2) > 0) else 1.0
     for wall in walls:
-        c = abs(case.regions[wall.region].medium.c(f))
+        c = np.abs(case.regions[wall.region].medium.c(f))
         through[wall.region] += c * _absorption(case, wall, f) * wall.area / (8 * np.pi * f)
     share = volume / volume.sum()
     parts = inside + through / np.maximum(volume, 1e-300)[:, None]
@@ -136,11 +143,13 @@ def _absorption(case: Case, wall: Wall, f: Floats) -> Floats:
     region = case.regions[wall.region]
     rho, c = damped(region.medium, region.damping, f)
     fluid = Adjacent(region.medium.reference, rho * c)
-    admittance = wall.boundary.admittance(f, fluid)
-    if admittance is None:
-        admittance = region.damping.hard_wall_admittance(f, fluid.fluid) if wall.boundary.hard else np.zeros(len(f))
-    y = admittance * region.medium.rho(f) * region.medium.c(f)
-    return np.maximum(1 - np.abs((1 - y) / (1 + y)) ** 2, 0.0)
+    own = wall.boundary.admittance(f, fluid)
+    if own is None and wall.boundary.hard:
+        own = region.damping.hard_wall_admittance(f, fluid.fluid)
+    if own is None:
+        return np.zeros(len(f))
+    y = own * region.medium.rho(f) * region.medium.c(f)
+    return np.asarray(np.maximum(1 - np.abs((1 - y) / (1 + y)) ** 2, 0.0))
 
 
 # ---------------------------------------------------------------------------------------------------------------------
@@ -159,7 +168,8 @@ class _Rule:
 
     @classmethod
     def of(cls, case: Case, topology: Topology, walls: Iterable[Wall], frequency: float) -> _Rule:
-        kh, volume, region = elements_kh(case, frequency), _volumes(case), case.mesh.tet_region
+        edges, volume, region = _edges(case), _volumes(case), case.mesh.tet_region
+        kh = _wavenumbers(case, frequency)[region] * np.maximum(edges.mean(axis=0), STRETCHED * edges.max(axis=0))
         share = volume / np.bincount(region, weights=volume, minlength=len(case.regions))[region]
         per_accuracy = 1 / case.sweep.accuracy
         shift = NEPER / modal_loss(case, walls, frequency) * per_accuracy * wavenumber_shift(kh)
@@ -175,7 +185,7 @@ class _Rule:
         edges = np.take_along_axis(self.local, _edge_orders(self.topology, orders) - 1, axis=1)
         parts = self.share * shift, self.share * np.mean(edges**2, axis=1)
         means = [np.bincount(self.region, weights=part, minlength=self.regions) for part in parts]
-        return np.sqrt(means[0] ** 2 + means[1])
+        return np.asarray(np.sqrt(means[0] ** 2 + means[1]))
 
     def choose(self) -> Ints:
         """The orders (t,) of lowest n + lambda V e, lambda by bisection of its logarithm; regions no order can serve apart."""

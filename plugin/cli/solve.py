@@ -9,6 +9,7 @@ import numpy as np
 
 from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, register, result_path, say, show
 from murmesh.plugin.load import load_case_file
+from murmesh.solver.orders import orders_text
 from murmesh.solver.result import Result, write_result
 from murmesh.solver.sweep import Journal, solve
 
@@ -49,7 +50,8 @@ def run(args: argparse.Namespace) -> int:
 
 def summary(result: Result) -> str:
     """What the solver can say about its own numbers."""
-    parts = [f"order {result.order}, {result.provenance['unknowns']} unknowns, {result.provenance['linear_solver']}"]
+    unknowns, linear_solver = int(result.provenance["unknowns"]), result.provenance["linear_solver"]
+    parts = [f"{orders_text(result.orders)}, {unknowns:,} unknowns, {linear_solver}"]
     if result.mesh_error_db is not None:
         parts.append(
             f"mesh error at the receivers {result.mesh_error_db:.2g} dB rms (wanted {result.case.sweep.accuracy:g} dB)"

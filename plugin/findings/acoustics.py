@@ -13,9 +13,10 @@ from murmesh.plugin.findings.scene import Scene
 from murmesh.plugin.mesh_source import element_size
 from murmesh.solver.case.boundary import Adjacent, Boundary, Sheet
 from murmesh.solver.case.load import SurfaceVelocity
-from murmesh.solver.errors import CaseError
+from murmesh.solver.errors import CaseError, MurmeshError
+from murmesh.solver.orders import elements_kh, expected_errors, orders_text
 from murmesh.solver.scan import interpolation
-from murmesh.solver.space import a_priori_error
+from murmesh.solver.space import Space, discretise
 
 Floats = npt.NDArray[np.float64]
 UNCOVERED = 0.01
@@ -25,29 +26,32 @@ ROUND = 0.95
 
 
 def resolution(scene: Scene) -> Iterator[Finding]:
-    """Elements per wavelength and the a-priori error at the highest frequency, per region."""
-    from murmesh.solver.space import automatic_order, elements_kh
-
-    sweep = scene.case.sweep
-    order, top = sweep.order or automatic_order(scene.case), float(scene.frequencies[-1])
-    kh = elements_kh(scene.case)
+    """Elements per wavelength, orders and the a-priori error at the highest frequency, per region."""
     for index, region in enumerate(scene.case.regions):
-        inside = scene.case.mesh.tet_region == index
-        if not np.any(inside):
+        if not np.any(scene.case.mesh.tet_region == index):
             cure = "mesh it and give it a volume group, or take it out of the case"
             yield error("region_not_meshed", region.name, "the region has no tetrahedra", cure)
-            continue
-        coarse = float(np.quantile(kh[inside], 0.95))
-        expected = a_priori_error(coarse, order)
-        text = f"{2 * np.pi / coarse:.2g} elements per wavelength at {top:g} Hz, order {order}: a-priori error "
-        text += f"{expected:.2g} dB"
-        if expected <= sweep.accuracy:
-            yield note("elements_per_wavelength", region.name, text)
-            continue
-        speed = abs(complex(region.medium.c(scene.frequencies[-1:])[0]))
-        size = element_size(top, speed, order, sweep.accuracy)
-        cure = f"use elements of {size:.2g} m, a higher order, or a lower highest frequency"
-        yield warning("elements_per_wavelength", region.name, f"{text}, wanted {sweep.accuracy:g} dB", cure)
+    try:
+        space = discretise(scene.case)
+        expected = expected_errors(scene.case, space.topology, space.walls, space.dofs.orders)
+    except MurmeshError:
+        return  # said by the findings about the mesh and the laws
+    for index in np.unique(scene.case.mesh.tet_region).tolist():
+        yield _resolution_of(scene, space, index, float(expected[index]))
+
+
+def _resolution_of(scene: Scene, space: Space, index: int, expected: float) -> Finding:
+    region, sweep, inside = scene.case.regions[index], scene.case.sweep, scene.case.mesh.tet_region == index
+    top, coarse = float(scene.frequencies[-1]), float(np.quantile(elements_kh(scene.case)[inside], 0.95))
+    orders = space.dofs.orders[inside]
+    text = f"{2 * np.pi / coarse:.2g} elements per wavelength at {top:g} Hz, {orders_text(orders)}: a-priori error "
+    text += f"{expected:.2g} dB ({space.dofs.n_dofs:,} unknowns in all)"
+    if expected <= sweep.accuracy * (1 + 1e-9):
+        return note("elements_per_wavelength", region.name, text)
+    speed = abs(complex(region.medium.c(scene.frequencies[-1:])[0]))
+    size = element_size(top, speed, int(orders.max()), sweep.accuracy)
+    cure = f"use elements of {size:.2g} m or less, a higher order, or a lower highest frequency"
+    return warning("elements_per_wavelength", region.name, f"{text}, wanted {sweep.accuracy:g} dB", cure)
 
 
 def losses(scene: Scene) -> Iterator[Finding]:

@@ -15,6 +15,7 @@ from murmesh.plugin.pictures.style import SIGNED_MAP, colour_bar, look, page, sa
 from murmesh.plugin.sampling import Skin, sample_skin, values_on
 from murmesh.solver.errors import ResultError
 from murmesh.solver.modes import Modes
+from murmesh.solver.orders import orders_text
 
 _HEIGHT, _BAR = 5.9, 1.35  # inches
 
@@ -51,7 +52,7 @@ def figure(modes: Modes, index: int = 0, skin: Skin | None = None) -> Figure:
         "pressure relative to its largest value at a vertex; the two colours swing in opposite phase, white is a node",
         "hard walls, no losses, no load; no frequency weighting",
     ]
-    notes = [VIEWS_NOTE, f"{case.title or 'untitled case'} · elements of order {modes.space.order}."]
+    notes = [VIEWS_NOTE, f"{case.title or 'untitled case'} · elements of {orders_text(modes.space.dofs.orders)}."]
     sheet = page(f"Cavity mode at {hertz(float(modes.frequencies[index]))}", facts, notes, _HEIGHT)
     drawn = two_views(sheet.narrowed(_BAR), skin, 0.05, 0.0, scalars=shape, cmap=SIGNED_MAP, clim=(-1.0, 1.0))
     places = np.array([receiver.position for receiver in case.receivers]).reshape(-1, 3)

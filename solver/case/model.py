@@ -102,7 +102,7 @@ class Sweep(Declared):
 
     frequencies: npt.NDArray[np.float64] = quantity(help="lines, increasing, (nf,)", unit="Hz", positive=True)
     order: int = quantity(
-        help="polynomial order of the elements, 1..8; 0: from the highest frequency",
+        help="polynomial order of the elements, 1..8; 0: of every element by itself, from the accuracy",
         low=0,
         high=HIGHEST_ORDER,
         default=0,

@@ -26,10 +26,12 @@ from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.export.ranking_json import ranking_tree
 from murmesh.plugin.files import written
 from murmesh.plugin.sampling import sample_skin, sample_volume, values_on
+from murmesh.solver import sweep
 from murmesh.solver.contribution import QUIETENING, participation, rank
 from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import P0
 from murmesh.solver.result import Result
+from murmesh.solver.space import discretise
 
 Floats = npt.NDArray[np.float64]
 to_vtk: Any = numpy_support.numpy_to_vtk
@@ -181,6 +183,32 @@ def test_the_jump_across_a_sheet_survives(tmp_path: Path, result: Result) -> Non
 def test_without_a_sheet_every_place_has_one_point(tmp_path: Path) -> None:
     data = _read_vtu(EXPORTS["vtu"].make(solved_box.result(sheet=False), tmp_path / "f.vtu", frequency=F))
     assert len(_coincident(_points(data))[0]) == 0
+
+
+@pytest.fixture
+def mixed(monkeypatch: pytest.MonkeyPatch) -> Result:
+    """The box with orders drawn at random from 1 to 4, element by element."""
+    case = solved_box.case()
+    orders = np.random.default_rng(4).integers(1, 5, len(case.mesh.tets))
+    monkeypatch.setattr(sweep, "discretise", lambda case, order=0: discretise(case, orders=orders))
+    return sweep.solve(case, method="direct")
+
+
+@pytest.mark.parametrize("name", ["vtu", "vtkhdf"])
+def test_mixed_orders_are_exact_at_and_between_the_points(tmp_path: Path, mixed: Result, name: str) -> None:
+    assert set(mixed.orders) == {1, 2, 3, 4}
+    path = EXPORTS[name].make(mixed, tmp_path / f"f.{name}", **({"frequency": F} if name == "vtu" else {}))
+    if name == "vtu":
+        data = _read_vtu(path)
+    else:
+        reader = vtkHDFReader()
+        reader.SetFileName(str(path))
+        reader.Update()
+        data = reader.GetOutput()
+        data = data.GetPartition(0) if hasattr(data, "GetPartition") else data
+    places = _inside()
+    exact = mixed.pressure_at(places, F)[:, 0]
+    np.testing.assert_allclose(_probe(data, places), exact, atol=1e-6 * np.abs(exact).max())
 
 
 # ---------------------------------------------------------------------------------------------------------------------
