@@ -21,10 +21,13 @@ import numpy as np
 import numpy.typing as npt
 
 from murmesh.solver.accuracy import MeshError, calibration_lines, kappa, next_order, scaled, true_errors
+from murmesh.solver.assembly import DofMap
+from murmesh.solver.bands import plan_bands
 from murmesh.solver.case.model import HIGHEST_ORDER, Case
 from murmesh.solver.engine import Engine, Line
 from murmesh.solver.errors import FallbackWarning, SolveError, ValidityWarning
 from murmesh.solver.journal import Journal, light
+from murmesh.solver.orders import orders_text
 from murmesh.solver.receiver_points import Samples, locate_receivers
 from murmesh.solver.reduced import Certificate, Reduction, Step, evaluate, most_lines, reduce
 from murmesh.solver.result import Model, Result
@@ -80,45 +83,90 @@ def solve(
     and the case is solved once more.
     Raises CaseError, MeshError or SolveError; an interrupt leaves the journal as it is.
     """
-    tell = report or (lambda progress: None)
+    how = _How(report or (lambda progress: None), solver, _method(case, method))
     space = discretise(case, order)
-    sweep = _Sweep.of(space, journal, tell, solver, method)
-    result = sweep.run()
+    if order or case.sweep.order:
+        return _Sweep.of(space, journal, how).run()
+    result = _solve(space, journal, how)
     error = result.mesh_error_db
-    if order or case.sweep.order or error is None or error <= case.sweep.accuracy:
+    if error is None or error <= case.sweep.accuracy:
         return result
-    above = journal / "raised" if journal else None
-    raised = _Sweep.of(next_order(space), above, tell, solver, method).run()
+    raised = _solve(next_order(space), _below(journal, "raised"), how)
     words = f"by one: the error bar showed {error:.2g} dB rms where {case.sweep.accuracy:g} dB are wanted"
     return replace(raised, provenance={**raised.provenance, "orders_raised": words})
 
 
+@dataclass(frozen=True)
+class _How:
+    """Who is told, the linear solver, and the method (direct or reduced)."""
+
+    report: Report
+    solver: str
+    method: str
+
+
+def _method(case: Case, method: str) -> str:
+    chosen = method or case.sweep.method
+    if chosen == "auto":
+        return "direct" if len(case.sweep.frequencies) < FEWEST_LINES else "reduced"
+    return chosen
+
+
+def _below(folder: Path | None, name: str) -> Path | None:
+    return folder / name if folder else None
+
+
+def _solve(space: Space, journal: Path | None, how: _How) -> Result:
+    """A sweep whose orders are the rule's: direct lines in sub-bands where these pay. A reduced sweep has one band: a
+    second model would cost as many factorisations again."""
+    bands = plan_bands(space) if how.method == "direct" else ()
+    if len(bands) < 2:
+        return _Sweep.of(space, journal, how).run()
+    lines: list[Line] = []
+    for number, band in enumerate(bands):
+        dofs = DofMap.build(space.topology, band.orders)
+        part = _Sweep.of(replace(space, order=dofs.max_order, dofs=dofs), _below(journal, f"band{number}"), how, band.lines)
+        lines += [_padded(line, space.dofs.selection_of(dofs), space.dofs.n_dofs) for line in part.direct()]
+    return part.collect(lines, None, None)
+
+
+def _padded(line: Line, places: npt.NDArray[np.int64], size: int) -> Line:
+    """The line with its fields in the numbering of higher orders, whose further functions it does not use."""
+    responses = []
+    for response in line.responses:
+        field = response.field
+        if field.size:
+            field = np.zeros((size, field.shape[1]), dtype=np.complex128)
+            field[places] = response.field
+        responses.append(replace(response, field=field))
+    return replace(line, responses=tuple(responses))
+
+
 @dataclass(frozen=True, eq=False)
 class _Sweep:
-    """One sweep: what is solved, with what, and who is told."""
+    """One sweep, or one band of it: what is solved, with what, and who is told."""
 
     engine: Engine
     samples: Samples
     lines: list[Values]
-    method: str
+    first: int
+    how: _How
     journal: Journal | None
-    report: Report
     started: float
-    solver: str
     mesh_error: MeshError | None
 
     @classmethod
-    def of(cls, space: Space, journal: Path | None, report: Report, solver: str, method: str) -> _Sweep:
+    def of(cls, space: Space, journal: Path | None, how: _How, part: slice = slice(None)) -> _Sweep:
         case = space.case
         samples = locate_receivers(case, space.geometry)
         system = build_system(space, samples)
-        lines = system.values(case.sweep.frequencies)
+        lines = system.values(case.sweep.frequencies[part])
         _warn_of_active_terms(system, lines)
-        what = f"{case.checksum} {_digest(space)} size {system.size} {solver}"
+        what = f"{case.checksum} {_digest(space)} size {system.size} {how.solver}"
         book = Journal.open(journal, what) if journal else None
         judge = MeshError.of(system, samples) if case.sweep.error_bar and space.dofs.orders.min() < HIGHEST_ORDER else None
-        engine = Engine.of(system, solver)
-        return cls(engine, samples, lines, method or case.sweep.method, book, report, time.monotonic(), solver, judge)
+        engine = Engine.of(system, how.solver)
+        return cls(engine, samples, lines, part.start or 0, how, book, time.monotonic(), judge)
 
     @property
     def case(self) -> Case:
@@ -126,17 +174,17 @@ class _Sweep:
 
     def run(self) -> Result:
         """The reduced sweep if it is wanted and certified, the direct one otherwise."""
-        if self.method == "direct" or (self.method == "auto" and len(self.lines) < FEWEST_LINES):
-            return self._collect(self._scaled(self._direct({})), None, None)
+        if self.how.method == "direct":
+            return self.collect(self.direct(), None, None)
         resumed = tuple(self.journal.steps()) if self.journal else ()
         model, certificate = self._reduce(resumed)
         exact = {step.index: step.line for step in model.steps}
         if not certificate.certified:
             warnings.warn(f"reduced sweep: {certificate.words}", FallbackWarning, stacklevel=3)
-            return self._collect(self._scaled(self._direct(exact)), None, certificate)
+            return self.collect(self.direct(exact), None, certificate)
         lines = self._scaled([exact.get(i, line) for i, line in enumerate(self._modelled(model))])
         self._tell(len(lines), len(resumed), lines[-1].frequency, 0.0, len(exact), certificate.words)
-        return self._collect(lines, model, certificate)
+        return self.collect(lines, model, certificate)
 
     # -- reduced
 
@@ -170,12 +218,12 @@ class _Sweep:
 
     # -- direct
 
-    def _direct(self, exact: dict[int, Line]) -> list[Line]:
-        """Every line, those known already left out."""
-        lines: list[Line] = []
+    def direct(self, exact: dict[int, Line] | None = None) -> list[Line]:
+        """Every line, those known already left out, with calibrated mesh errors."""
+        known, lines = exact or {}, []
         resumed, solved, started = 0, 0, time.monotonic()
         for index, values in enumerate(self.lines):
-            line = exact.get(index) or (self.journal.line(index, values.frequency) if self.journal else None)
+            line = known.get(index) or (self.journal.line(index, values.frequency) if self.journal else None)
             if line is None:
                 line = self._light(values, self.engine.line(values))
                 solved += 1
@@ -185,8 +233,8 @@ class _Sweep:
                 resumed += 1
             lines.append(line)
             pace = (time.monotonic() - started) / max(solved, 1)
-            self._tell(index + 1, resumed, values.frequency, pace * (len(self.lines) - index - 1), solved + len(exact))
-        return lines
+            self._tell(index + 1, resumed, values.frequency, pace * (len(self.lines) - index - 1), solved + len(known))
+        return self._scaled(lines)
 
     def _light(self, values: Values, line: Line) -> Line:
         """What is kept of an exact line: its mesh error, and its field where it is asked for."""
@@ -200,7 +248,7 @@ class _Sweep:
             return lines
         factors, exact = {}, {}
         try:
-            finer = Engine.of(self.mesh_error.finer, self.solver)
+            finer = Engine.of(self.mesh_error.finer, self.how.solver)
             for index in calibration_lines(len(lines)):
                 exact[index] = true_errors(finer, lines[index], self.lines[index])
                 factors[index] = kappa(tuple(r.mesh_error for r in lines[index].responses), exact[index])
@@ -209,11 +257,12 @@ class _Sweep:
         return scaled(lines, factors, exact)
 
     def _tell(self, done: int, resumed: int, f: float, left: float, factorised: int, words: str = "") -> None:
-        self.report(Progress(done, len(self.lines), resumed, f, left, factorised, words))
+        total = len(self.case.sweep.frequencies)
+        self.how.report(Progress(self.first + done, total, resumed, f, left, self.first + factorised, words))
 
     # -- what was found
 
-    def _collect(self, lines: list[Line], model: Reduction | None, certificate: Certificate | None) -> Result:
+    def collect(self, lines: list[Line], model: Reduction | None, certificate: Certificate | None) -> Result:
         space = self.engine.system.space
         held = None
         if model is not None:
@@ -224,7 +273,7 @@ class _Sweep:
         system = self.engine.system
         return {
             "case_checksum": self.case.checksum,
-            "order": str(system.space.order),
+            "orders": orders_text(system.space.dofs.orders),
             "unknowns": str(system.size),
             "linear_solver": self.engine.solver,
             "method": "direct" if model is None else "reduced",

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from itertools import pairwise
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -32,7 +33,7 @@ from murmesh.solver.orders import (
     wavenumber_shift,
 )
 from murmesh.solver.space import discretise
-from murmesh.solver.sweep import solve
+from murmesh.solver.sweep import Progress, solve
 from murmesh.solver.topology import Topology
 from reading import read_csv_reference
 
@@ -233,8 +234,31 @@ def test_a_mixed_sweep_with_sheet_and_impedance_balances(monkeypatch: pytest.Mon
     orders = np.random.default_rng(1).integers(5, 9, len(mesh.tets))
     fine = solve(case, order=8, method="direct")
     monkeypatch.setattr(sweep_module, "discretise", lambda case, order=0: discretise(case, orders=orders))
+    monkeypatch.setattr(sweep_module, "plan_bands", lambda space: ())
     mixed = solve(case, method="direct")
     assert np.array_equal(mixed.orders, orders) and mixed.order == 8
     assert np.abs(mixed.imbalance()).max() < 1e-9 and mixed.load_cases[0].closure.max() < 1e-9
     levels = [10 * np.log10(r.mean_square("ear")) for r in (mixed, fine)]
     np.testing.assert_allclose(levels[0], levels[1], atol=0.02)
+
+
+def test_a_direct_sweep_in_sub_bands(tmp_path: Path) -> None:
+    """Lower lines use lower orders; fields come back in one numbering, and an interrupted sweep goes on band by band."""
+    box = meshes.box(3, 3, 2, (1.0, 0.8, 0.6))
+    loads = [SurfaceVelocity("x0", Uniform(1e-3 + 0j))]
+    kinds = {"x0": Vibrating(), "x1": Impedance(Given(2 - 1j))}
+    lines = np.arange(60.0, 601.0, 60.0)
+    case = case_of(box, kinds, loads, lines, {"ear": (0.7, 0.6, 0.2)}, damping=lossy(0.02), field_frequencies=lines[[0, -1]])
+    bands = plan_bands(discretise(case))
+    assert len(bands) > 1 and bands[0].unknowns < 0.6 * bands[-1].unknowns
+    banded, fine = solve(case, tmp_path / "lines", method="direct"), solve(case, order=8, method="direct")
+    change = 10 * np.log10(banded.mean_square("ear") / fine.mean_square("ear"))
+    assert 1e-4 < np.sqrt(np.mean(change**2)) < 0.15
+    ear = np.array([[0.7, 0.6, 0.2]])
+    for f, at in ((lines[0], 0), (lines[-1], -1)):
+        heard = banded.pressure_at(ear, f)[0, 0]
+        assert abs(heard - banded.load_cases[0].contributions[at].sum()) < 1e-9 * abs(heard)
+    seen: list[Progress] = []
+    solve(case, tmp_path / "lines", method="direct", report=seen.append)
+    assert seen[-1].done == len(lines) and [p.done for p in seen] == list(range(1, len(lines) + 1))
+    assert all(p.resumed for p in seen)
