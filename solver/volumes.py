@@ -12,6 +12,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -26,7 +27,7 @@ Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 
 _KINDS = (slice(0, 4), slice(4, 10), slice(10, 14), slice(14, 15))  # vertices, edges, faces, interior
-_CHUNK = 4_000_000  # numbers held at once in a temporary
+_CHUNK = 100_000  # numbers held at once in a temporary: what stays in the cache is not paged in anew each time
 
 
 def volume_matrices(
@@ -48,9 +49,9 @@ def volume_matrices(
         for part in pairs.parts(dofmap.sizes):
             blocks = elements.blocks(pairs, part)
             for place, order in pattern.places(pairs, part):
-                stiffness[place] = blocks[0].transpose(order)
-                mass[place] = blocks[1].transpose(order)
-                indices[place] = pattern.columns(pairs, part, order)
+                _put(stiffness, place, blocks[0].transpose(order))
+                _put(mass, place, blocks[1].transpose(order))
+                _put(indices, place, pattern.columns(pairs, part, order))
     return _matrix(stiffness, indices, pattern.indptr, n), _matrix(mass, indices, pattern.indptr, n)
 
 
@@ -62,6 +63,17 @@ def stiffness(geometry: Geometry, dofmap: DofMap, tets: npt.ArrayLike | None = N
 def mass(geometry: Geometry, dofmap: DofMap, tets: npt.ArrayLike | None = None) -> sp.csr_matrix:
     """M = int q p dV over the given tetrahedra (default all), (n_dofs, n_dofs), real symmetric."""
     return volume_matrices(geometry, dofmap, tets)[1]
+
+
+def _put(target: npt.NDArray[Any], starts: Ints, blocks: npt.NDArray[Any]) -> None:
+    """Write the rows of blocks (m, a, b) to target[start : start + b], starts (m, a); a run is copied as one item."""
+    size, step = blocks.shape[2], target.itemsize
+    if size == 1:
+        target[starts] = blocks[:, :, 0]
+        return
+    run = np.dtype((np.void, size * step))
+    runs = np.ndarray((len(target) - size + 1,), run, buffer=target, strides=(step,))
+    runs[starts] = np.ascontiguousarray(blocks, dtype=target.dtype).view(run)[:, :, 0]
 
 
 def _matrix(data: Floats, indices: Ints, indptr: Ints, n: int) -> sp.csr_matrix:
@@ -159,7 +171,7 @@ class _Pattern:
         return _Pattern(dofmap, tuple(table.values()), indptr.astype(np.int32 if small else np.int64), width, offset)
 
     def places(self, pairs: _Pairs, part: _Part) -> Iterator[tuple[Ints, tuple[int, int, int]]]:
-        """Places (pairs, a, b) in the CSR arrays with the axes of the block, and of its mirror image."""
+        """Where the rows (pairs, a) of each block start in the CSR arrays, with its axes; then those of its mirror image."""
         a, b = pairs.kinds
         yield self._place(pairs.rows, self.offset[a, b], part.pairs, part.shape), (0, 1, 2)
         if a != b:
@@ -168,13 +180,13 @@ class _Pattern:
     def _place(self, rows: Ints, offset: Ints, chosen: Ints, shape: tuple[int, int]) -> Ints:
         row = rows[chosen]
         start = self.indptr[self.dofmap.offsets[row]] + offset[chosen]
-        down = start[:, None] + np.arange(shape[0]) * self.width[row][:, None]
-        return np.asarray(down[:, :, None] + np.arange(shape[1]))
+        return np.asarray(start[:, None] + np.arange(shape[0]) * self.width[row][:, None])
 
     def columns(self, pairs: _Pairs, part: _Part, order: tuple[int, int, int]) -> Ints:
-        """Column numbers (pairs, 1, b) of the block, or of its mirror image."""
-        entity, size = (pairs.cols, part.shape[1]) if order == (0, 1, 2) else (pairs.rows, part.shape[0])
-        return (self.dofmap.offsets[entity[part.pairs]][:, None] + np.arange(size))[:, None, :]
+        """Column numbers (pairs, a, b) of the block, or of its mirror image."""
+        entity, (a, b) = (pairs.cols, part.shape) if order == (0, 1, 2) else (pairs.rows, part.shape[::-1])
+        numbers = (self.dofmap.offsets[entity[part.pairs]][:, None] + np.arange(b)).astype(self.indptr.dtype)
+        return np.broadcast_to(numbers[:, None, :], (len(numbers), a, b))
 
 
 def _append(width: Ints, pairs: _Pairs, sizes: Ints, *, mirrored: bool) -> Ints:
