@@ -5,11 +5,12 @@
 Straight tetrahedra: six metric terms times reference matrices, K_e = sum_m g_m R_m.  Curved ones: quadrature in chunks.
 The scatter works on blocks: the pattern is that of entities (vertices, edges, faces, interiors) that share a
 tetrahedron, and the place of every block in the final CSR arrays is known before a value is computed, so that
-nothing is sorted, summed or stored twice per matrix entry.
+nothing is sorted, summed or stored twice per matrix entry.  Low orders, whose blocks are tiny, are summed row by row.
 """
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
@@ -23,10 +24,13 @@ from murmesh.solver.elements.geometry import Geometry
 from murmesh.solver.elements.quadrature import tetrahedron_rule
 from murmesh.solver.elements.tetrahedron import basis, layout, reduced_derivatives, reference_matrices
 
+Complex = npt.NDArray[np.complex128]
 Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 
 _KINDS = (slice(0, 4), slice(4, 10), slice(10, 14), slice(14, 15))  # vertices, edges, faces, interior
+MAX_BY_ROWS = 4
+"""Up to this order, where all orders are equal, matrices are summed row by row; entities hold too little for blocks."""
 _CHUNK = 100_000  # numbers held at once in a temporary: what stays in the cache is not paged in anew each time
 
 
@@ -41,6 +45,8 @@ def volume_matrices(
     n = dofmap.n_dofs
     if not len(subset):
         return sp.csr_matrix((n, n)), sp.csr_matrix((n, n))
+    if dofmap.orders.min() == dofmap.max_order <= MAX_BY_ROWS:
+        return _by_rows(geometry, dofmap, subset)
     pattern = _Pattern.build(dofmap, subset)
     elements = _Elements.build(geometry, dofmap, subset)
     indices = np.empty(pattern.indptr[-1], dtype=pattern.indptr.dtype)
@@ -53,6 +59,41 @@ def volume_matrices(
                 _put(mass, place, blocks[1].transpose(order))
                 _put(indices, place, pattern.columns(pairs, part, order))
     return _matrix(stiffness, indices, pattern.indptr, n), _matrix(mass, indices, pattern.indptr, n)
+
+
+def _by_rows(geometry: Geometry, dofmap: DofMap, subset: Ints) -> tuple[sp.csr_matrix, sp.csr_matrix]:
+    """K and M of tetrahedra of one order, a chunk of rows after another, as one complex matrix K + i M.
+
+    A chunk is Q C: the rows of C are those rows of the element matrices that belong to its unknowns, Q sums them.
+    """
+    elements, dofs = _Elements.build(geometry, dofmap, subset), dofmap.dofs_up_to(subset, dofmap.max_order)
+    n, width = dofmap.n_dofs, dofs.shape[1]
+    most = dofs.size * width
+    dofs = dofs.astype(np.int32 if most < 2**31 else np.int64)
+    each = np.arange(dofs.size + 1, dtype=dofs.dtype)
+    by_unknown = sp.csc_matrix((np.ones(dofs.size, np.int8), dofs.ravel(), each), shape=(n, dofs.size)).tocsr()
+    own, first = by_unknown.indices, by_unknown.indptr  # instances, tetrahedron * width + local function, by unknown
+    cuts = np.unique(np.append(np.searchsorted(first, np.arange(0, dofs.size, max(1, _CHUNK // width))), n))
+    indptr = np.zeros(n + 1, dtype=dofs.dtype)
+    indices = np.empty(most, dofs.dtype)  # more than needed; what is not filled is never paged in
+    stiffness, mass = np.empty(most), np.empty(most)
+    for low, high in itertools.pairwise(cuts.tolist()):
+        tets, local = np.divmod(own[first[low] : first[high]], width)
+        columns, data, order = dofs[tets], *elements.rows(tets, local)
+        C = sp.csr_matrix(
+            (data.ravel(), columns[order].ravel(), np.arange(0, data.size + 1, width, dtype=dofs.dtype)), shape=(len(tets), n)
+        )
+        starts = first[low : high + 1] - first[low]
+        back = np.empty(len(tets), dtype=dofs.dtype)
+        back[order] = each[: len(tets)]
+        Q = sp.csr_matrix((np.ones(len(tets), dtype=complex), back, starts), shape=(high - low, len(tets)))
+        chunk = Q @ C
+        chunk.sort_indices()
+        filled = slice(indptr[low], indptr[low] + chunk.nnz)
+        stiffness[filled], mass[filled], indices[filled] = chunk.data.real, chunk.data.imag, chunk.indices
+        indptr[low + 1 : high + 1] = indptr[low] + chunk.indptr[1:]
+    end = indptr[-1]
+    return _matrix(stiffness[:end], indices[:end], indptr, n), _matrix(mass[:end], indices[:end], indptr, n)
 
 
 def stiffness(geometry: Geometry, dofmap: DofMap, tets: npt.ArrayLike | None = None) -> sp.csr_matrix:
@@ -254,6 +295,25 @@ class _Elements:
         indptr = np.concatenate([[0], np.cumsum(part.counts)])
         add = sp.csr_matrix((np.ones(len(tets)), np.argsort(order), indptr), shape=(len(part.counts), len(tets)))
         return (add @ each[0]).reshape(-1, *part.shape), (add @ each[1]).reshape(-1, *part.shape)
+
+    def rows(self, tets: Ints, local: Ints) -> tuple[Complex, Ints]:
+        """Rows (m, nloc) of K_e + i M_e, the local functions `local` of `tets`, in the returned order (m,) of them."""
+        width = len(self.reference[1])
+        order = np.argsort(local.astype(np.uint8), kind="stable")  # rows of one local function next to each other
+        bounds = np.searchsorted(local[order], np.arange(width + 1))
+        tets = tets[order]
+        metric, det = self.metric[tets], self.det[tets][:, None]
+        out = np.empty((len(tets), width), dtype=np.complex128)
+        for i in range(width):
+            same = slice(bounds[i], bounds[i + 1])
+            out.real[same] = metric[same] @ self.reference[0][:, i]
+            out.imag[same] = det[same] * self.reference[1][i]
+        for bent in self.bent:
+            place = bent.place[tets]
+            curved = np.flatnonzero(place >= 0)
+            out.real[curved] = bent.stiffness[place[curved], local[order[curved]]]
+            out.imag[curved] = bent.mass[place[curved], local[order[curved]]]
+        return out, order
 
     def _fill(self, out: Floats, tets: Ints, corner: tuple[int, int], shape: tuple[int, int]) -> None:
         """Element blocks (2, m, a b) of local entities `corner`; a lower order is a prefix of the reference."""

@@ -9,6 +9,7 @@ import scipy.sparse as sp
 import scipy.sparse.linalg as spla
 
 from meshes import TestMesh, ball, box, cylinder, faces_where, grid, jiggled, quadratic, shuffled
+from murmesh.solver import volumes
 from murmesh.solver.assembly import (
     DofMap,
     Geometry,
@@ -525,3 +526,20 @@ def test_order_and_point_errors() -> None:
         evaluate(geometry, dofmap, [0, -1], np.full((2, 4), 0.25))
     with pytest.raises(MeshError, match="expected one point per tetrahedron"):
         evaluate(geometry, dofmap, [0], np.full((2, 4), 0.25))
+
+
+@pytest.mark.parametrize("order", [1, 2, 3, 5])
+@pytest.mark.parametrize("bent", [False, True])
+def test_rows_and_blocks_give_the_same_matrices(order: int, bent: bool, monkeypatch: pytest.MonkeyPatch) -> None:
+    mesh = cylinder(2, 2) if bent else jiggled(box(2, 2, 3))
+    geometry, dofmap = Geometry(mesh.nodes, mesh.tets), DofMap.build(Topology.build(mesh.tets), order)
+    for subset in (None, np.arange(5, 31)):
+        monkeypatch.setattr(volumes, "_CHUNK", 4000)  # several chunks
+        monkeypatch.setattr(volumes, "MAX_BY_ROWS", 5)
+        by_rows = volumes.volume_matrices(geometry, dofmap, subset)
+        monkeypatch.setattr(volumes, "MAX_BY_ROWS", 0)
+        by_blocks = volumes.volume_matrices(geometry, dofmap, subset)
+        for a, b in zip(by_rows, by_blocks, strict=True):
+            np.testing.assert_array_equal(a.indptr, b.indptr)
+            np.testing.assert_array_equal(a.indices, b.indices)
+            np.testing.assert_allclose(a.data, b.data, rtol=0, atol=1e-14 * abs(b.data).max())
