@@ -18,7 +18,7 @@ Where no certificate can be had, `reduce` says so and the caller solves every li
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -50,7 +50,9 @@ FIELD_TOLERANCE = 0.1
 """Deviation [dB] that an agreeing line's whole field may have, root mean square over the mesh's vertices."""
 SKETCH = 64
 """Rows of the random matrix that measures residuals."""
-SCANNED_LINES = 120
+LARGEST_PART, SMALL = 0.5, 600
+"""Part of the system's unknowns that a model may have; models below `SMALL` are cheap in any case."""
+SCANNED_LINES = 60
 """Lines at which the estimate is looked at while the basis grows."""
 DB = 20 / np.log(10)
 
@@ -231,25 +233,33 @@ def reduce(
     keep: Callable[[int, Step], None] = lambda number, step: None,
     report: Callable[[Reduction], None] = lambda model: None,
     lighten: Callable[[Values, Line], Line] = lambda values, line: line,
-) -> tuple[Reduction, Certificate]:
+) -> tuple[Reduction, Certificate, list[Line]]:
     """Grow a model of `full` until it is certified to `tolerance` [dB] on every line, or has cost a quarter of the lines.
 
     `steps` are those of an interrupted run; `keep` is called with each new one as soon as it is known; `lighten` says what
-    is kept of an exact line.
+    is kept of an exact line. Returned with the certificate: every line from the model, in its coordinates and without a
+    residual (nan); none where there is no certificate.
     """
     model = Reduction.start(full.system, samples)
     for step in steps:
         model = model.with_step(step)
-    while not _agreed(model, tolerance) and len(model.steps) < most_lines(len(lines)):
+    while not _agreed(model, tolerance) and _worth_growing(model, len(lines)):
         step = _next_step(full, model, lines, tolerance)
         step = replace(step, line=lighten(lines[step.index], step.line))
         keep(len(model.steps), step)
         model = model.with_step(step)
         report(model)
-    agreed = _agreed(model, tolerance)
-    estimate = estimates(model, lines) if agreed else np.full(len(lines), np.inf)
-    done = agreed and bool(estimate.max() <= tolerance)
-    return model, Certificate(tolerance, done, tuple(step.check for step in model.steps), estimate, model.size)
+    checks = tuple(step.check for step in model.steps)
+    if not _agreed(model, tolerance):
+        return model, Certificate(tolerance, False, checks, np.full(len(lines), np.inf), model.size), []
+    found, estimate = survey(model, lines)
+    done = bool(estimate.max() <= tolerance)
+    return model, Certificate(tolerance, done, checks, estimate, model.size), found if done else []
+
+
+def _worth_growing(model: Reduction, lines: int) -> bool:
+    """Neither too many factorised lines nor so many unknowns that the model's dense lines cost what sparse ones do."""
+    return len(model.steps) < most_lines(lines) and model.size <= max(LARGEST_PART * model.system.size, SMALL)
 
 
 def most_lines(lines: int) -> int:
@@ -286,7 +296,7 @@ def _next_line(model: Reduction, lines: list[Values], tolerance: float) -> int:
     passed = next((n for n, step in enumerate(reversed(model.steps)) if not step.check.agrees(tolerance)), len(seen))
     if passed in (0, PASSES - 1):
         scanned = _unseen(len(frequencies), seen)
-        return int(scanned[np.argmax(estimates(model, [lines[i] for i in scanned]))])
+        return int(scanned[np.argmax(survey(model, [lines[i] for i in scanned])[1])])
     edges = np.sort(np.array([-1, *seen, len(frequencies)]))
     gap = int(np.argmax(np.diff(edges)))
     middle = (edges[gap] + edges[gap + 1]) // 2
@@ -349,7 +359,7 @@ def _krylov(solve: Callable[[Complex], Complex], slope: Any, start: Complex) -> 
         if not block.shape[1]:
             break
         blocks.append(block)
-    return np.hstack(blocks[1:])
+    return np.asarray(np.hstack(blocks)[:, blocks[0].shape[1] :], dtype=np.complex128)
 
 
 def orthonormal(basis: Floats, columns: Floats) -> Floats:
@@ -404,17 +414,12 @@ def _field_deviation(model: Reduction, coordinates: Complex, exact: Complex) -> 
     return float(DB * np.log1p(miss / max(float(np.linalg.norm(exact[:vertices])), 1e-300)))
 
 
-def evaluate(model: Reduction, lines: list[Values]) -> Iterator[Line]:
-    """Every line from the model, in its coordinates; no residual is known for them (nan)."""
+def survey(model: Reduction, lines: list[Values]) -> tuple[list[Line], Floats]:
+    """Lines from the model, and their estimated deviations [dB], scaled by the worst ratio seen at the checks."""
     engine = model.engine()
-    return (replace(engine.line(values), residual=float("nan")) for values in lines)
-
-
-def estimates(model: Reduction, lines: list[Values]) -> Floats:
-    """Estimated deviation [dB] of the model at every line, (nf,), scaled by the worst ratio seen at the checks."""
-    engine = model.engine()
-    raw = [float(_raw_estimate(model, values, engine.line(values)).max(initial=0.0)) for values in lines]
-    return np.asarray(raw) * _scale(model)
+    found = [replace(engine.line(values), residual=float("nan")) for values in lines]
+    raw = [float(_raw_estimate(model, *pair).max(initial=0.0)) for pair in zip(lines, found, strict=True)]
+    return found, np.asarray(raw) * _scale(model)
 
 
 def _scale(model: Reduction) -> float:

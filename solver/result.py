@@ -262,6 +262,8 @@ class Result:
         if self.model is None:
             return None
         system = build_system(self.space, locate_receivers(self.case, self.space.geometry))
+        if len(self.model.basis) != system.size or len(self.model.projected.matrices) != len(system.terms):
+            raise FormatError("the reduced model belongs to another mesh or other laws; solve the case again")
         return Engine.of(system.on(self.model.projected))
 
     def pressure_at(self, points: Floats, frequency: float, load_case: str = "") -> Complex:
@@ -396,6 +398,10 @@ def _check(result: Result) -> None:
             f"orders has shape {result.orders.shape}; expected one order 1..{HIGHEST_ORDER} for each of the "
             f"{len(case.mesh.tets)} tetrahedra; solve the case again"
         )
+    if result.model is not None:
+        _check_model(result.model, len(result.sample_receiver), case)
+    if result.certificate is not None and result.certificate.estimate.shape != result.frequencies.shape:
+        raise FormatError(f"certificate/estimate has shape {result.certificate.estimate.shape}; solve the case again")
     lines, samples, labels = len(result.frequencies), len(result.sample_receiver), len(result.power_labels)
     for index, held in enumerate(result.load_cases):
         loads = len(held.loads)
@@ -412,3 +418,22 @@ def _check(result: Result) -> None:
                 f"load_cases/{index:04d}/fields has shape {held.fields.shape}, expected one block for each of the "
                 f"{kept} field frequencies; solve the case again"
             )
+
+
+def _check_model(model: Model, samples: int, case: Case) -> None:
+    """Raise FormatError where the parts of a reduced model do not fit together."""
+    held = model.projected
+    size = len(held.fixed)
+    fits = (
+        model.basis.ndim == 2
+        and model.basis.shape[1] == size
+        and held.matrices.shape[1:] == (size, size)
+        and held.receivers.shape == (samples, size)
+        and len(held.loads) == len(case.load_cases)
+        and all(vectors.shape[:1] == (size,) for terms in held.loads for vectors in terms)
+    )
+    if not fits:
+        raise FormatError(
+            f"the reduced model does not fit together (basis {model.basis.shape}, matrices {held.matrices.shape}, receivers "
+            f"{held.receivers.shape}, {len(held.loads)} load cases); solve the case again"
+        )

@@ -29,7 +29,7 @@ from murmesh.solver.errors import FallbackWarning, SolveError, ValidityWarning
 from murmesh.solver.journal import Journal, light
 from murmesh.solver.orders import orders_text
 from murmesh.solver.receiver_points import Samples, locate_receivers
-from murmesh.solver.reduced import Certificate, Reduction, Step, evaluate, most_lines, reduce
+from murmesh.solver.reduced import Certificate, Reduction, Step, most_lines, reduce
 from murmesh.solver.result import Model, Result
 from murmesh.solver.space import Space, discretise
 from murmesh.solver.system import System, Values, build_system
@@ -177,18 +177,18 @@ class _Sweep:
         if self.how.method == "direct":
             return self.collect(self.direct(), None, None)
         resumed = tuple(self.journal.steps()) if self.journal else ()
-        model, certificate = self._reduce(resumed)
+        model, certificate, found = self._reduce(resumed)
         exact = {step.index: step.line for step in model.steps}
         if not certificate.certified:
             warnings.warn(f"reduced sweep: {certificate.words}", FallbackWarning, stacklevel=3)
             return self.collect(self.direct(exact), None, certificate)
-        lines = self._scaled([exact.get(i, line) for i, line in enumerate(self._modelled(model))])
+        lines = self._scaled([exact.get(i, line) for i, line in enumerate(self._modelled(model, found))])
         self._tell(len(lines), len(resumed), lines[-1].frequency, 0.0, len(exact), certificate.words)
         return self.collect(lines, model, certificate)
 
     # -- reduced
 
-    def _reduce(self, resumed: tuple[Step, ...]) -> tuple[Reduction, Certificate]:
+    def _reduce(self, resumed: tuple[Step, ...]) -> tuple[Reduction, Certificate, list[Line]]:
         def keep(number: int, step: Step) -> None:
             if self.journal:
                 self.journal.write_step(number, step)
@@ -211,9 +211,9 @@ class _Sweep:
             lighten=self._light,
         )
 
-    def _modelled(self, model: Reduction) -> Iterator[Line]:
+    def _modelled(self, model: Reduction, found: list[Line]) -> Iterator[Line]:
         judge = self.mesh_error.on(model.basis) if self.mesh_error else None
-        for values, line in zip(self.lines, evaluate(model, self.lines), strict=True):
+        for values, line in zip(self.lines, found, strict=True):
             yield light(judge.judged(values, line) if judge else line, keep_field=False)
 
     # -- direct
