@@ -249,7 +249,12 @@ def toml_text(job: Job) -> str:
     for name in _NAMED:
         tree[name] = {entry.pop("name"): entry for entry in tree.get(name, [])}
     tree["surfaces"] = {name: entry.pop("boundary") | entry for name, entry in tree["surfaces"].items()}
-    head = [f"{key} = {_value(value)}" for key, value in tree.items() if not isinstance(value, dict | list)]
+    return toml_tree(tree)
+
+
+def toml_tree(tree: Tree) -> str:
+    """The TOML file of a tree as `job_of` reads it, without the comments it may have had."""
+    head = [f"{key} = {toml_value(value)}" for key, value in tree.items() if not isinstance(value, dict | list)]
     parts = [HEADER + "\n".join(head)]
     for key, value in tree.items():
         if isinstance(value, dict):
@@ -260,14 +265,15 @@ def toml_text(job: Job) -> str:
 
 
 def _tables(key: str, entries: Tree) -> list[str]:
-    return [_section(f"[{key}.{_key(name)}]", entry) for name, entry in entries.items()]
+    return [_section(f"[{key}.{toml_key(name)}]", entry) for name, entry in entries.items()]
 
 
 def _section(head: str, table: Tree) -> str:
-    return "\n".join([head, *(f"{_key(key)} = {_value(value)}" for key, value in table.items())])
+    return "\n".join([head, *(f"{toml_key(key)} = {toml_value(value)}" for key, value in table.items())])
 
 
-def _key(name: str) -> str:
+def toml_key(name: str) -> str:
+    """A key as TOML writes it."""
     bare = name.isascii() and name.replace("_", "").replace("-", "").isalnum()
     return name if bare else json.dumps(name, ensure_ascii=False)
 
@@ -277,10 +283,11 @@ _WRITERS: dict[type, Callable[[Any], str]] = {
     int: str,
     float: repr,
     str: lambda value: json.dumps(value, ensure_ascii=False),
-    list: lambda value: f"[{', '.join(_value(item) for item in value)}]",
-    dict: lambda value: "{" + ", ".join(f"{_key(key)} = {_value(item)}" for key, item in value.items()) + "}",
+    list: lambda value: f"[{', '.join(toml_value(item) for item in value)}]",
+    dict: lambda value: "{" + ", ".join(f"{toml_key(key)} = {toml_value(item)}" for key, item in value.items()) + "}",
 }
 
 
-def _value(value: Any) -> str:
+def toml_value(value: Any) -> str:
+    """A value as TOML writes it, on one line."""
     return _WRITERS[type(value)](value)
