@@ -141,10 +141,10 @@ class Views:
         found = dict(zip(held.loads, 100 * held.signed[index], strict=True))
         return {name: float(found[name]) for name in sorted(found, key=lambda key: -found[key])}
 
-    def remove(self) -> None:
-        """Take away every view of this kind from the session."""
-        for which in NAMES:
-            _remove(which)
+    def remove(self, *which: str) -> None:
+        """Take away views (levels, cut, phase, panels; all of them if none is named) from the session."""
+        for name in which or NAMES:
+            _remove(name)
 
     # -- what is below -------------------------------------------------------------------------------------------------
 

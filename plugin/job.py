@@ -252,9 +252,15 @@ class Job(Declared):
         if self.mesh is None:
             raise CaseError("the job names no mesh; give file = ... under [mesh]")
         path = Path(folder) / self.mesh.file
-        from_frequency = self.mesh.size_from or (path.suffix.lower() in CAD and self.mesh.size is None)
-        size = self.element_size() if from_frequency else self.mesh.size
-        return read_mesh(path, size=size, unit=self.mesh.unit, order=self.mesh.geometry_order)
+        return read_mesh(path, size=self.size_for(path), unit=self.mesh.unit, order=self.mesh.geometry_order)
+
+    def size_for(self, path: Path) -> float | None:
+        """The element size [m] to mesh `path` with; None leaves it to the file."""
+        stated = None if self.mesh is None else self.mesh.size
+        by_frequency = self.mesh is not None and self.mesh.size_from
+        if by_frequency or (path.suffix.lower() in CAD and stated is None):
+            return self.element_size()
+        return stated
 
     # -- as text -------------------------------------------------------------------------------------------------------
 

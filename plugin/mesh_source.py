@@ -126,18 +126,18 @@ def from_gmsh(source: str = "the current gmsh model") -> TaggedMesh:
     other: dict[str, int] = {}
     tets = _gmsh_blocks(gmsh, 3, {4: 4, 11: 10}, tags, order, other)
     triangles = _gmsh_blocks(gmsh, 2, {2: 3, 9: 6}, tags, order, other)
-    low = {_group_name(gmsh, dim, tag): dim for d in (0, 1) for dim, tag in gmsh.model.getPhysicalGroups(d)}
+    low = {group_name(gmsh, dim, tag): dim for d in (0, 1) for dim, tag in gmsh.model.getPhysicalGroups(d)}
     job = "".join(gmsh.model.getAttribute(JOB_ATTRIBUTE)) if JOB_ATTRIBUTE in gmsh.model.getAttributeNames() else ""
     return tagged_mesh(flat, tets, triangles, other_cells=other, other_groups=low, source=source, job=job)
 
 
 def _gmsh_blocks(gmsh: Any, dim: int, known: Mapping[int, int], tags: Any, order: Any, other: dict[str, int]) -> list[Block]:
     blocks: list[Block] = [
-        (np.empty((0, dim + 1), dtype=np.int64), (_group_name(gmsh, dim, tag),))
+        (np.empty((0, dim + 1), dtype=np.int64), (group_name(gmsh, dim, tag),))
         for _, tag in gmsh.model.getPhysicalGroups(dim)
     ]
     for _, entity in gmsh.model.getEntities(dim):
-        names = tuple(_group_name(gmsh, dim, tag) for tag in gmsh.model.getPhysicalGroupsForEntity(dim, entity))
+        names = tuple(group_name(gmsh, dim, tag) for tag in gmsh.model.getPhysicalGroupsForEntity(dim, entity))
         for kind in gmsh.model.mesh.getElementTypes(dim, entity):
             numbers, nodes = gmsh.model.mesh.getElementsByType(kind, entity)
             if kind not in known:
@@ -149,7 +149,8 @@ def _gmsh_blocks(gmsh: Any, dim: int, known: Mapping[int, int], tags: Any, order
     return blocks
 
 
-def _group_name(gmsh: Any, dim: int, tag: int) -> str:
+def group_name(gmsh: Any, dim: int, tag: int) -> str:
+    """The name of a physical group; one made of its dimension and tag where it has none."""
     name = str(gmsh.model.getPhysicalName(dim, tag)).strip()
     return name or f"{('point', 'curve', 'surface', 'volume')[dim]}_{tag}"
 
@@ -283,6 +284,14 @@ def _dimension(cell: str) -> int:
     if cell.startswith("vertex"):
         return 0
     return 1 if cell.startswith("line") else 2 if cell.startswith(("triangle", "quad")) else 3
+
+
+def job_stored_in(content: bytes, job: str) -> bytes:
+    """The bytes of a .msh file with `job` (one line) in it, in place of the job it carried; nothing else is touched."""
+    name = JOB_ATTRIBUTE.encode()
+    section = b"$%s\n%s\n$End%s\n" % (name, job.encode("utf-8"), name)
+    pattern = rb"\$" + name + rb"\r?\n.*?\$End" + name + rb"\r?\n?"
+    return re.sub(pattern, b"", content, flags=re.DOTALL).rstrip(b"\r\n") + b"\n" + section
 
 
 def _attribute_in(path: Path) -> str:

@@ -23,6 +23,12 @@ RENDERING_CURE = f"{_APT} libegl1 libgl1 libgl1-mesa-dri libxcursor1"
 OFF_SCREEN = {"VTK_DEFAULT_OPENGL_WINDOW": "vtkEGLRenderWindow"} if sys.platform == "linux" else {}
 
 _GMSH_CHILD = "import gmsh"
+_WINDOW_CHILD = """
+import gmsh
+gmsh.initialize(readConfigFiles=False, interruptible=False)
+gmsh.option.setNumber("General.Terminal", 0)
+gmsh.fltk.initialize()
+"""
 _RENDERING_CHILD = """
 import pyvista
 plotter = pyvista.Plotter(off_screen=True, window_size=(32, 32))
@@ -30,6 +36,7 @@ plotter.add_mesh(pyvista.Sphere(), color="red")
 if plotter.screenshot(return_img=True).std() == 0.0:
     raise SystemExit("the picture came out blank")
 """
+_WINDOW_PATIENCE = 60.0
 _PATIENCE = 120.0  # seconds: a cold import on a slow disk takes tens of seconds
 
 
@@ -49,6 +56,23 @@ def require_gmsh() -> None:
     """Raises MissingLibraryError with the cure if gmsh cannot be imported."""
     if message := gmsh_missing():
         raise MissingLibraryError(message)
+
+
+def require_window() -> None:
+    """Raises MissingLibraryError with the cure if gmsh's window cannot open: no display, or one that does not answer."""
+    require_gmsh()
+    displays = [name for name in ("DISPLAY", "WAYLAND_DISPLAY") if os.environ.get(name)]
+    if sys.platform == "linux" and not displays:
+        raise MissingLibraryError(
+            "gmsh's window cannot open: there is no display (DISPLAY is not set). Run it in a desktop session, over `ssh -X`, "
+            "or under `xvfb-run -a`; without a window `murmesh check`, `solve` and `draw` do the same work."
+        )
+    if failure := _failure(_WINDOW_CHILD, _WINDOW_PATIENCE):
+        shown = ", ".join(f"{name}={os.environ[name]}" for name in displays)
+        raise MissingLibraryError(
+            f"gmsh's window cannot open on the display {shown}: {failure}. Check that the display is there and that you may "
+            "use it (`xdpyinfo`); without a window `murmesh check`, `solve` and `draw` do the same work."
+        )
 
 
 def require_rendering() -> None:

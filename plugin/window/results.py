@@ -1,0 +1,98 @@
+"""The branch `Results` of the tree: which line, receiver and load case, and which of the views are shown."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import Any
+
+import numpy as np
+
+from murmesh.plugin.gmsh_views import Views
+from murmesh.plugin.window.parameters import Row, Value
+from murmesh.plugin.window.tree import RESULTS, Parameter, note
+from murmesh.solver.result import Result
+
+_NORMALS = {"x": (1.0, 0.0, 0.0), "y": (0.0, 1.0, 0.0), "z": (0.0, 0.0, 1.0)}
+_SHOWN = {"levels": "Level on surfaces", "cut": "Level on cut plane", "phase": "Phase animation", "panels": "Panels by contribution"}
+_LISTED = 6
+
+
+@dataclass(frozen=True)
+class Choice:
+    """What is shown of a result."""
+
+    frequency: float
+    receiver: str
+    load_case: str
+    views: tuple[str, ...] = ("levels",)
+    normal: str = "y"
+    position: float = 0.0
+    low: float = 0.0
+    high: float = 0.0
+    """Limits [dB] of the level views, the same for every line; both 0 for those of the line at hand."""
+
+    @classmethod
+    def of(cls, result: Result, views: Views) -> Choice:
+        """The loudest line at the receivers."""
+        receivers = result.case.receivers
+        first = receivers[0].name if receivers else ""
+        middle = float(np.mean([r.position[1] for r in receivers])) if receivers else 0.0
+        return cls(views.line(), first, result.load_cases[0].name, position=round(middle, 4))
+
+
+def result_parameters(result: Result, choice: Choice) -> list[Parameter]:
+    """The parameters of the branch."""
+    low, high = float(result.frequencies[0]), float(result.frequencies[-1])
+    box = result.case.mesh.nodes
+    axis = "xyz".index(choice.normal)
+    rows = [
+        Row(("frequency",), "Frequency", choice.frequency, "number", "line of the sweep", "Hz", low, high),
+        Row(("receiver",), "Receiver", choice.receiver, "choice", "of the contributions", choices=tuple(r.name for r in result.case.receivers)),
+        Row(("load_case",), "Load case", choice.load_case, "choice", choices=tuple(held.name for held in result.load_cases)),
+        *(Row((which,), words, float(which in choice.views), "flag") for which, words in _SHOWN.items()),
+        Row(("normal",), "Cut plane normal to", choice.normal, "choice", choices=tuple(_NORMALS)),
+        Row(("position",), f"Cut plane at {choice.normal}", choice.position, "number", "", "m",
+            float(box[:, axis].min()), float(box[:, axis].max())),
+        Row(("low",), "Lower limit", choice.low, "number", "of level views; both limits 0: 40 dB below the highest", "dB"),
+        Row(("high",), "Upper limit", choice.high, "number", "of level views", "dB"),
+    ]  # fmt: skip
+    return [Parameter(f"{RESULTS}/{number:02d}{row.title}", row) for number, row in enumerate(rows)]
+
+
+def changed(choice: Choice, row: Row, shown: Value, result: Result) -> Choice:
+    """The choice after a person changed a row of the branch."""
+    key = str(row.path[0])
+    if key in _SHOWN:
+        kept = tuple(which for which in _SHOWN if (bool(shown) if which == key else which in choice.views))
+        return replace(choice, views=kept)
+    if key == "normal":
+        points = [receiver.position for receiver in result.case.receivers] or [tuple(result.case.mesh.nodes.mean(axis=0))]
+        return replace(choice, normal=str(shown), position=round(float(np.mean(points, axis=0)["xyz".index(str(shown))]), 4))
+    value: Any = float(shown) if row.form == "number" else str(shown)
+    return replace(choice, **{key: value})
+
+
+def show(views: Views, choice: Choice) -> Choice:
+    """Draw what is chosen and remove what is not; the choice with the line really shown."""
+    line = views.line(choice.frequency, choice.load_case)
+    limits = (choice.low, choice.high) if choice.low < choice.high else None
+    origin = tuple(choice.position if axis == choice.normal else 0.0 for axis in "xyz")
+    drawn = {
+        "levels": lambda: views.levels(line, choice.load_case, limits),
+        "cut": lambda: views.cut(line, choice.load_case, origin=origin, normal=_NORMALS[choice.normal], limits=limits),  # type: ignore[arg-type]
+        "phase": lambda: views.phase(line, choice.load_case),
+        "panels": lambda: views.panels(line, choice.receiver, choice.load_case),
+    }
+    for which, draw in drawn.items():
+        draw() if which in choice.views else views.remove(which)
+    return replace(choice, frequency=line)
+
+
+def ranking(views: Views, choice: Choice) -> list[dict[str, Any]]:
+    """Read-only lines: the panels with the largest share at the receiver and line."""
+    if not choice.receiver:
+        return []
+    shares = views.shares(choice.frequency, choice.receiver, choice.load_case)
+    parent = f"{RESULTS}/{50}Contributions (quietening, not treating)"
+    listed = list(shares.items())[:_LISTED]
+    return [note(f"{parent}/{number:02d}{name}", f"{share:+.0f} %") for number, (name, share) in enumerate(listed)]
