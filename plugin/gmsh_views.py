@@ -23,7 +23,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 
-from murmesh.plugin.describe import hertz, is_density, plain, level_unit
+from murmesh.plugin.describe import hertz, is_density, level_unit, plain
 from murmesh.plugin.fields import field_levels, kept_line
 from murmesh.plugin.gmsh_session import current_gmsh
 from murmesh.plugin.pictures.style import LEVEL_MAP, SIGNED_MAP, level_limits
@@ -81,9 +81,7 @@ class Views:
         lines = self.result.frequencies  # a reduced model gives the field of every line
         return float(lines[np.abs(lines - frequency).argmin()])
 
-    def levels(
-        self, frequency: float | None = None, load_case: str = "", limits: tuple[float, float] | None = None
-    ) -> int:
+    def levels(self, frequency: float | None = None, load_case: str = "", limits: tuple[float, float] | None = None) -> int:
         """Level on the surfaces; the tag of the view."""
         line = self.line(frequency, load_case)
         levels = self._levels(self._skin, line, load_case)
@@ -130,9 +128,7 @@ class Views:
         reach = 10.0 * np.ceil(max(10.0, *map(abs, shares.values())) / 10.0)
         steps = np.repeat(values[loaded], 3).reshape(-1, 3, 1)
         name = f"{NAMES['panels']} at {receiver or self._first_receiver()}, {hertz(float(line))} [%]"
-        return self._shown(
-            "panels", name, self._skin.points, self._skin.triangles[loaded], steps, SIGNED_MAP, (-reach, reach)
-        )
+        return self._shown("panels", name, self._skin.points, self._skin.triangles[loaded], steps, SIGNED_MAP, (-reach, reach))
 
     def shares(self, line: float, receiver: str = "", load_case: str = "") -> dict[str, float]:
         """Signed share [%] of every load in the mean square at a receiver, the largest first."""

@@ -133,8 +133,7 @@ def from_gmsh(source: str = "the current gmsh model") -> TaggedMesh:
 
 def _gmsh_blocks(gmsh: Any, dim: int, known: Mapping[int, int], tags: Any, order: Any, other: dict[str, int]) -> list[Block]:
     blocks: list[Block] = [
-        (np.empty((0, dim + 1), dtype=np.int64), (group_name(gmsh, dim, tag),))
-        for _, tag in gmsh.model.getPhysicalGroups(dim)
+        (np.empty((0, dim + 1), dtype=np.int64), (group_name(gmsh, dim, tag),)) for _, tag in gmsh.model.getPhysicalGroups(dim)
     ]
     for _, entity in gmsh.model.getEntities(dim):
         names = tuple(group_name(gmsh, dim, tag) for tag in gmsh.model.getPhysicalGroupsForEntity(dim, entity))

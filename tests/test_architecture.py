@@ -58,7 +58,9 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("plugin.check",),
     ("plugin.load", "plugin.describe", "plugin.fields", "plugin.sampling"),
     ("plugin.pictures", "plugin.export"),
-    ("plugin.cli",),
+    ("plugin.gmsh_views",),
+    ("plugin.script",),
+    ("plugin.cli", "plugin.window"),
 )
 SOLVER_LIBRARIES = {"numpy", "scipy", "h5py", "rslab", "pymetis"}
 MODULES = sorted(path for room in ("solver", "plugin", "sample_geometry") for path in (ROOT / room).rglob("*.py"))

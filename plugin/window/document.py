@@ -61,7 +61,7 @@ class Document:
         wanted = copy.deepcopy(self.tree)
         _put(wanted, path, value)
         table, key = _split(path)
-        held = wanted
+        held: Any = wanted
         for step in (*table, key):
             held = held.get(step, REMOVED) if isinstance(held, dict) else held[step]
             if held is REMOVED:
@@ -83,14 +83,13 @@ class Document:
 
 
 def _put(tree: Any, path: Path_, value: Any) -> None:
-    *steps, last = path
+    steps, last = path[:-1], path[-1]
     for step, follows in zip(steps, path[1:], strict=True):
         if isinstance(tree, dict) and step not in tree:
             tree[step] = [] if isinstance(follows, int) else {}
         tree = tree[step]
     if value is REMOVED:
-        if isinstance(tree, list) or last in tree:
-            del tree[last]
+        tree.pop(last) if isinstance(tree, list) else tree.pop(last, None)
     elif isinstance(tree, list) and last == len(tree):
         tree.append(value)
     else:

@@ -13,7 +13,12 @@ from murmesh.plugin.window.tree import RESULTS, Parameter, note
 from murmesh.solver.result import Result
 
 _NORMALS = {"x": (1.0, 0.0, 0.0), "y": (0.0, 1.0, 0.0), "z": (0.0, 0.0, 1.0)}
-_SHOWN = {"levels": "Level on surfaces", "cut": "Level on cut plane", "phase": "Phase animation", "panels": "Panels by contribution"}
+_SHOWN = {
+    "levels": "Level on surfaces",
+    "cut": "Level on cut plane",
+    "phase": "Phase animation",
+    "panels": "Panels by contribution",
+}
 _LISTED = 6
 
 
@@ -45,10 +50,12 @@ def result_parameters(result: Result, choice: Choice) -> list[Parameter]:
     low, high = float(result.frequencies[0]), float(result.frequencies[-1])
     box = result.case.mesh.nodes
     axis = "xyz".index(choice.normal)
+    receivers = tuple(receiver.name for receiver in result.case.receivers)
+    load_cases = tuple(held.name for held in result.load_cases)
     rows = [
         Row(("frequency",), "Frequency", choice.frequency, "number", "line of the sweep", "Hz", low, high),
-        Row(("receiver",), "Receiver", choice.receiver, "choice", "of the contributions", choices=tuple(r.name for r in result.case.receivers)),
-        Row(("load_case",), "Load case", choice.load_case, "choice", choices=tuple(held.name for held in result.load_cases)),
+        Row(("receiver",), "Receiver", choice.receiver, "choice", "of the contributions", choices=receivers),
+        Row(("load_case",), "Load case", choice.load_case, "choice", choices=load_cases),
         *(Row((which,), words, float(which in choice.views), "flag") for which, words in _SHOWN.items()),
         Row(("normal",), "Cut plane normal to", choice.normal, "choice", choices=tuple(_NORMALS)),
         Row(("position",), f"Cut plane at {choice.normal}", choice.position, "number", "", "m",
@@ -93,6 +100,6 @@ def ranking(views: Views, choice: Choice) -> list[dict[str, Any]]:
     if not choice.receiver:
         return []
     shares = views.shares(choice.frequency, choice.receiver, choice.load_case)
-    parent = f"{RESULTS}/{50}Contributions (quietening, not treating)"
+    parent = f"{RESULTS}/50Contributions (quietening, not treating)"
     listed = list(shares.items())[:_LISTED]
     return [note(f"{parent}/{number:02d}{name}", f"{share:+.0f} %") for number, (name, share) in enumerate(listed)]

@@ -21,7 +21,10 @@ _OPTIONS: dict[str, float] = {
     "Mesh.VolumeEdges": 0,
     "Mesh.SurfaceEdges": 1,
     "Mesh.SurfaceFaces": 1,
-    "Mesh.LightTwoSide": 1,
+    "Mesh.Light": 0,  # a shaded colour is not the one of the legend
+    "General.ScaleX": 0.85,
+    "General.ScaleY": 0.85,
+    "General.ScaleZ": 0.85,
     "General.RotationX": 290,
     "General.RotationY": 0,
     "General.RotationZ": 215,
@@ -60,8 +63,8 @@ class Scene:
         if self._legend in gmsh.view.getTags():
             gmsh.view.remove(self._legend)
         self._legend = gmsh.view.add("Boundary kinds (legend)", self._legend)
-        place = [_MARGIN, _MARGIN, 0.0]
-        gmsh.view.addListDataString(self._legend, place[:2], [f"file://{path}@{width}x{height}"], ["Align", "Left"])
+        place = [_MARGIN, _MARGIN + height]
+        gmsh.view.addListDataString(self._legend, place, [f"file://{path}@{width}x{height}"], ["Align", "Left"])
 
     def show_surfaces(self, shown: bool) -> None:
         """Faces of the mesh; away while a view lies on them, where both would flicker."""

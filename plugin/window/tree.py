@@ -28,7 +28,7 @@ class Parameter:
     def json(self) -> dict[str, Any]:
         """As gmsh's parameter database takes it."""
         row = self.row
-        held: dict[str, Any] = {"name": self.name, "attributes": {"Help": row.help}, "label": title(row)}
+        held: dict[str, Any] = {"name": self.name, "attributes": {"Help": row.help, "Closed": "1"}}
         if row.form == "choice":
             labels = _labels(row)
             return held | {
@@ -74,8 +74,8 @@ def safe(text: str) -> str:
 
 
 def branch(parent: str, number: int, name: str) -> str:
-    """The path of a branch, so named that gmsh sorts it by number and shows its name."""
-    return f"{parent}/{number:03d}{' ' if name[:1].isdigit() else ''}{safe(name)}"
+    """The path of a branch, so named that gmsh sorts it by number (00 to 99 are left to buttons) and shows its name."""
+    return f"{parent}/{100 + number}{' ' if name[:1].isdigit() else ''}{safe(name)}"
 
 
 def parameters(state: State) -> list[Parameter]:

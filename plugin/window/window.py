@@ -32,7 +32,8 @@ from murmesh.solver.result import read_result
 _TICK = 0.1  # seconds between two looks at the child and at gmsh's actions
 _JOB = f"{ROOT}/0Job"
 _FINDINGS = f"{ROOT}/8Check"
-_KIND = f"{SURFACES}/!0Kind to assign"
+_KIND = f"{SURFACES}/00Kind to assign"
+_MAIN_BUTTON = {False: ["Solve", "solve"], True: ["Stop", "stop"]}
 _PICKED, _KEY_E, _KEY_U = 1, 4, 3  # what gmsh's selection returns; 0 is key q
 
 
@@ -278,12 +279,12 @@ class Window:
             button(f"{_JOB}/3Undo", "undo", "take back the last change"),
             button(f"{_JOB}/4Stop", "stop", "interrupt the solution; solving again goes on from there"),
             assign,
-            button(f"{SURFACES}/!1Pick surfaces", "pick", "give this kind to surfaces picked in the window"),
-            button(f"{RECEIVERS}/~0Add receiver", "add_receiver"),
-            button(f"{RECEIVERS}/~1Remove last receiver", "remove_receiver"),
+            button(f"{SURFACES}/01Pick surfaces", "pick", "give this kind to surfaces picked in the window"),
+            button(f"{RECEIVERS}/00Add receiver", "add_receiver"),
+            button(f"{RECEIVERS}/01Remove last receiver", "remove_receiver"),
             *found,
             *(results.ranking(self.views, self.choice) if self.views is not None and self.choice is not None else []),
-            {"type": "string", "name": "ONELAB/Button", "values": ["Solve", "stop" if running else "solve"][:2], "visible": False},
+            {"type": "string", "name": "ONELAB/Button", "values": _MAIN_BUTTON[running], "visible": False},
         ]  # fmt: skip
 
     def _database(self) -> list[dict[str, Any]]:
