@@ -81,6 +81,10 @@ class Views:
         lines = self.result.frequencies  # a reduced model gives the field of every line
         return float(lines[np.abs(lines - frequency).argmin()])
 
+    def limits(self, frequency: float | None = None, load_case: str = "") -> tuple[float, float]:
+        """Limits [dB] for level views: 40 dB below the highest level on the surfaces at a line, rounded up to 5 dB."""
+        return level_limits(self._levels(self._skin, self.line(frequency, load_case), load_case))
+
     def levels(self, frequency: float | None = None, load_case: str = "", limits: tuple[float, float] | None = None) -> int:
         """Level on the surfaces; the tag of the view."""
         line = self.line(frequency, load_case)

@@ -89,11 +89,18 @@ def _put(tree: Any, path: Path_, value: Any) -> None:
             tree[step] = [] if isinstance(follows, int) else {}
         tree = tree[step]
     if value is REMOVED:
-        tree.pop(last) if isinstance(tree, list) else tree.pop(last, None)
+        _take(tree, last)
     elif isinstance(tree, list) and last == len(tree):
         tree.append(value)
     else:
         tree[last] = value
+
+
+def _take(tree: Any, key: Any) -> None:
+    if isinstance(tree, list):
+        del tree[key]
+    else:
+        tree.pop(key, None)
 
 
 def _split(path: Path_) -> tuple[Path_, str]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -34,7 +35,7 @@ class Choice:
     position: float = 0.0
     low: float = 0.0
     high: float = 0.0
-    """Limits [dB] of the level views, the same for every line; both 0 for those of the line at hand."""
+    """Limits [dB] of the level views, the same for every line until a person changes them; both 0 for those of each line."""
 
     @classmethod
     def of(cls, result: Result, views: Views) -> Choice:
@@ -42,7 +43,9 @@ class Choice:
         receivers = result.case.receivers
         first = receivers[0].name if receivers else ""
         middle = float(np.mean([r.position[1] for r in receivers])) if receivers else 0.0
-        return cls(views.line(), first, result.load_cases[0].name, position=round(middle, 4))
+        line = views.line()
+        low, high = views.limits(line)
+        return cls(line, first, result.load_cases[0].name, ("levels",), "y", round(middle, 4), low, high)
 
 
 def result_parameters(result: Result, choice: Choice) -> list[Parameter]:
@@ -66,15 +69,22 @@ def result_parameters(result: Result, choice: Choice) -> list[Parameter]:
     return [Parameter(f"{RESULTS}/{number:02d}{row.title}", row) for number, row in enumerate(rows)]
 
 
-def changed(choice: Choice, row: Row, shown: Value, result: Result) -> Choice:
+def changed(choice: Choice, row: Row, shown: Value, views: Views) -> Choice:
     """The choice after a person changed a row of the branch."""
     key = str(row.path[0])
     if key in _SHOWN:
         kept = tuple(which for which in _SHOWN if (bool(shown) if which == key else which in choice.views))
         return replace(choice, views=kept)
+    if key == "load_case":
+        # tones and densities are not of one scale: the limits begin anew
+        low, high = views.limits(choice.frequency, str(shown))
+        return replace(choice, load_case=str(shown), low=low, high=high)
     if key == "normal":
-        points = [receiver.position for receiver in result.case.receivers] or [tuple(result.case.mesh.nodes.mean(axis=0))]
-        return replace(choice, normal=str(shown), position=round(float(np.mean(points, axis=0)["xyz".index(str(shown))]), 4))
+        result = views.result
+        receivers = [receiver.position for receiver in result.case.receivers]
+        points = np.array(receivers) if receivers else result.case.mesh.nodes
+        position = points.mean(axis=0)["xyz".index(str(shown))]
+        return replace(choice, normal=str(shown), position=round(float(position), 4))
     value: Any = float(shown) if row.form == "number" else str(shown)
     return replace(choice, **{key: value})
 
@@ -83,15 +93,18 @@ def show(views: Views, choice: Choice) -> Choice:
     """Draw what is chosen and remove what is not; the choice with the line really shown."""
     line = views.line(choice.frequency, choice.load_case)
     limits = (choice.low, choice.high) if choice.low < choice.high else None
-    origin = tuple(choice.position if axis == choice.normal else 0.0 for axis in "xyz")
-    drawn = {
+    x, y, z = (choice.position if axis == choice.normal else 0.0 for axis in "xyz")
+    drawn: dict[str, Callable[[], int]] = {
         "levels": lambda: views.levels(line, choice.load_case, limits),
-        "cut": lambda: views.cut(line, choice.load_case, origin=origin, normal=_NORMALS[choice.normal], limits=limits),  # type: ignore[arg-type]
+        "cut": lambda: views.cut(line, choice.load_case, origin=(x, y, z), normal=_NORMALS[choice.normal], limits=limits),
         "phase": lambda: views.phase(line, choice.load_case),
         "panels": lambda: views.panels(line, choice.receiver, choice.load_case),
     }
     for which, draw in drawn.items():
-        draw() if which in choice.views else views.remove(which)
+        if which in choice.views:
+            draw()
+        else:
+            views.remove(which)
     return replace(choice, frequency=line)
 
 

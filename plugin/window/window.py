@@ -152,13 +152,13 @@ class Window:
         self._refresh()
 
     def _edited(self) -> None:
-        now = {entry["name"]: (entry.get("values") or [""])[0] for entry in self._database()}
+        now = self._database()
         if _KIND in now:
             self._kind = list(Boundary.registry)[int(now[_KIND])]
         state, choice = self.state, self.choice
         for parameter, value in edits(self._shown, now):
             if parameter.name.startswith(RESULTS) and choice is not None and self.views is not None:
-                choice = results.changed(choice, parameter.row, value, self.views.result)
+                choice = results.changed(choice, parameter.row, value, self.views)
             else:
                 state = state.with_row(parameter.row, value)
         if choice is not self.choice and choice is not None:
@@ -239,7 +239,7 @@ class Window:
         start = time.perf_counter()
         self.choice = results.show(self.views, choice)
         self.scene.show_surfaces(not choice.views)
-        self._log(f"murmesh: {self.choice.frequency:g} Hz shown in {time.perf_counter() - start:.2f} s", "info")
+        self._say(f"murmesh: {self.choice.frequency:g} Hz shown in {time.perf_counter() - start:.2f} s")
 
     # -- the tree ------------------------------------------------------------------------------------------------------
 
@@ -287,9 +287,11 @@ class Window:
             {"type": "string", "name": "ONELAB/Button", "values": _MAIN_BUTTON[running], "visible": False},
         ]  # fmt: skip
 
-    def _database(self) -> list[dict[str, Any]]:
-        held = json.loads(current_gmsh().onelab.get("", "json"))
-        return list(held["onelab"]["parameters"] if isinstance(held, dict) else held)
+    def _database(self) -> dict[str, Any]:
+        """What stands in the tree now. Asked one by one: gmsh writes quotes in texts unescaped into its JSON."""
+        onelab = current_gmsh().onelab
+        held = {name: _values(onelab, name) for name in (*self._shown, _KIND)}
+        return {name: values[0] for name, values in held.items() if len(values)}
 
     def _middle(self) -> list[float]:
         nodes = self.opened.mesh.nodes
@@ -302,3 +304,8 @@ class Window:
 
     def _log(self, text: str, level: str) -> None:
         current_gmsh().logger.write(text, level)
+
+
+def _values(onelab: Any, name: str) -> list[Any]:
+    numbers = onelab.getNumber(name)
+    return list(numbers) if len(numbers) else list(onelab.getString(name))

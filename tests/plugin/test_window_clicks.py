@@ -162,5 +162,5 @@ def test_no_display_is_said_at_once(tmp_path: Path, monkeypatch: pytest.MonkeyPa
 def test_a_display_that_does_not_answer_is_said(monkeypatch: pytest.MonkeyPatch, gmsh_library: None) -> None:
     monkeypatch.setenv("DISPLAY", ":987")
     monkeypatch.delenv("WAYLAND_DISPLAY", raising=False)
-    with pytest.raises(MissingLibraryError, match="cannot open on the display DISPLAY=:987.*without a window"):
+    with pytest.raises(MissingLibraryError, match=r"cannot open on the display DISPLAY=:987.*without a window"):
         probe.require_window()
