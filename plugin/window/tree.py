@@ -28,7 +28,10 @@ class Parameter:
     def json(self) -> dict[str, Any]:
         """As gmsh's parameter database takes it."""
         row = self.row
-        held: dict[str, Any] = {"name": self.name, "attributes": {"Help": row.help, "Closed": "1"}}
+        held: dict[str, Any] = {
+            "name": self.name,
+            "attributes": {"Help": row.help, "Closed": "0" if self.name.startswith(RESULTS) else "1"},
+        }
         if row.form == "choice":
             labels = _labels(row)
             return held | {

@@ -27,7 +27,7 @@ from murmesh.plugin.window.tree import RECEIVERS, RESULTS, ROOT, SURFACES, Param
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.hdf5 import write_case
 from murmesh.solver.errors import MurmeshError
-from murmesh.solver.result import read_result
+from murmesh.solver.result import Result, read_result
 
 _TICK = 0.1  # seconds between two looks at the child and at gmsh's actions
 _JOB = f"{ROOT}/0Job"
@@ -219,7 +219,7 @@ class Window:
         self._refresh()
 
     def load_result(self) -> None:
-        """Show the result beside the job, if there is one of this mesh."""
+        """Show the result beside the job, if there is one; say so where the job has changed since."""
         if not self._result_file.is_file():
             return
         try:
@@ -228,10 +228,19 @@ class Window:
             self.views = Views(result, self.opened.scale)
             self._show(results.Choice.of(result, self.views))
             self._say(f"murmesh: {self._result_file.name} shown in {time.perf_counter() - start:.1f} s")
+            if self._differs(result):
+                self._say(f"murmesh: {self._result_file.name} is of another state of the job; solve again", "warning")
         except MurmeshError as error:
             self.views, self.choice = None, None
             self._say(f"murmesh: {error}", "warning")
         self._refresh()
+
+    def _differs(self, result: Result) -> bool:
+        """Whether the result is not of the job as it stands."""
+        try:
+            return build_case(self.state.document.job, self.opened.mesh).checksum != result.case.checksum
+        except MurmeshError:
+            return True
 
     def _show(self, choice: results.Choice) -> None:
         if self.views is None:
