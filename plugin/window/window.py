@@ -207,7 +207,7 @@ class Window:
             return
         status = self.child.status
         for line in self.child.lines():
-            self._say(f"murmesh: {line}")
+            self._say(f"murmesh: {line.removeprefix('murmesh: ')}")
         if status is None:
             return
         self.child.close()
