@@ -362,14 +362,14 @@ def _krylov(solve: Callable[[Complex], Complex], slope: Any, start: Complex) -> 
     return np.asarray(np.hstack(blocks)[:, blocks[0].shape[1] :], dtype=np.complex128)
 
 
-def orthonormal(basis: Floats, columns: Floats) -> Floats:
-    """Orthonormal columns that, with `basis` (orthonormal), span what `columns` span, but for parts below `KEEP_ABOVE`."""
+def orthonormal(basis: Floats, columns: Floats, keep_above: float = KEEP_ABOVE) -> Floats:
+    """Orthonormal columns that, with `basis` (orthonormal), span what `columns` span, but for parts below `keep_above`."""
     size = np.linalg.norm(columns, axis=0)
     rest = columns / np.where(size > 0, size, 1.0)
     for _ in range(2):
         rest = rest - basis @ (basis.T @ rest)
     q, triangle, _ = scipy.linalg.qr(rest, mode="economic", pivoting=True, overwrite_a=True)
-    kept = q[:, np.abs(np.diag(triangle)) > KEEP_ABOVE]
+    kept = q[:, np.abs(np.diag(triangle)) > keep_above]
     return np.asarray(scipy.linalg.qr(kept - basis @ (basis.T @ kept), mode="economic")[0])
 
 

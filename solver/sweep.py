@@ -73,10 +73,13 @@ def solve(
     *,
     report: Report | None = None,
     order: int = 0,
+    orders: npt.NDArray[np.int64] | None = None,
     solver: str = "default",
     method: str = "",
 ) -> Result:
     """Solve `case` on every line of its sweep; `method` (auto, direct, reduced) replaces that of the sweep.
+
+    `order` is one for all elements, `orders` (t,) one for each; without them the sweep's, or the rule's.
 
     `journal` is a folder for finished work; it is read first, and removed by `forget` once the result is safe.
     Where the orders are the rule's own and the error bar shows more than the accuracy wanted, every order is raised by one
@@ -84,8 +87,8 @@ def solve(
     Raises CaseError, MeshError or SolveError; an interrupt leaves the journal as it is.
     """
     how = _How(report or (lambda progress: None), solver, _method(case, method))
-    space = discretise(case, order)
-    if order or case.sweep.order:
+    space = discretise(case, order) if orders is None else discretise(case, orders=orders)
+    if order or orders is not None or case.sweep.order:
         return _Sweep.of(space, journal, how).run()
     result = _solve(space, journal, how)
     error = result.mesh_error_db

@@ -375,7 +375,8 @@ def _part(both: Callable[[], tuple[Matrix, Matrix]], number: int) -> Matrix:
     return both()[number]
 
 
-def _side_admittance(case: Case, side: Side, f: Floats) -> Complex | None:
+def side_admittance(case: Case, side: Side, f: Floats) -> Complex | None:
+    """Y (nf,) of one side of a surface: its kind's, or the residual absorption of a hard wall; None where it is hard."""
     near = adjacent(case, side.region, f)
     own = side.boundary.admittance(f, near)
     if own is None and side.boundary.hard:
@@ -387,11 +388,11 @@ def _side_admittance(case: Case, side: Side, f: Floats) -> Complex | None:
 def _surface_terms(space: Space) -> list[Term]:
     case, terms = space.case, []
     for side in space.sides:
-        if _side_admittance(case, side, case.sweep.frequencies) is None:
+        if side_admittance(case, side, case.sweep.frequencies) is None:
             continue
 
         def phi(f: Floats, side: Side = side) -> Complex:
-            return _i_w(f, _side_admittance(case, side, f))
+            return _i_w(f, side_admittance(case, side, f))
 
         build = partial(surface_mass, space.geometry, space.dofs, side.tet, side.face)
         terms.append(Term(f"surface/{case.surfaces[side.surface].name}", phi, build))
@@ -479,7 +480,8 @@ def _velocity_terms(space: Space, load: SurfaceVelocity) -> list[LoadTerm]:
 
         def psi(f: Floats, side: Side = side) -> Complex:
             drive = side.boundary.drive(f, adjacent(space.case, side.region, f))
-            return np.asarray((-2j * np.pi * f * side.sign * drive)[:, None] * load.motion.outward(f))
+            factor = -2j * np.pi * f * side.sign * drive * load.cut_factor(f)
+            return np.asarray(factor[:, None] * load.motion.outward(f))
 
         terms.append(LoadTerm(load.name, psi, partial(_shape_vectors, space, side, load.motion)))
     return terms

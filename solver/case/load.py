@@ -12,7 +12,7 @@ import numpy.typing as npt
 
 from murmesh.solver.case.fields import Declared, kind, quantity, record
 from murmesh.solver.case.motion import Motion, Uniform
-from murmesh.solver.case.spectrum import Constant, Spectrum
+from murmesh.solver.case.spectrum import Constant, Spectrum, as_spectrum
 from murmesh.solver.errors import FieldError, RangeError
 
 Complex = npt.NDArray[np.complex128]
@@ -52,6 +52,11 @@ class SurfaceVelocity(SurfaceLoad):
 
     surface: str = quantity(help="name of the surface")
     motion: Motion = quantity(help="how it moves")
+    cut: float | Spectrum = quantity(help="by how much a treatment lowers the velocity", unit="dB", default=0.0)
+
+    def cut_factor(self, f: Float) -> Float:
+        """10^(-cut/20), (nf,)."""
+        return np.asarray(10 ** (-as_spectrum(self.cut).at(f).real / 20))
 
     @classmethod
     def example(cls) -> SurfaceVelocity:
