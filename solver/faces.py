@@ -33,13 +33,15 @@ _BENT_MARGIN = 6  # added degree on curved faces, whose area element is no polyn
 class FacePoints:
     """Quadrature points on m faces: points (m, q, 3), weights (m, q) [m2], normals (m, q, 3), bary (m, q, 4).
 
-    Weights include the area element; bary is in the mesh's own corner order of the tetrahedron.
+    Weights include the area element; bary is in the mesh's own corner order of the tetrahedron; tangents (m, q, 2, 3) [m]
+    are dx/dlambda_1 and dx/dlambda_2 of the face's ascending corners.
     """
 
     points: Floats
     weights: Floats
     normals: Floats
     bary: Floats
+    tangents: Floats
 
 
 def face_points(geometry: Geometry, tet: npt.ArrayLike, local_face: npt.ArrayLike, degree: int) -> FacePoints:
@@ -56,7 +58,7 @@ def face_points(geometry: Geometry, tet: npt.ArrayLike, local_face: npt.ArrayLik
     size = np.linalg.norm(area, axis=2)
     sign = -np.sign(np.einsum("mqd,mqd->mq", area, inward))
     normals = area * (sign / np.maximum(size, 1e-300))[..., None]
-    return FacePoints(geometry.map(which, bary), size * weights, normals, bary)
+    return FacePoints(geometry.map(which, bary), size * weights, normals, bary, np.stack([b - a, c - a], axis=2))
 
 
 def surface_points(
@@ -93,9 +95,9 @@ def surface_cross_mass(geometry: Geometry, dofmap: DofMap, side_a: Sides, side_b
     _require_same(geometry, (tet_a, face_a), (tet_b, face_b))
     n = dofmap.n_dofs
     out = sp.csr_matrix((n, n))
-    for part, order in _pieces(dofmap, tet_a, tet_b):
-        rows = _trace_dofs(dofmap, tet_a[part], face_a[part], order)
-        cols = _trace_dofs(dofmap, tet_b[part], face_b[part], order)
+    for part, order in pieces(dofmap, tet_a, tet_b):
+        rows = trace_dofs(dofmap, tet_a[part], face_a[part], order)
+        cols = trace_dofs(dofmap, tet_b[part], face_b[part], order)
         values = _face_matrices(geometry, tet_a[part], face_a[part], order)
         keep = (rows >= 0)[:, :, None] & (cols >= 0)[:, None, :]
         i, j = np.broadcast_arrays(rows[:, :, None], cols[:, None, :])
@@ -118,14 +120,14 @@ def surface_load(
     """
     which, face = _checked(tet, local_face)
     total = np.zeros((dofmap.n_dofs, *_columns(values)))
-    for part, order in _pieces(dofmap, which, which):
+    for part, order in pieces(dofmap, which, which):
         rule = _load_degree(geometry, which[part], order) if degree is None else degree
         found = face_points(geometry, which[part], face[part], rule)
         traces = triangle_basis(order, triangle_rule(rule)[0])
         g = np.ones(found.weights.size) if values is None else np.asarray(values(found.points.reshape(-1, 3)))
         weighted = found.weights[..., None] * g.reshape(*found.weights.shape, -1)
         each = np.einsum("qn,mqc->mnc", traces, weighted, optimize=True)
-        dofs = _trace_dofs(dofmap, which[part], face[part], order)
+        dofs = trace_dofs(dofmap, which[part], face[part], order)
         there = dofs >= 0
         count = int(np.count_nonzero(there))
         add = sp.csr_matrix((np.ones(count), (dofs[there], np.arange(count))), shape=(dofmap.n_dofs, count))
@@ -136,11 +138,11 @@ def surface_load(
 def face_dofs(dofmap: DofMap, tet: npt.ArrayLike, local_face: npt.ArrayLike) -> Ints:
     """(k,): the unknowns that do not vanish on the faces, each once, ascending."""
     which, face = _checked(tet, local_face)
-    found = _trace_dofs(dofmap, which, face, dofmap.max_order)
+    found = trace_dofs(dofmap, which, face, dofmap.max_order)
     return np.unique(found[found >= 0])
 
 
-def _trace_dofs(dofmap: DofMap, tet: Ints, local_face: Ints, order: int) -> Ints:
+def trace_dofs(dofmap: DofMap, tet: Ints, local_face: Ints, order: int) -> Ints:
     """(m, nface(order)): unknowns of the traces on faces, -1 for those that do not exist."""
     slot = np.argmax(dofmap.topology.sorted_vertices[tet] == local_face[:, None], axis=1)
     table = np.stack([face_functions(order, i) for i in range(4)])
@@ -160,7 +162,7 @@ def _face_matrices(geometry: Geometry, tet: Ints, face: Ints, order: int) -> Flo
     return out
 
 
-def _pieces(dofmap: DofMap, tet_a: Ints, tet_b: Ints) -> Iterator[tuple[Ints, int]]:
+def pieces(dofmap: DofMap, tet_a: Ints, tet_b: Ints) -> Iterator[tuple[Ints, int]]:
     """Positions of faces in chunks, with the order whose traces hold both sides."""
     orders = np.maximum(dofmap.orders[tet_a], dofmap.orders[tet_b])
     for p in np.unique(orders):

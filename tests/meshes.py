@@ -180,6 +180,54 @@ def ball(n: int, radius: float = 0.5, order: int = 2) -> TestMesh:
     return quadratic(mesh, {"sphere": lambda x: radius * x / np.linalg.norm(x, axis=1, keepdims=True)})
 
 
+def shell(n: int, radii: Sequence[float], stretch: Sequence[float] = (1.0, 1.0, 1.0), half: bool = False) -> TestMesh:
+    """Curved layers between spheres (times `stretch` along the axes), 8 n^2 triangles each; surfaces inner, outer.
+
+    `half` keeps z > 0; the rim faces are then the surface "rim".
+    """
+    points, triangles = _octasphere(n)
+    if half:
+        triangles = triangles[np.all(points[triangles][..., 2] > -1e-12, axis=1)]
+        used, flat = np.unique(triangles, return_inverse=True)
+        points, triangles = points[used], flat.reshape(-1, 3)
+    count, low = len(points), np.sort(triangles, axis=1)
+    one = np.concatenate([np.column_stack([low[:, : k + 1], low[:, k:] + count]) for k in range(3)])
+    nodes = np.concatenate([r * points for r in radii])
+    tets = _positive(nodes, np.concatenate([one + count * k for k in range(len(radii) - 1)]))
+    bare = TestMesh(nodes, tets)
+    level = lambda value: lambda x: np.abs(np.linalg.norm(x, axis=-1) - value) < 1e-9 * value  # noqa: E731
+    surfaces = {"inner": _on_boundary(bare, level(radii[0])), "outer": _on_boundary(bare, level(radii[-1]))}
+    if half:
+        surfaces["rim"] = _on_boundary(bare, lambda x: np.abs(x[..., 2]) < 1e-12)
+    curved = _rounded(quadratic(replace(bare, surfaces=surfaces)), bare)
+    return replace(curved, nodes=curved.nodes * np.asarray(stretch))
+
+
+def _rounded(mesh: TestMesh, bare: TestMesh) -> TestMesh:
+    """Every mid-edge node at the mean radius of its two ends."""
+    nodes = mesh.nodes.copy()
+    ends, middle = bare.tets[:, TET_EDGES].reshape(-1, 2), mesh.tets[:, 4:].ravel()
+    radius = np.linalg.norm(bare.nodes[ends], axis=2).mean(axis=1)
+    nodes[middle] *= (radius / np.linalg.norm(nodes[middle], axis=1))[:, None]
+    return replace(mesh, nodes=nodes)
+
+
+def _octasphere(n: int) -> tuple[Floats, Ints]:
+    """8 n^2 triangles on the unit sphere, no edge across the planes x, y, z = 0; equal angles along the edges."""
+    ij = np.array([(i, j) for i in range(n + 1) for j in range(n + 1 - i)])
+    number = {(i, j): m for m, (i, j) in enumerate(map(tuple, ij.tolist()))}
+    up = [[number[i, j], number[i + 1, j], number[i, j + 1]] for i in range(n) for j in range(n - i)]
+    down = [[number[i + 1, j], number[i + 1, j + 1], number[i, j + 1]] for i in range(n) for j in range(n - 1 - i)]
+    bary = np.column_stack([ij, n - ij.sum(axis=1)]) / n
+    x = np.sin(0.5 * np.pi * bary)
+    x /= np.linalg.norm(x, axis=1, keepdims=True)
+    parts = [(x * np.array(signs), np.array(up + down)) for signs in itertools.product((1.0, -1.0), repeat=3)]
+    points = np.concatenate([p for p, _ in parts])
+    triangles = np.concatenate([t + len(x) * k for k, (_, t) in enumerate(parts)])
+    _, first, inverse = np.unique(np.round(points, 9) + 0.0, axis=0, return_index=True, return_inverse=True)
+    return points[first], inverse.reshape(-1)[triangles]
+
+
 def _icosahedron() -> tuple[Floats, Ints]:
     g = (1.0 + np.sqrt(5.0)) / 2.0
     corners = np.array([(0.0, s, t * g) for s in (-1.0, 1.0) for t in (-1.0, 1.0)])

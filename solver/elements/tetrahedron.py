@@ -215,6 +215,12 @@ def triangle_basis(order: int, bary: Floats) -> Floats:
     return np.asarray(basis(order, on_face)[0][:, face_functions(order, 3)])
 
 
+def triangle_derivatives(order: int, bary: Floats) -> Floats:
+    """dN/dlambda (q, nface, 2) of the traces along lambda_1 and lambda_2, lambda_0 = 1 - lambda_1 - lambda_2."""
+    on_face = np.column_stack([bary, np.zeros(len(bary))])
+    return reduced_derivatives(basis(order, on_face)[1][:, face_functions(order, 3)])[..., :2]
+
+
 @cache
 def reference_face_mass(order: int) -> Floats:
     """B (nface, nface) on the reference triangle of area 1/2: B_face = 2 area B."""
