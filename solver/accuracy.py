@@ -100,7 +100,12 @@ class MeshError:
 
 def _places(system: System, finer: System) -> Ints:
     """Where the unknowns of a system stand in that of the next order."""
-    return finer.space.dofs.selection_of(system.space.dofs)
+    selection = finer.space.dofs.selection_of(system.space.dofs)
+    parts = [selection]
+    for low, high in zip(system.space.envelopes, finer.space.envelopes, strict=True):
+        at = np.searchsorted(high.envelope.trace, selection[low.envelope.trace])
+        parts.append(high.envelope.numbers[at, 1:].ravel())
+    return np.concatenate(parts)
 
 
 def _rows(system: System, new: Ints) -> tuple[LoadSet, ...]:

@@ -49,6 +49,13 @@ class Ground:
     normal: tuple[float, float, float]
     sign: int
 
+    @classmethod
+    def of(cls, normal: npt.ArrayLike, sign: int) -> Ground:
+        """From a normal of any length."""
+        n = np.asarray(normal, dtype=np.float64)
+        x, y, z = (float(v) for v in n / np.linalg.norm(n))
+        return cls((x, y, z), sign)
+
     def mirror(self, centre: Floats, points: Floats) -> Floats:
         """Images (..., 3) of points."""
         n = np.asarray(self.normal)
@@ -191,23 +198,30 @@ def envelope(
     ground: Ground | None = None,
     first: int | None = None,
 ) -> Envelope:
-    """The envelope on `sides`, checked. No centre: that of the bounding box of the surface, moved onto the ground plane
-    `ground` by whoever gives one; no number of radial functions: the automatic one at the largest wave number k.
+    """The envelope on `sides`, checked. No centre: the middle of the bounding box, moved into the plane of the rim of a dome;
+    no number of radial functions: the automatic one at the largest wave number k.
 
     Raises: MeshError for a surface that is open, not star-shaped, or not closed by its ground plane.
     """
     tet, face = (np.asarray(part, dtype=np.int64) for part in sides)
-    where = default_centre(geometry, (tet, face)) if centre is None else np.asarray(centre, dtype=np.float64)
-    found = Envelope(geometry, dofs, tet, face, where, 1, ground, dofs.n_dofs if first is None else first)
+    given = np.zeros(3) if centre is None else np.asarray(centre, dtype=np.float64)
+    found = Envelope(geometry, dofs, tet, face, given, 1, ground, dofs.n_dofs if first is None else first)
+    if centre is None:
+        found = replace(found, centre=default_centre(found))
     _require_star_shape(found)
     _require_closed(found)
     return replace(found, radial=radial or automatic_radial(k * found.largest_radius))
 
 
-def default_centre(geometry: Geometry, sides: tuple[Ints, Ints]) -> Floats:
-    """The centre (3,) of the bounding box of the faces' nodes."""
-    x = geometry.nodes[_face_nodes(geometry, *sides)]
-    return np.asarray(0.5 * (x.min(axis=0) + x.max(axis=0)))
+def default_centre(found: Envelope) -> Floats:
+    """The middle (3,) of the bounding box of the faces' nodes, for a dome moved along the normal to the height of its rim."""
+    x = found.geometry.nodes[_face_nodes(found.geometry, found.tet, found.face)]
+    middle = np.asarray(0.5 * (x.min(axis=0) + x.max(axis=0)))
+    rim = _rim_ends(found)
+    if found.ground is None or not len(rim):
+        return middle
+    n = np.asarray(found.ground.normal)
+    return np.asarray(middle + (float((rim @ n).mean()) - middle @ n) * n)
 
 
 def _face_nodes(geometry: Geometry, tet: Ints, face: Ints) -> Ints:

@@ -127,6 +127,21 @@ class Exterior:
     def _rules(self) -> dict[int, tuple[FacePoints, sp.csr_matrix]]:
         return {}
 
+    def beyond(self, points: Floats) -> npt.NDArray[np.bool_]:
+        """Which points (m, 3) lie outside: the surface (with its image) covers no solid angle as seen from there."""
+        env, x = self.envelope, np.atleast_2d(points)
+        at, _ = self._quadrature(_NEAR_DEGREE)
+        y, flux = at.points.reshape(-1, 3), (at.normals * at.weights[..., None]).reshape(-1, 3)
+
+        def covered(x: Floats) -> Floats:
+            away = y[None] - x[:, None]
+            return np.asarray(np.einsum("kqd,qd->k", away / np.linalg.norm(away, axis=2)[..., None] ** 3, flux) / (4 * np.pi))
+
+        if env.ground is None:
+            return covered(x) < 0.5
+        above = (x - env.centre) @ np.asarray(env.ground.normal) >= -1e-9 * env.largest_radius
+        return above & (covered(x) + covered(env.ground.mirror(env.centre, x)) < 0.5)
+
     def surface_power(self, field: Complex, k: complex, rho_omega: complex) -> float:
         """W = Re int p conj(v_n) dS / 2 [W] of a field u (size,): the power through the surface; rho_omega = rho w."""
         flux = -(self.operator(k)[self.envelope.trace] @ field)  # int N_a dp/dn dS
@@ -142,12 +157,6 @@ class Exterior:
         pattern = self.far_rows(directions, k) @ field
         return float(np.sum(weights * np.abs(pattern) ** 2) / (2 * impedance))
 
-    def directivity_index(self, field: Complex, directions: Floats, k: float) -> Floats:
-        """DI = 10 lg(4 pi |F(d)|^2 / int |F|^2 dOmega) [dB] for directions (m, 3); above a ground plane the integral is
-        over the half space, so that a small source on a rigid floor has 3 dB."""
-        total = 2.0 * self.far_power(field, k, 1.0)
-        return np.asarray(10 * np.log10(4 * np.pi * np.abs(self.far_rows(directions, k) @ field) ** 2 / total))
-
 
 def sphere_rule(count: int) -> tuple[Floats, Floats]:
     """Directions (2 count^2, 3) and weights that sum to 4 pi; exact for spherical harmonics up to order 2 count - 1."""
@@ -156,3 +165,46 @@ def sphere_rule(count: int) -> tuple[Floats, Floats]:
     s = np.sqrt(1.0 - z**2)
     x = np.stack([np.outer(s, np.cos(angle)), np.outer(s, np.sin(angle)), np.outer(z, np.ones(2 * count))], axis=2)
     return x.reshape(-1, 3), np.repeat(w * np.pi / count, 2 * count)
+
+
+@dataclass(frozen=True, eq=False)
+class Outside:
+    """A solved field beyond one surface at one frequency: u (size, r) and the fluid's rho and c, with all losses."""
+
+    name: str
+    exterior: Exterior
+    field: Complex
+    frequency: float
+    rho: complex
+    c: complex
+
+    @property
+    def k(self) -> complex:
+        """Wave number [1/m]."""
+        return 2 * np.pi * self.frequency / self.c
+
+    def pressure(self, points: Floats) -> Complex:
+        """p (m, r) [Pa] at points (m, 3) outside."""
+        return np.asarray(self.exterior.pressure_rows(points, self.k) @ self.field) if len(points) else self.field[:0]
+
+    def far_field(self, directions: Floats) -> Complex:
+        """F (m, r) [Pa m] in directions (m, 3): p -> F e^{-ikR} / R, R the distance from the centre."""
+        return np.asarray(self.exterior.far_rows(directions, self.k) @ self.field)
+
+    def directivity_index(self, directions: Floats) -> Floats:
+        """DI (m,) [dB], of the mean squares of all columns together."""
+        square = (np.abs(self.far_field(directions)) ** 2).sum(axis=1)
+        total = 2 * (self.rho * self.c).real * self.far_power
+        return np.asarray(10 * np.log10(np.maximum(4 * np.pi * square / total, 1e-300)))
+
+    @property
+    def power(self) -> float:
+        """Radiated power [W] from the intensity on the surface."""
+        rho_w = 2 * np.pi * self.frequency * self.rho
+        return sum(self.exterior.surface_power(u, self.k, rho_w) for u in self.field.T)
+
+    @property
+    def far_power(self) -> float:
+        """Radiated power [W] from the far field (of the fluid without its losses); it must agree with `power`."""
+        impedance = (self.rho * self.c).real
+        return sum(self.exterior.far_power(u, self.k.real, impedance) for u in self.field.T)

@@ -1,10 +1,11 @@
 """The power balance: what loads put in is what surfaces and volumes take.
 
     input of a load      W_l = Re( (i/w) p^T conj(f_l) ) / 2
-    taken by a term      W_j = Im(phi_j) p^H A_j p / (2 w)
+    taken by a term      W_j = Im(phi_j p^H A_j p) / (2 w)
     sum_l W_l = sum_j W_j
 
-Both follow from (i/(2w)) p^T conj(A p - f) = 0 with real symmetric A_j. A wave that enters through a port counts as
+Both follow from (i/(2w)) p^T conj(A p - f) = 0 with real A_j; p^H A_j p is real where A_j is symmetric. The terms of infinite
+elements together take what is radiated. A wave that enters through a port counts as
 input, what leaves through it as taken; their difference is the net power through the port.
 """
 
@@ -29,10 +30,13 @@ def absorbed_power(system: System, phi: Complex, f: float, field: Complex, label
     taken = np.zeros(len(labels))
     parts = np.ascontiguousarray(field.real), np.ascontiguousarray(field.imag)
     for coefficient, term in zip(phi, system.terms, strict=True):
-        if coefficient.imag != 0.0:
-            # the matrices are real, so the parts of the field do not mix in the real part of p^H A p
-            form = sum(float(np.vdot(part, term.matrix @ part)) for part in parts)
-            taken[labels.index(term.label)] += coefficient.imag * form / (4 * np.pi * f)
+        if coefficient.imag != 0.0 or not term.symmetric:
+            # the matrices are real, so p^H A p is real but for what is not symmetric in A
+            products = [term.matrix @ part for part in parts]
+            form = complex(sum(float(np.vdot(part, product)) for part, product in zip(parts, products, strict=True)))
+            if not term.symmetric:
+                form += 1j * (float(np.vdot(parts[0], products[1])) - float(np.vdot(parts[1], products[0])))
+            taken[labels.index(term.label)] += (coefficient * form).imag / (4 * np.pi * f)
     return taken
 
 

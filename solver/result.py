@@ -20,9 +20,11 @@ import numpy.typing as npt
 from murmesh.solver.assembly import evaluate
 from murmesh.solver.case.hdf5 import check_header, open_hdf5, read_case_group, write_atomically, write_case_group
 from murmesh.solver.case.load import LoadCase
+from murmesh.solver.case.medium import damped
 from murmesh.solver.case.model import HIGHEST_ORDER, Case
 from murmesh.solver.engine import Engine, Line
 from murmesh.solver.errors import FormatError, MurmeshError, ResultError, nearest
+from murmesh.solver.exterior import Exterior, Outside
 from murmesh.solver.receiver_points import Samples, locate_receivers
 from murmesh.solver.reduced import Certificate, Check
 from murmesh.solver.space import Space, discretise
@@ -228,6 +230,26 @@ class Result:
         return self.frequencies[[np.any(np.isclose(f, wanted, rtol=1e-9)) for f in self.frequencies]]
 
     def field(self, frequency: float, load_case: str = "") -> Complex:
+        """The mesh's own part (n_dofs, r) of `unknowns`."""
+        found = self.unknowns(frequency, load_case)
+        return found[: self.space.dofs.n_dofs] if self.radiates else found
+
+    @property
+    def radiates(self) -> bool:
+        """Whether some surface carries infinite elements, whose unknowns stand behind those of the mesh."""
+        return any(surface.boundary.radiates for surface in self.case.surfaces)
+
+    def outside(self, frequency: float, load_case: str = "") -> tuple[Outside, ...]:
+        """The field beyond every surface that radiates, as `unknowns` at the frequency give it."""
+        f, u = np.array([frequency]), self.unknowns(frequency, load_case)
+        out = []
+        for outer in self.space.envelopes:
+            region = self.case.regions[outer.region]
+            rho, c = damped(region.medium, region.damping, f)
+            out.append(Outside(outer.name, Exterior(outer.envelope, self.space.size), u, frequency, complex(rho[0]), complex(c[0])))
+        return tuple(out)
+
+    def unknowns(self, frequency: float, load_case: str = "") -> Complex:
         """Unknowns (n, r) of the field at any frequency of the sweep's band from the model; without a model, of the field
         kept nearest to it.
 
@@ -267,12 +289,16 @@ class Result:
         return Engine.of(system.on(self.model.projected))
 
     def pressure_at(self, points: Floats, frequency: float, load_case: str = "") -> Complex:
-        """Pressure (k, r) [Pa] at points (k, 3) from the elements themselves; nan outside the fluid."""
+        """Pressure (k, r) [Pa] at points (k, 3): from the elements themselves inside the mesh, from the surface that radiates
+        outside of it; nan elsewhere."""
         tet, bary = self.space.geometry.locate(points)
         inside = tet >= 0
         field = self.field(frequency, load_case)
         values = np.full((len(points), field.shape[1]), complex(np.nan, np.nan))
         values[inside] = evaluate(self.space.geometry, self.space.dofs, tet[inside], bary[inside]) @ field
+        for outer in self.outside(frequency, load_case) if self.radiates else ():
+            beyond = ~inside & outer.exterior.beyond(points)
+            values[beyond] = outer.pressure(points[beyond])
         return values
 
     def imbalance(self, load_case: str = "") -> Floats:

@@ -8,13 +8,17 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
+import scipy.sparse as sp
+from scipy.sparse.csgraph import connected_components
 
 from murmesh.solver.assembly import DofMap, Geometry, surface_area, surface_normals
-from murmesh.solver.case.boundary import Boundary, Sheet
+from murmesh.solver.case.boundary import Boundary, Radiating, Sheet
 from murmesh.solver.case.model import Case
+from murmesh.solver.envelope import Envelope, Ground, envelope
 from murmesh.solver.errors import MeshError
 from murmesh.solver.orders import Wall, element_orders
 from murmesh.solver.topology import Topology
@@ -46,6 +50,16 @@ class SheetPair:
 
 
 @dataclass(frozen=True, eq=False)
+class Radiator:
+    """A surface that radiates, or several that touch: their names, the region inside, and the infinite elements."""
+
+    name: str
+    surfaces: tuple[int, ...]
+    region: int
+    envelope: Envelope
+
+
+@dataclass(frozen=True, eq=False)
 class Space:
     """Geometry, numbering and sides; made by `discretise`."""
 
@@ -61,6 +75,24 @@ class Space:
     def walls(self) -> tuple[Wall, ...]:
         """Kind and area of every side."""
         return walls_of(self.geometry, self.sides)
+
+    @cached_property
+    def envelopes(self) -> tuple[Radiator, ...]:
+        """What radiates, with its unknowns behind those of the mesh.
+
+        Raises: MeshError where a surface is open, not star-shaped about its centre, or not closed by its ground plane.
+        """
+        found: list[Radiator] = []
+        first = self.dofs.n_dofs
+        for sides in _touching(self.sides, self.topology):
+            found.append(_radiator(self, sides, first))
+            first += found[-1].envelope.extra
+        return tuple(found)
+
+    @property
+    def size(self) -> int:
+        """Number of unknowns, those of the outside included."""
+        return self.dofs.n_dofs + sum(outer.envelope.extra for outer in self.envelopes)
 
     def sides_of(self, surface: int) -> tuple[Side, ...]:
         """The sides of one surface."""
@@ -92,6 +124,58 @@ def discretise(case: Case, order: int = 0, orders: Ints | None = None) -> Space:
 def walls_of(geometry: Geometry, sides: Iterable[Side]) -> tuple[Wall, ...]:
     """Kind and area of every side, as the rule of orders wants them."""
     return tuple(Wall(side.region, side.boundary, surface_area(geometry, side.tet, side.face)) for side in sides)
+
+
+def _touching(sides: tuple[Side, ...], topology: Topology) -> list[list[Side]]:
+    """Radiating sides of one region and one declaration, each group joined by common vertices."""
+    left = [side for side in sides if side.boundary.radiates]
+    groups = []
+    for region, boundary in dict.fromkeys((side.region, side.boundary) for side in left):
+        members = [side for side in left if (side.region, side.boundary) == (region, boundary)]
+        tet, face = (np.concatenate(part) for part in zip(*((s.tet, s.face) for s in members), strict=True))
+        surface = np.repeat([s.surface for s in members], [len(s.tet) for s in members])
+        for part in _connected(topology, tet, face):
+            named = np.unique(surface[part])
+            groups.append(
+                [Side(int(s), region, boundary, *(a[part[surface[part] == s]] for a in (tet, face))) for s in named]
+            )
+    return groups
+
+
+def _connected(topology: Topology, tet: Ints, face: Ints) -> list[Ints]:
+    """Positions of faces, group by group of those that share vertices."""
+    kept = topology.sorted_vertices[tet] != face[:, None]
+    vertices = topology.tet_vertex_ids[tet][kept].reshape(-1, 3)
+    rows = np.repeat(np.arange(len(tet)), 3)
+    shape = (len(tet), topology.n_vertices)
+    touches = sp.csr_matrix((np.ones(vertices.size, dtype=np.int64), (rows, vertices.ravel())), shape=shape)
+    count, label = connected_components(touches @ touches.T, directed=False)
+    return [np.flatnonzero(label == i) for i in range(count)]
+
+
+def _radiator(space: Space, sides: list[Side], first: int) -> Radiator:
+    """The infinite elements on touching sides; MeshError naming the surfaces."""
+    case, boundary = space.case, sides[0].boundary
+    assert isinstance(boundary, Radiating)
+    name = "+".join(case.surfaces[side.surface].name for side in sides)
+    tet, face = (np.concatenate(part) for part in zip(*((s.tet, s.face) for s in sides), strict=True))
+    top = case.sweep.frequencies[-1:]
+    k = float(2 * np.pi * top[0] / case.regions[sides[0].region].medium.c(top)[0].real)
+    ground = None if boundary.ground == "none" else Ground.of(boundary.ground_normal, 1 if boundary.ground == "rigid" else -1)
+    try:
+        outer = envelope(
+            space.geometry,
+            space.dofs,
+            (tet, face),
+            centre=boundary.centre,
+            radial=boundary.radial_functions,
+            k=k,
+            ground=ground,
+            first=first,
+        )
+    except MeshError as error:
+        raise MeshError(f"surfaces/{name}: {error}") from None
+    return Radiator(name, tuple(side.surface for side in sides), sides[0].region, outer)
 
 
 def _all_sides(case: Case, topology: Topology, geometry: Geometry) -> tuple[tuple[Side, ...], tuple[SheetPair, ...]]:

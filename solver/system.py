@@ -336,10 +336,41 @@ def _keys(matrix: sp.csr_matrix) -> Ints:
 def build_system(space: Space, samples: Samples) -> System:
     """The sum of terms of `space.case`, with one output row per receiver sample."""
     case = space.case
-    terms = [*_volume_terms(space), *_surface_terms(space), *_sheet_terms(space)]
+    inside = [*_volume_terms(space), *_surface_terms(space), *_sheet_terms(space)]
+    terms = [*(replace(term, build=partial(_widened, term.build, space, 2)) for term in inside), *_outside_terms(space)]
     sets = tuple(_load_set(space, index) for index in range(len(case.load_cases)))
-    receivers = evaluate(space.geometry, space.dofs, samples.tet, samples.bary)
+    receivers = _widened(lambda: evaluate(space.geometry, space.dofs, samples.tet, samples.bary).T.tocsr(), space, 1).T.tocsr()
     return System(space, tuple(terms), sets, receivers, pressure_fixed(space))
+
+
+def _widened(build: Callable[[], Matrix], space: Space, axes: int) -> Matrix:
+    """A matrix on the unknowns of the mesh, with empty rows (and columns) for those of the outside."""
+    matrix = build()
+    if space.size == space.dofs.n_dofs:
+        return matrix
+    out = matrix.tocsr().copy()
+    out.resize((space.size, space.size if axes == 2 else matrix.shape[1]))
+    return out if axes == 2 else out.tocsc()
+
+
+def _outside_terms(space: Space) -> list[Term]:
+    """(1/rho) (K + i (w/c) C - (w/c)^2 M) of the infinite elements."""
+    terms = []
+    for outer in space.envelopes:
+        build = cache(partial(outer.envelope.matrices, space.size))
+        for number in range(3):
+
+            def phi(f: Floats, region: int = outer.region, number: int = number) -> Complex:
+                medium = space.case.regions[region]
+                rho, c = damped(medium.medium, medium.damping, f)
+                return np.asarray((1.0, 1j, -1.0)[number] * (2 * np.pi * f / c) ** number / rho)
+
+            terms.append(Term(f"radiated/{outer.name}", phi, partial(_nth, build, number), symmetric=number == 2))
+    return terms
+
+
+def _nth(build: Callable[[], tuple[Matrix, ...]], number: int) -> Matrix:
+    return build()[number]
 
 
 def adjacent(case: Case, region: int, f: Floats) -> Adjacent:
@@ -431,10 +462,12 @@ def _transfer(case: Case, boundary: Boundary, region: int, f: Floats) -> Complex
 
 def pressure_fixed(space: Space) -> npt.NDArray[np.bool_]:
     """Which unknowns (n,) a surface of kind `pressure` constrains."""
-    fixed = np.zeros(space.dofs.n_dofs, dtype=bool)
+    fixed = np.zeros(space.size, dtype=bool)
     for side in space.sides:
         if side.boundary.fixes_pressure:
             fixed[face_dofs(space.dofs, side.tet, side.face)] = True
+    for outer in space.envelopes:
+        fixed[outer.envelope.numbers[outer.envelope.held]] = True
     return fixed
 
 
@@ -444,7 +477,8 @@ def pressure_fixed(space: Space) -> npt.NDArray[np.bool_]:
 
 def _load_set(space: Space, index: int) -> LoadSet:
     load_case = space.case.load_cases[index]
-    terms = [term for load in load_case.loads for term in _load_terms(space, load)]
+    found = [term for load in load_case.loads for term in _load_terms(space, load)]
+    terms = [replace(term, build=partial(_widened, term.build, space, 1)) for term in found]
     return LoadSet(load_case.name, tuple(load.name for load in load_case.loads), tuple(terms))
 
 

@@ -44,6 +44,8 @@ class Boundary(Declared):
     """Constrains the pressure unknowns; may carry a surface pressure."""
     takes_wave: ClassVar[bool] = False
     """May carry an incoming plane wave."""
+    radiates: ClassVar[bool] = False
+    """Carries infinite elements: the fluid goes on outside without end."""
 
     @property
     def sides(self) -> tuple[Boundary, ...]:
@@ -179,6 +181,40 @@ class Port(Characteristic):
         return cls()
 
 
+@kind("radiating")
+class Radiating(Boundary):
+    """Outer surface beyond which the fluid goes on without end (infinite elements); star-shaped about its centre.
+
+    A dome ends on a ground plane through the centre, rigid or pressure-release. Surfaces of this kind that touch are one.
+    """
+
+    radiates = True
+
+    centre: tuple[float, float, float] | None = quantity(
+        help="a point from which all of the surface is seen (default: the middle of its bounding box)", unit="m", default=None
+    )
+    radial_functions: int = quantity(
+        help="radial functions; 0: 8 where the surface is small against the wave length (k a <= 10), 10 above",
+        low=0,
+        high=20,
+        default=0,
+    )
+    ground: str = quantity(
+        help="plane through the centre on which a dome ends", choices=("none", "rigid", "pressure_release"), default="none"
+    )
+    ground_normal: tuple[float, float, float] = quantity(
+        help="the ground plane's normal, to the side of the fluid", default=(0.0, 0.0, 1.0)
+    )
+
+    def validate(self) -> None:
+        if not any(self.ground_normal):
+            raise FieldError("the ground plane's normal is (0, 0, 0); give the direction from the plane to the fluid")
+
+    @classmethod
+    def example(cls) -> Radiating:
+        return cls((0.0, 0.0, 0.0), 8, "rigid", (0.0, 0.0, 1.0))
+
+
 @kind("sheet")
 class Sheet(Boundary):
     """Thin surface inside the fluid; the mesh is opened along it and its two sides carry kinds of their own.
@@ -200,7 +236,7 @@ class Sheet(Boundary):
 
     def validate(self) -> None:
         for side in (self.front, self.back):
-            if isinstance(side, Sheet) or side.fixes_pressure or side.takes_wave:
+            if isinstance(side, Sheet) or side.fixes_pressure or side.takes_wave or side.radiates:
                 raise FieldError(f"a sheet's side cannot be of kind '{side.kind_name}'; use rigid, vibrating or impedance")
             if self.transfer is not None and not side.hard:
                 raise FieldError(
