@@ -203,12 +203,39 @@ def shell(n: int, radii: Sequence[float], stretch: Sequence[float] = (1.0, 1.0, 
     return replace(curved, nodes=curved.nodes * np.asarray(stretch))
 
 
+def dome(n: int, radii: Sequence[float]) -> TestMesh:
+    """Half a ball z > 0 whose spheres (the first of radius 0) have the given radii, n = len(radii) - 1 levels; surfaces
+    outer and disc_0 .. disc_(n-1), the rings of the plane z = 0 from the middle outwards."""
+    octahedron = [np.array([(0, 0, 0), (sx, 0, 0), (0, sy, 0), (0, 0, 1.0)]) for sx, sy in itertools.product((1.0, -1.0), repeat=2)]
+    tables = [_split_tet(corners, n) for corners in octahedron]
+    bary = np.concatenate([b for _, b in tables])
+    points = np.concatenate([_on_sphere(b[:, 1:], c[1:]) for (_, b), c in zip(tables, octahedron, strict=True)])
+    points = points * np.asarray(radii)[np.rint(n * (1.0 - bary[:, 0])).astype(int)][:, None]
+    _, first, inverse = np.unique(np.round(points / radii[-1], 9) + 0.0, axis=0, return_index=True, return_inverse=True)
+    size, local = len(tables[0][0]), _split_connectivity(n)
+    nodes = points[first]
+    tets = np.concatenate([inverse.reshape(-1)[k * size + local] for k in range(len(octahedron))])
+    bare = TestMesh(nodes, _positive(nodes, tets))
+    surfaces = {"outer": _on_boundary(bare, lambda x: np.abs(np.linalg.norm(x, axis=-1) - radii[-1]) < 1e-9)}
+    floor = _on_boundary(bare, lambda x: np.abs(x[..., 2]) < 1e-12)
+    reach = np.linalg.norm(nodes[floor], axis=2).max(axis=1)
+    for k in range(n):
+        surfaces[f"disc_{k}"] = floor[np.abs(reach - radii[k + 1]) < 1e-9]
+    return _rounded(quadratic(replace(bare, surfaces=surfaces)), bare)
+
+
+def _on_sphere(bary: Floats, corners: Floats) -> Floats:
+    """Unit vectors of barycentric coordinates of a corner of the octahedron, equal angles along its edges."""
+    x = np.sin(0.5 * np.pi * bary / np.maximum(bary.sum(axis=1, keepdims=True), 1e-300)) @ corners
+    return np.asarray(x / np.maximum(np.linalg.norm(x, axis=1, keepdims=True), 1e-300))
+
+
 def _rounded(mesh: TestMesh, bare: TestMesh) -> TestMesh:
     """Every mid-edge node at the mean radius of its two ends."""
     nodes = mesh.nodes.copy()
     ends, middle = bare.tets[:, TET_EDGES].reshape(-1, 2), mesh.tets[:, 4:].ravel()
     radius = np.linalg.norm(bare.nodes[ends], axis=2).mean(axis=1)
-    nodes[middle] *= (radius / np.linalg.norm(nodes[middle], axis=1))[:, None]
+    nodes[middle] *= (radius / np.maximum(np.linalg.norm(nodes[middle], axis=1), 1e-300))[:, None]
     return replace(mesh, nodes=nodes)
 
 
