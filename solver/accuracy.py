@@ -89,7 +89,7 @@ class MeshError:
     def judged(self, values: Values, line: Line) -> Line:
         """The line with the sum of the docstring (kappa left out) as the `mesh_error` of its responses."""
         weight = 1.0 / np.maximum(np.abs(values.phi) @ self.diagonal, 1e-300)
-        z = (self.receivers - _combined(self.left, values.phi, line.adjoints)) * weight[:, None]
+        z = (values.heard(self.receivers.T).T - _combined(self.left, values.phi, line.adjoints)) * weight[:, None]
         responses = []
         for number, response in enumerate(line.responses):
             forces = self.load_sets[number].vectors(values.psi[number])[0] @ values.mix[number]

@@ -98,20 +98,23 @@ class Engine:
             Drive.of(loads, matrix, psi, mix)
             for loads, psi, mix in zip(self.system.load_sets, values.psi, values.mix, strict=True)
         ]
-        adjoint, fields, residual = self._solve(factor, self.inner(matrix), drives)
+        outputs = values.heard(self.outputs.T).T
+        adjoint, fields, residual = self._solve(factor, self.inner(matrix), drives, outputs)
         responses = [self._respond(drive, matrix, adjoint, field, values) for drive, field in zip(drives, fields, strict=True)]
         adjoints = np.zeros((self.system.size, adjoint.shape[1]), dtype=np.complex128)
         adjoints[self.free] = adjoint
         return Line(values.frequency, tuple(responses), residual, adjoints), factor
 
-    def _solve(self, factor: Factor, inner: Any, drives: list[Drive]) -> tuple[Complex, list[Complex], float]:
+    def _solve(
+        self, factor: Factor, inner: Any, drives: list[Drive], outputs: Complex
+    ) -> tuple[Complex, list[Complex], float]:
         """Adjoints, the field of each load case, and the worst residual: one block of right-hand sides if A = A^T."""
         forward = [drive.inside[self.free] @ drive.mix for drive in drives]
         if self.system.symmetric:
-            solved, residual = solve_refined(factor, inner, np.hstack([self.outputs, *forward]))
-            adjoint, *fields = _split(solved, [self.outputs, *forward])
+            solved, residual = solve_refined(factor, inner, np.hstack([outputs, *forward]))
+            adjoint, *fields = _split(solved, [outputs, *forward])
             return adjoint, fields, residual
-        adjoint, first = solve_refined(factor, inner, self.outputs, transpose=True)
+        adjoint, first = solve_refined(factor, inner, outputs, transpose=True)
         if not forward:
             return adjoint, [], first
         solved, second = solve_refined(factor, inner, np.hstack(forward))
@@ -119,10 +122,10 @@ class Engine:
 
     def _respond(self, drive: Drive, matrix: Any, adjoint: Complex, solution: Complex, values: Values) -> Response:
         system, free = self.system, self.free
-        contributions = adjoint.T @ drive.inside[free] + system.receivers @ drive.given
+        contributions = adjoint.T @ drive.inside[free] + values.heard(system.receivers @ drive.given)
         field = drive.given @ drive.mix
         field[free] += solution
-        closure = _relative(system.receivers @ field, contributions @ drive.mix)
+        closure = _relative(values.heard(system.receivers @ field), contributions @ drive.mix)
         reaction = None if free.all() else matrix @ field - drive.forces @ drive.mix
         f = values.frequency
         supplied = input_power(f, drive.forces, drive.given, reaction, field, drive.mix)

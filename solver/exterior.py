@@ -18,6 +18,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.sparse as sp
 import scipy.sparse.linalg as spla
+from numpy.polynomial.chebyshev import chebvander
 from numpy.polynomial.legendre import leggauss
 
 from murmesh.solver.envelope import Envelope
@@ -83,7 +84,9 @@ class Exterior:
         degree = 2 * self.envelope.dofs.max_order + _DEGREE
         return self._rows(lambda at: far_kernel(at, k, centre), unit, k, degree, directions=True)
 
-    def _rows(self, kernel: Callable[[Floats], Kernel], x: Floats, k: complex, degree: int, *, directions: bool = False) -> Complex:
+    def _rows(
+        self, kernel: Callable[[Floats], Kernel], x: Floats, k: complex, degree: int, *, directions: bool = False
+    ) -> Complex:
         env = self.envelope
         at, traces = self._quadrature(degree)
         y, n, weights = at.points.reshape(-1, 3), at.normals.reshape(-1, 3), at.weights.ravel()
@@ -208,3 +211,67 @@ class Outside:
         """Radiated power [W] from the far field (of the fluid without its losses); it must agree with `power`."""
         impedance = (self.rho * self.c).real
         return sum(self.exterior.far_power(u, self.k.real, impedance) for u in self.field.T)
+
+
+# ---------------------------------------------------------------------------------------------------------------------
+# a band at once
+
+
+@dataclass(frozen=True)
+class Band:
+    """Polynomials in k through m Chebyshev nodes: what depends on k smoothly becomes a sum of fixed vectors.
+
+    v(k) = sum_m l_m(k) v(k_m); exact to about 1e-11 for e^{iky} with |y| <= reach where m > (k range) reach / 2 + 14.
+    """
+
+    low: float
+    high: float
+    count: int
+
+    @classmethod
+    def of(cls, low: float, high: float, reach: float) -> Band:
+        """The band low..high [rad/m], a little wider than zero, for phases up to `reach` [m]."""
+        half = max(0.5 * (high - low), 0.05 * high)
+        middle = 0.5 * (high + low)
+        return cls(middle - half, middle + half, int(np.ceil(1.1 * half * reach)) + 14)
+
+    @property
+    def nodes(self) -> Floats:
+        """k_m (m,) [rad/m]."""
+        x = np.cos(np.pi * (np.arange(self.count) + 0.5) / self.count)
+        return np.asarray(0.5 * (self.low + self.high) + 0.5 * (self.high - self.low) * x)
+
+    def weights(self, k: npt.NDArray[np.inexact]) -> Complex:
+        """l_m(k) (nf, m), also for the complex k of a lossy fluid."""
+        x = (2.0 * np.asarray(k, dtype=np.complex128) - self.low - self.high) / (self.high - self.low)
+        at = np.cos(np.pi * (np.arange(self.count) + 0.5) / self.count)
+        scale = np.full(self.count, 2.0 / self.count)
+        scale[0] = 1.0 / self.count
+        return np.asarray((chebvander(x, self.count - 1) * scale) @ chebvander(at, self.count - 1).T)
+
+
+@dataclass(frozen=True, eq=False)
+class Listener:
+    """The pressure at one point outside, for every k of a band: p = e^{-ikd} sum_m l_m(k) (row_m . u).
+
+    rows (2 m, size): real parts, then imaginary parts; d [m] from the centre of the envelope.
+    """
+
+    band: Band
+    distance: float
+    rows: sp.csr_matrix
+
+    @classmethod
+    def at(cls, exterior: Exterior, point: Floats, low: float, high: float) -> Listener:
+        """For the wave numbers low..high [rad/m]."""
+        env = exterior.envelope
+        distance = float(np.linalg.norm(point - env.centre))
+        band = Band.of(low, high, env.largest_radius)
+        found = [np.exp(1j * k * distance) * exterior.pressure_rows(point[None], k)[0] for k in band.nodes]
+        rows = np.array(found)
+        return cls(band, distance, sp.csr_matrix(np.vstack([rows.real, rows.imag])))
+
+    def weights(self, k: Complex) -> Complex:
+        """chi (nf, 2 m) of the rows."""
+        each = np.exp(-1j * k * self.distance)[:, None] * self.band.weights(k)
+        return np.hstack([each, 1j * each])

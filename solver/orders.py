@@ -144,6 +144,8 @@ def _absorption(case: Case, wall: Wall, f: Floats) -> Floats:
     rho, c = damped(region.medium, region.damping, f)
     fluid = Adjacent(region.medium.reference, rho * c)
     own = wall.boundary.admittance(f, fluid)
+    if own is None and wall.boundary.radiates:
+        own = 1.0 / fluid.impedance
     if own is None and wall.boundary.hard:
         own = region.damping.hard_wall_admittance(f, fluid.fluid)
     if own is None:

@@ -41,18 +41,24 @@ def sphere_points(receiver: Receiver) -> tuple[Floats, Floats]:
 
 
 def locate_receivers(case: Case, geometry: Geometry) -> Samples:
-    """Find every receiver's samples in the mesh; CaseError with the nearest point for one that lies outside."""
+    """Find every receiver's samples in the mesh, -1 for those outside of it where a surface radiates; CaseError with the
+    nearest point for one that lies outside where none does."""
     groups = [sphere_points(receiver) for receiver in case.receivers]
     points = np.vstack([group[0] for group in groups]) if groups else np.empty((0, 3))
     index = np.repeat(np.arange(len(groups)), [len(group[1]) for group in groups]).astype(np.int64)
     weights = np.concatenate([group[1] for group in groups]) if groups else np.empty(0)
     tet, bary = geometry.locate(points) if len(points) else (np.empty(0, np.int64), np.empty((0, 4)))
-    for sample in np.flatnonzero(tet < 0):
-        receiver, at = case.receivers[index[sample]], points[sample]
-        near = geometry.nearest_point(at)
-        what = "lies" if receiver.radius == 0 else f"with its averaging sphere of {receiver.radius:g} m reaches"
-        raise CaseError(
-            f"receiver '{receiver.name}' {what} outside every region at ({at[0]:.4g}, {at[1]:.4g}, {at[2]:.4g}) m; the "
-            f"nearest point of the fluid is ({near[0]:.4g}, {near[1]:.4g}, {near[2]:.4g}) m"
-        )
+    if not any(surface.boundary.radiates for surface in case.surfaces):
+        for sample in np.flatnonzero(tet < 0):
+            raise not_in_fluid(case.receivers[index[sample]], points[sample], geometry)
     return Samples(index, weights, points, tet, bary)
+
+
+def not_in_fluid(receiver: Receiver, at: Floats, geometry: Geometry) -> CaseError:
+    """What to say of a sample that lies in no fluid."""
+    near = geometry.nearest_point(at)
+    what = "lies" if receiver.radius == 0 else f"with its averaging sphere of {receiver.radius:g} m reaches"
+    return CaseError(
+        f"receiver '{receiver.name}' {what} outside every region at ({at[0]:.4g}, {at[1]:.4g}, {at[2]:.4g}) m; the "
+        f"nearest point of the fluid is ({near[0]:.4g}, {near[1]:.4g}, {near[2]:.4g}) m"
+    )

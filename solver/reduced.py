@@ -211,7 +211,7 @@ class Sketch:
 
     def adjoint_residual(self, values: Values, adjoints: Complex) -> Floats:
         """|e - A^T W z| of every receiver sample, (samples,)."""
-        return np.asarray(np.linalg.norm(self.receivers - Stack(self.adjoint).combine(values.phi) @ adjoints, axis=0))
+        return np.asarray(np.linalg.norm(values.heard(self.receivers.T).T - Stack(self.adjoint).combine(values.phi) @ adjoints, axis=0))
 
 
 def _sketched(term: LoadTerm, matrix: Floats) -> LoadTerm:
@@ -435,7 +435,7 @@ def _raw_estimate(model: Reduction, values: Values, line: Line) -> Floats:
     for number, response in enumerate(line.responses):
         forward = model.sketch.forward_residual(number, values, response.field)
         if len(model.samples.receiver):
-            heard = np.sqrt(_mean_square(model.samples, model.projected.receivers @ response.field))
+            heard = np.sqrt(_mean_square(model.samples, values.heard(model.projected.receivers @ response.field)))
             out.append(DB * np.log1p(adjoint * forward / np.maximum(heard[model.samples.receiver], 1e-300)))
         else:
             out.append(np.atleast_1d(DB * np.log1p(forward / max(float(np.linalg.norm(response.field)), 1e-300))))

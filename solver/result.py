@@ -246,7 +246,8 @@ class Result:
         for outer in self.space.envelopes:
             region = self.case.regions[outer.region]
             rho, c = damped(region.medium, region.damping, f)
-            out.append(Outside(outer.name, Exterior(outer.envelope, self.space.size), u, frequency, complex(rho[0]), complex(c[0])))
+            exterior = Exterior(outer.envelope, self.space.size)
+            out.append(Outside(outer.name, exterior, u, frequency, complex(rho[0]), complex(c[0])))
         return tuple(out)
 
     def unknowns(self, frequency: float, load_case: str = "") -> Complex:

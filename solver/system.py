@@ -37,7 +37,8 @@ from murmesh.solver.case.model import Case, Region
 from murmesh.solver.case.motion import Motion
 from murmesh.solver.case.spectrum import as_spectrum
 from murmesh.solver.errors import CaseError, MeshError
-from murmesh.solver.receiver_points import Samples
+from murmesh.solver.exterior import Exterior, Listener
+from murmesh.solver.receiver_points import Samples, not_in_fluid
 from murmesh.solver.scan import interpolation
 from murmesh.solver.space import SheetPair, Side, Space
 
@@ -105,20 +106,26 @@ class LoadSet:
 @dataclass(frozen=True, eq=False)
 class Values:
     """The coefficients of the sum at one frequency: phi (terms,), psi (m,) per load case and load term, and per load case
-    the columns mix (loads, r) whose mean squares add up to the field's."""
+    the columns mix (loads, r) whose mean squares add up to the field's; chi (samples, rows) of the outputs, None for 1."""
 
     frequency: float
     phi: Complex
     psi: tuple[tuple[Complex, ...], ...]
     mix: tuple[Complex, ...]
+    chi: Complex | None = None
+
+    def heard(self, rows: Matrix) -> Matrix:
+        """Outputs from what the fixed rows give (rows, ...): themselves, or chi times them."""
+        return rows if self.chi is None else self.chi @ rows
 
 
 @dataclass(frozen=True, eq=False)
 class System:
     """The sum of terms of one case, on the unknowns of a space or, projected, on those of a reduced model.
 
-    receivers (samples, n)   one output row per receiver sample
+    receivers (rows, n)      fixed rows, one per receiver sample inside the mesh, many per sample outside of it
     fixed (n,)               unknowns whose pressure is prescribed
+    outputs                  chi(f) (nf, samples, rows): the sample's row is chi(f) receivers; None where rows are samples
     """
 
     space: Space
@@ -126,6 +133,7 @@ class System:
     load_sets: tuple[LoadSet, ...]
     receivers: Matrix
     fixed: npt.NDArray[np.bool_]
+    outputs: Coefficient | None = None
 
     @property
     def size(self) -> int:
@@ -158,8 +166,15 @@ class System:
         psi = [[term.psi(f) for term in held.terms] for held in self.load_sets]
         rules = [self.space.case.load_case(held.name).combination for held in self.load_sets]
         mix = [rule.factors(f, len(held.loads)) for rule, held in zip(rules, self.load_sets, strict=True)]
+        chi = self.outputs(f) if self.outputs else None
         return [
-            Values(float(at), phi[i], tuple(tuple(p[i] for p in held) for held in psi), tuple(m[i] for m in mix))
+            Values(
+                float(at),
+                phi[i],
+                tuple(tuple(p[i] for p in held) for held in psi),
+                tuple(m[i] for m in mix),
+                None if chi is None else chi[i],
+            )
             for i, at in enumerate(f)
         ]
 
@@ -174,7 +189,7 @@ class System:
             replace(held, terms=tuple(replace(t, build=_constant(v)) for t, v in zip(held.terms, vectors, strict=True)))
             for held, vectors in zip(self.load_sets, projected.loads, strict=True)
         )
-        return System(self.space, terms, sets, projected.receivers, projected.fixed)
+        return System(self.space, terms, sets, projected.receivers, projected.fixed, self.outputs)
 
     @cached_property
     def prescribed_shapes(self) -> Floats:
@@ -339,8 +354,49 @@ def build_system(space: Space, samples: Samples) -> System:
     inside = [*_volume_terms(space), *_surface_terms(space), *_sheet_terms(space)]
     terms = [*(replace(term, build=partial(_widened, term.build, space, 2)) for term in inside), *_outside_terms(space)]
     sets = tuple(_load_set(space, index) for index in range(len(case.load_cases)))
-    receivers = _widened(lambda: evaluate(space.geometry, space.dofs, samples.tet, samples.bary).T.tocsr(), space, 1).T.tocsr()
-    return System(space, tuple(terms), sets, receivers, pressure_fixed(space))
+    receivers, outputs = _outputs(space, samples)
+    return System(space, tuple(terms), sets, receivers, pressure_fixed(space), outputs)
+
+
+def _outputs(space: Space, samples: Samples) -> tuple[Matrix, Coefficient | None]:
+    """Rows of the samples inside, then those of each sample outside; with what makes outputs of them."""
+    inside = samples.tet >= 0
+    own = partial(evaluate, space.geometry, space.dofs, samples.tet[inside], samples.bary[inside])
+    rows = _widened(lambda: own().T, space, 1).T.tocsr()
+    beyond = [_listener(space, samples, int(sample)) for sample in np.flatnonzero(~inside)]
+    if not beyond:
+        return rows, None
+
+    def chi(f: Floats) -> Complex:
+        out = np.zeros((len(f), len(inside), rows.shape[0] + sum(l.rows.shape[0] for _, l in beyond)), dtype=np.complex128)
+        out[:, np.flatnonzero(inside), np.arange(rows.shape[0])] = 1.0
+        at = rows.shape[0]
+        for sample, (region, listener) in zip(np.flatnonzero(~inside), beyond, strict=True):
+            out[:, sample, at : at + listener.rows.shape[0]] = listener.weights(_wave_number(space.case, region, f))
+            at += listener.rows.shape[0]
+        return out
+
+    return sp.vstack([rows, *(listener.rows for _, listener in beyond)]).tocsr(), chi
+
+
+def _listener(space: Space, samples: Samples, sample: int) -> tuple[int, Listener]:
+    """The nearest surface that radiates past a sample, as its region and what is heard from it."""
+    point = samples.points[sample]
+    found = []
+    for outer in space.envelopes:
+        exterior = Exterior(outer.envelope, space.size)
+        if exterior.beyond(point[None])[0]:
+            found.append((float(np.linalg.norm(point - outer.envelope.centre)), outer.region, exterior))
+    if not found:
+        raise not_in_fluid(space.case.receivers[samples.receiver[sample]], point, space.geometry)
+    _, region, exterior = min(found, key=lambda each: each[0])
+    k = _wave_number(space.case, region, space.case.sweep.frequencies).real
+    return region, Listener.at(exterior, point, float(k.min()), float(k.max()))
+
+
+def _wave_number(case: Case, region: int, f: Floats) -> Complex:
+    """w/c (nf,) [1/m] with all losses."""
+    return np.asarray(2 * np.pi * f / damped(case.regions[region].medium, case.regions[region].damping, f)[1])
 
 
 def _widened(build: Callable[[], Matrix], space: Space, axes: int) -> Matrix:

@@ -206,7 +206,8 @@ def shell(n: int, radii: Sequence[float], stretch: Sequence[float] = (1.0, 1.0, 
 def dome(n: int, radii: Sequence[float]) -> TestMesh:
     """Half a ball z > 0 whose spheres (the first of radius 0) have the given radii, n = len(radii) - 1 levels; surfaces
     outer and disc_0 .. disc_(n-1), the rings of the plane z = 0 from the middle outwards."""
-    octahedron = [np.array([(0, 0, 0), (sx, 0, 0), (0, sy, 0), (0, 0, 1.0)]) for sx, sy in itertools.product((1.0, -1.0), repeat=2)]
+    signs = itertools.product((1.0, -1.0), repeat=2)
+    octahedron = [np.array([(0, 0, 0), (sx, 0, 0), (0, sy, 0), (0, 0, 1.0)]) for sx, sy in signs]
     tables = [_split_tet(corners, n) for corners in octahedron]
     bary = np.concatenate([b for _, b in tables])
     points = np.concatenate([_on_sphere(b[:, 1:], c[1:]) for (_, b), c in zip(tables, octahedron, strict=True)])
