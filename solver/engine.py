@@ -100,7 +100,10 @@ class Engine:
         ]
         outputs = values.heard(self.outputs.T).T
         adjoint, fields, residual = self._solve(factor, self.inner(matrix), drives, outputs)
-        responses = [self._respond(drive, matrix, adjoint, field, values) for drive, field in zip(drives, fields, strict=True)]
+        responses = [
+            self._respond(i, drive, matrix, adjoint, field, values)
+            for i, (drive, field) in enumerate(zip(drives, fields, strict=True))
+        ]
         adjoints = np.zeros((self.system.size, adjoint.shape[1]), dtype=np.complex128)
         adjoints[self.free] = adjoint
         return Line(values.frequency, tuple(responses), residual, adjoints), factor
@@ -120,12 +123,16 @@ class Engine:
         solved, second = solve_refined(factor, inner, np.hstack(forward))
         return adjoint, _split(solved, forward), max(first, second)
 
-    def _respond(self, drive: Drive, matrix: Any, adjoint: Complex, solution: Complex, values: Values) -> Response:
+    def _respond(
+        self, number: int, drive: Drive, matrix: Any, adjoint: Complex, solution: Complex, values: Values
+    ) -> Response:
         system, free = self.system, self.free
         contributions = adjoint.T @ drive.inside[free] + values.heard(system.receivers @ drive.given)
         field = drive.given @ drive.mix
         field[free] += solution
         closure = _relative(values.heard(system.receivers @ field), contributions @ drive.mix)
+        if values.direct:
+            contributions = contributions + values.direct[number]
         reaction = None if free.all() else matrix @ field - drive.forces @ drive.mix
         f = values.frequency
         supplied = input_power(f, drive.forces, drive.given, reaction, field, drive.mix)

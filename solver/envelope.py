@@ -12,6 +12,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -98,14 +99,16 @@ class Envelope:
     @cached_property
     def largest_radius(self) -> float:
         """a = max R [m]."""
-        return float(np.linalg.norm(self.geometry.nodes[_face_nodes(self.geometry, self.tet, self.face)] - self.centre, axis=1).max())
+        return float(
+            np.linalg.norm(self.geometry.nodes[_face_nodes(self.geometry, self.tet, self.face)] - self.centre, axis=1).max()
+        )
 
     def matrices(self, size: int) -> tuple[sp.csr_matrix, sp.csr_matrix, sp.csr_matrix]:
         """K, C, M (size, size), real, K [m], C [m2], M [m3]; K and C are not symmetric."""
         s, t = self._forms, radial_matrices(self.radial)
-        k = _sum((s.s1, t.t0), (s.s3.T, t.t1), (s.s3, t.t2), (s.s2, t.t3))
-        c = _sum((s.s4, t.t4), (s.s5, t.t1 - t.t2), (s.s6.T - s.s6, t.t0))
-        m = _sum((-s.s7, t.t0))
+        k = _sum((s["s1"], t.t0), (s["s3"].T, t.t1), (s["s3"], t.t2), (s["s2"], t.t3))
+        c = _sum((s["s4"], t.t4), (s["s5"], t.t1 - t.t2), (s["s6"].T - s["s6"], t.t0))
+        m = _sum((-s["s7"], t.t0))
         out = [self._placed(each, size) for each in (k, c, m)]
         return out[0], out[1], out[2]
 
@@ -126,7 +129,8 @@ class Envelope:
         s, t = self._diagonals, radial_matrices(self.radial)
         stiffness = _outer(s.s1, t.t0) + _outer(s.s3, t.t1 + t.t2) + _outer(s.s2, t.t3)
         wave = _outer(s.s4, t.t4) + _outer(s.s5, t.t1 - t.t2)
-        return float(scaled_condition(stiffness + 1j * k * wave + k * k * _outer(s.s7, t.t0)).max())
+        matrix = np.asarray(stiffness + 1j * k * wave + k * k * _outer(s.s7, t.t0), dtype=np.complex128)
+        return float(scaled_condition(matrix).max())
 
     def points(self, degree: int) -> tuple[FacePoints, sp.csr_matrix]:
         """Quadrature points of the faces, and rows E (m q, T) of the trace functions there."""
@@ -147,15 +151,15 @@ class Envelope:
         return np.where(dofs >= 0, np.searchsorted(self.trace, dofs), -1)
 
     @cached_property
-    def _forms(self) -> SurfaceForms:
-        """S1 .. S7 as sparse matrices (T, T)."""
+    def _forms(self) -> dict[str, sp.csr_matrix]:
+        """S1 .. S7 as sparse matrices (T, T), by name."""
         names = list(SurfaceForms.__dataclass_fields__)
         each = [(self._columns(part, order), self._face_forms(part, order)) for part, order in self._pieces()]
-        return SurfaceForms(*(self._scatter([(at, getattr(forms, name)) for at, forms in each]) for name in names))
+        return {name: self._scatter([(at, getattr(forms, name)) for at, forms in each]) for name in names}
 
     @cached_property
     def _diagonals(self) -> SurfaceForms:
-        return SurfaceForms(*(getattr(self._forms, name).diagonal() for name in SurfaceForms.__dataclass_fields__))
+        return SurfaceForms(**{name: form.diagonal() for name, form in self._forms.items()})
 
     def _pieces(self) -> list[tuple[Ints, int]]:
         """Faces of one order, few enough at a time for the gradients at their points."""
@@ -322,7 +326,7 @@ def _rim_dofs(dofs: DofMap, tet: Ints, face: Ints) -> Ints:
     return np.concatenate(parts) if parts else np.zeros(0, dtype=np.int64)
 
 
-def _sum(*parts: tuple[sp.csr_matrix, Floats]) -> sp.coo_matrix:
+def _sum(*parts: tuple[Any, Floats]) -> sp.coo_matrix:
     """sum of S x T."""
     out = sp.csr_matrix((0, 0))
     for number, (surface, radial) in enumerate(parts):

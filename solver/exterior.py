@@ -13,6 +13,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -21,6 +22,7 @@ import scipy.sparse.linalg as spla
 from numpy.polynomial.chebyshev import chebvander
 from numpy.polynomial.legendre import leggauss
 
+from murmesh.solver.case.load import IncidentField
 from murmesh.solver.envelope import Envelope
 from murmesh.solver.faces import FacePoints
 
@@ -71,7 +73,7 @@ class Exterior:
     def operator(self, k: complex) -> sp.csr_matrix:
         """K + ikC - k^2 M: rho A_out."""
         stiffness, wave, mass = self.matrices
-        return stiffness + 1j * k * wave - k * k * mass
+        return sp.csr_matrix(stiffness + 1j * k * wave - k * k * mass)
 
     def pressure_rows(self, points: Floats, k: complex) -> Complex:
         """Rows (m, size) with p(x) = row . u at points (m, 3) outside."""
@@ -103,8 +105,9 @@ class Exterior:
         rows[:, env.trace] += double
         return rows
 
-    def _project(self, moments: Complex) -> Complex:
-        return np.asarray(self._mass_factor.solve(moments.real) + 1j * self._mass_factor.solve(moments.imag))
+    def _project(self, moments: npt.NDArray[np.complexfloating[Any, Any]]) -> Complex:
+        real, imag = (self._mass_factor.solve(np.ascontiguousarray(part)) for part in (moments.real, moments.imag))
+        return np.asarray(real + 1j * imag, dtype=np.complex128)
 
     @cached_property
     def _mass_factor(self) -> spla.SuperLU:
@@ -141,9 +144,9 @@ class Exterior:
             return np.asarray(np.einsum("kqd,qd->k", away / np.linalg.norm(away, axis=2)[..., None] ** 3, flux) / (4 * np.pi))
 
         if env.ground is None:
-            return covered(x) < 0.5
+            return np.asarray(covered(x) < 0.5)
         above = (x - env.centre) @ np.asarray(env.ground.normal) >= -1e-9 * env.largest_radius
-        return above & (covered(x) + covered(env.ground.mirror(env.centre, x)) < 0.5)
+        return np.asarray(above & (covered(x) + covered(env.ground.mirror(env.centre, x)) < 0.5))
 
     def surface_power(self, field: Complex, k: complex, rho_omega: complex) -> float:
         """W = Re int p conj(v_n) dS / 2 [W] of a field u (size,): the power through the surface; rho_omega = rho w."""
@@ -275,3 +278,72 @@ class Listener:
         """chi (nf, 2 m) of the rows."""
         each = np.exp(-1j * k * self.distance)[:, None] * self.band.weights(k)
         return np.hstack([each, 1j * each])
+
+
+def with_image(field: IncidentField, envelope: Envelope, points: Floats, k: complex) -> tuple[Complex, Complex]:
+    """Shape (q,) and gradient (q, 3) of a field from outside, its reflection by the ground plane included."""
+    value, gradient = field.shape(points, k)
+    if envelope.ground is None:
+        return value, gradient
+    n, sign = np.asarray(envelope.ground.normal), envelope.ground.sign
+    image, slope = field.shape(envelope.ground.mirror(envelope.centre, points), k)
+    return value + sign * image, gradient + sign * (slope - 2.0 * (slope @ n)[:, None] * n)
+
+
+@dataclass(frozen=True, eq=False)
+class Incident:
+    """A field p_i from outside as a load, for every k of a band. The unknowns of the outside carry what is added to it:
+
+        A_out (u - u_i) - (1/rho) int q dp_i/dn dS   in the place of A_out u,   u_i = (p_i on the surface, 0)
+
+    traces (size, 2 m): u_i of unit amplitude at the band's nodes, real and imaginary parts; vectors (size, 6 m): the loads
+    K u_i + flux, C u_i, M u_i; delay [m] taken out of the phases.
+    """
+
+    field: IncidentField
+    exterior: Exterior
+    band: Band
+    traces: sp.csc_matrix
+    vectors: sp.csc_matrix
+    delay: float
+
+    @classmethod
+    def of(cls, field: IncidentField, exterior: Exterior, low: float, high: float) -> Incident:
+        """For the wave numbers low..high [rad/m]."""
+        env = exterior.envelope
+        band = Band.of(low, high, env.largest_radius)
+        at, rows = exterior._quadrature(2 * env.dofs.max_order + _DEGREE)
+        y, n, weights = at.points.reshape(-1, 3), at.normals.reshape(-1, 3), at.weights.ravel()
+        delay = field.delay(env.centre)
+        trace, flux = (np.zeros((exterior.size, band.count), dtype=np.complex128) for _ in range(2))
+        for m, k in enumerate(band.nodes):
+            value, gradient = with_image(field, env, y, k)
+            turn = np.exp(1j * k * delay) * weights
+            trace[env.trace[~env.held], m] = exterior._project(rows[:, ~env.held].T @ (turn * value))
+            flux[env.trace, m] = rows.T @ (turn * np.einsum("qd,qd->q", gradient, n))
+        stiffness, wave, mass = exterior.matrices
+        loads = [_real(part) for part in (stiffness @ trace + flux, wave @ trace, mass @ trace)]
+        return cls(field, exterior, band, sp.csc_matrix(_real(trace)), sp.csc_matrix(np.hstack(loads)), delay)
+
+    def _each(self, f: Floats, k: Complex, rho: Complex) -> Complex:
+        amplitude = self.field.amplitude(f, rho) * np.exp(-1j * k * self.delay)
+        each = amplitude[:, None] * self.band.weights(k)
+        return np.hstack([each, 1j * each])
+
+    def weights(self, f: Floats, k: Complex, rho: Complex) -> Complex:
+        """psi (nf, 6 m) of the vectors."""
+        each = self._each(f, k, rho)
+        return np.hstack([(factor / rho)[:, None] * each for factor in (np.ones_like(k), 1j * k, -k * k)])
+
+    def surface(self, f: Floats, k: Complex, rho: Complex) -> Complex:
+        """Weights (nf, 2 m) of the traces."""
+        return self._each(f, k, rho)
+
+    def at(self, points: Floats, f: Floats, k: Complex, rho: Complex) -> Complex:
+        """p_i (nf, q) [Pa] at points outside."""
+        shapes = [with_image(self.field, self.exterior.envelope, points, complex(each))[0] for each in k]
+        return self.field.amplitude(f, rho)[:, None] * np.array(shapes).reshape(len(f), len(points))
+
+
+def _real(columns: npt.NDArray[np.complexfloating[Any, Any]]) -> Floats:
+    return np.hstack([columns.real, columns.imag])

@@ -211,7 +211,9 @@ class Sketch:
 
     def adjoint_residual(self, values: Values, adjoints: Complex) -> Floats:
         """|e - A^T W z| of every receiver sample, (samples,)."""
-        return np.asarray(np.linalg.norm(values.heard(self.receivers.T).T - Stack(self.adjoint).combine(values.phi) @ adjoints, axis=0))
+        return np.asarray(
+            np.linalg.norm(values.heard(self.receivers.T).T - Stack(self.adjoint).combine(values.phi) @ adjoints, axis=0)
+        )
 
 
 def _sketched(term: LoadTerm, matrix: Floats) -> LoadTerm:

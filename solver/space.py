@@ -136,9 +136,7 @@ def _touching(sides: tuple[Side, ...], topology: Topology) -> list[list[Side]]:
         surface = np.repeat([s.surface for s in members], [len(s.tet) for s in members])
         for part in _connected(topology, tet, face):
             named = np.unique(surface[part])
-            groups.append(
-                [Side(int(s), region, boundary, *(a[part[surface[part] == s]] for a in (tet, face))) for s in named]
-            )
+            groups.append([Side(int(s), region, boundary, *(a[part[surface[part] == s]] for a in (tet, face))) for s in named])
     return groups
 
 

@@ -31,13 +31,21 @@ from murmesh.solver.assembly import (
 )
 from murmesh.solver.case.boundary import Adjacent, Boundary
 from murmesh.solver.case.expression import parse
-from murmesh.solver.case.load import IncomingWave, Load, Monopole, SurfacePressure, SurfaceVelocity
+from murmesh.solver.case.load import (
+    IncidentField,
+    IncomingWave,
+    Load,
+    Monopole,
+    OutsideMonopole,
+    SurfacePressure,
+    SurfaceVelocity,
+)
 from murmesh.solver.case.medium import damped
 from murmesh.solver.case.model import Case, Region
 from murmesh.solver.case.motion import Motion
 from murmesh.solver.case.spectrum import as_spectrum
 from murmesh.solver.errors import CaseError, MeshError
-from murmesh.solver.exterior import Exterior, Listener
+from murmesh.solver.exterior import Exterior, Incident, Listener
 from murmesh.solver.receiver_points import Samples, not_in_fluid
 from murmesh.solver.scan import interpolation
 from murmesh.solver.space import SheetPair, Side, Space
@@ -106,13 +114,15 @@ class LoadSet:
 @dataclass(frozen=True, eq=False)
 class Values:
     """The coefficients of the sum at one frequency: phi (terms,), psi (m,) per load case and load term, and per load case
-    the columns mix (loads, r) whose mean squares add up to the field's; chi (samples, rows) of the outputs, None for 1."""
+    the columns mix (loads, r) whose mean squares add up to the field's; chi (samples, rows) of the outputs, None for 1;
+    direct (samples, loads) per load case: what is heard outside of a load by itself, nothing where there is none."""
 
     frequency: float
     phi: Complex
     psi: tuple[tuple[Complex, ...], ...]
     mix: tuple[Complex, ...]
     chi: Complex | None = None
+    direct: tuple[Complex, ...] = ()
 
     def heard(self, rows: Matrix) -> Matrix:
         """Outputs from what the fixed rows give (rows, ...): themselves, or chi times them."""
@@ -134,6 +144,7 @@ class System:
     receivers: Matrix
     fixed: npt.NDArray[np.bool_]
     outputs: Coefficient | None = None
+    direct: Callable[[Floats], tuple[Complex, ...]] | None = None
 
     @property
     def size(self) -> int:
@@ -167,6 +178,7 @@ class System:
         rules = [self.space.case.load_case(held.name).combination for held in self.load_sets]
         mix = [rule.factors(f, len(held.loads)) for rule, held in zip(rules, self.load_sets, strict=True)]
         chi = self.outputs(f) if self.outputs else None
+        direct = self.direct(f) if self.direct else ()
         return [
             Values(
                 float(at),
@@ -174,6 +186,7 @@ class System:
                 tuple(tuple(p[i] for p in held) for held in psi),
                 tuple(m[i] for m in mix),
                 None if chi is None else chi[i],
+                tuple(d[i] for d in direct),
             )
             for i, at in enumerate(f)
         ]
@@ -189,7 +202,7 @@ class System:
             replace(held, terms=tuple(replace(t, build=_constant(v)) for t, v in zip(held.terms, vectors, strict=True)))
             for held, vectors in zip(self.load_sets, projected.loads, strict=True)
         )
-        return System(self.space, terms, sets, projected.receivers, projected.fixed, self.outputs)
+        return System(self.space, terms, sets, projected.receivers, projected.fixed, self.outputs, self.direct)
 
     @cached_property
     def prescribed_shapes(self) -> Floats:
@@ -355,7 +368,34 @@ def build_system(space: Space, samples: Samples) -> System:
     terms = [*(replace(term, build=partial(_widened, term.build, space, 2)) for term in inside), *_outside_terms(space)]
     sets = tuple(_load_set(space, index) for index in range(len(case.load_cases)))
     receivers, outputs = _outputs(space, samples)
-    return System(space, tuple(terms), sets, receivers, pressure_fixed(space), outputs)
+    direct = _direct(space, samples, receivers, outputs) if outputs else None
+    return System(space, tuple(terms), sets, receivers, pressure_fixed(space), outputs, direct)
+
+
+def _direct(
+    space: Space, samples: Samples, receivers: Matrix, outputs: Coefficient
+) -> Callable[[Floats], tuple[Complex, ...]] | None:
+    """At samples outside: p_i(x) - e_x^T u_i, for the integral over the surface takes what is added to p_i alone."""
+    loads = [(i, j, load) for i, held in enumerate(space.case.load_cases) for j, load in enumerate(held.loads)]
+    waves = [(i, j, *_incident(space, load)) for i, j, load in loads if isinstance(load, IncidentField)]
+    if not waves:
+        return None
+    beyond = np.flatnonzero(samples.tet < 0)
+    rows = cache(lambda number: np.asarray(dense(receivers @ waves[number][2]().traces)))
+
+    def direct(f: Floats) -> tuple[Complex, ...]:
+        out = tuple(
+            np.zeros((len(f), len(samples.tet), len(held.loads)), dtype=np.complex128) for held in space.case.load_cases
+        )
+        chi = outputs(f)[:, beyond]
+        for number, (i, j, incident, region) in enumerate(waves):
+            k, rho = _k_rho(space.case, region, f)
+            own = incident().at(samples.points[beyond], f, k, rho)
+            taken = np.einsum("fsr,rm,fm->fs", chi, rows(number), incident().surface(f, k, rho), optimize=True)
+            out[i][:, beyond, j] = own - taken
+        return out
+
+    return direct
 
 
 def _outputs(space: Space, samples: Samples) -> tuple[Matrix, Coefficient | None]:
@@ -368,7 +408,9 @@ def _outputs(space: Space, samples: Samples) -> tuple[Matrix, Coefficient | None
         return rows, None
 
     def chi(f: Floats) -> Complex:
-        out = np.zeros((len(f), len(inside), rows.shape[0] + sum(l.rows.shape[0] for _, l in beyond)), dtype=np.complex128)
+        out = np.zeros(
+            (len(f), len(inside), rows.shape[0] + sum(listener.rows.shape[0] for _, listener in beyond)), dtype=np.complex128
+        )
         out[:, np.flatnonzero(inside), np.arange(rows.shape[0])] = 1.0
         at = rows.shape[0]
         for sample, (region, listener) in zip(np.flatnonzero(~inside), beyond, strict=True):
@@ -396,7 +438,7 @@ def _listener(space: Space, samples: Samples, sample: int) -> tuple[int, Listene
 
 def _wave_number(case: Case, region: int, f: Floats) -> Complex:
     """w/c (nf,) [1/m] with all losses."""
-    return np.asarray(2 * np.pi * f / damped(case.regions[region].medium, case.regions[region].damping, f)[1])
+    return _k_rho(case, region, f)[0]
 
 
 def _widened(build: Callable[[], Matrix], space: Space, axes: int) -> Matrix:
@@ -548,6 +590,8 @@ def _load_terms(space: Space, load: Load) -> list[LoadTerm]:
             return _wave_terms(space, load)
         case Monopole():
             return [_monopole_term(space, load)]
+        case IncidentField():
+            return [_incident_term(space, load)]
     raise CaseError(f"a load of kind '{load.kind_name}' cannot be assembled")  # pragma: no cover
 
 
@@ -649,6 +693,35 @@ def _wave_terms(space: Space, load: IncomingWave) -> list[LoadTerm]:
     return terms
 
 
+def _incident_term(space: Space, load: IncidentField) -> LoadTerm:
+    incident, region = _incident(space, load)
+    return LoadTerm(load.name, lambda f: incident().weights(f, *_k_rho(space.case, region, f)), lambda: incident().vectors)
+
+
+def _incident(space: Space, load: IncidentField) -> tuple[Callable[[], Incident], int]:
+    """A field from outside on the one surface that radiates, worked out when it is first asked for, and its region."""
+    if len(space.envelopes) != 1:
+        raise CaseError(
+            f"the load '{load.name}' comes from outside and needs one surface of kind 'radiating', but the case has "
+            f"{len(space.envelopes)}; wrap the model in one, or take the load out"
+        )
+    outer = space.envelopes[0]
+    exterior = Exterior(outer.envelope, space.size)
+    if isinstance(load, OutsideMonopole) and not exterior.beyond(np.array([load.position]))[0]:
+        raise CaseError(
+            f"the source '{load.name}' at {load.position} m does not lie beyond '{outer.name}'; expected a place outside of "
+            "it: move it, or make it a 'monopole' if it is inside"
+        )
+    k = _wave_number(space.case, outer.region, space.case.sweep.frequencies).real
+    return cache(partial(Incident.of, load, exterior, float(k.min()), float(k.max()))), outer.region
+
+
+def _k_rho(case: Case, region: int, f: Floats) -> tuple[Complex, Complex]:
+    """w/c (nf,) [1/m] and rho (nf,) of a region with all losses."""
+    rho, c = damped(case.regions[region].medium, case.regions[region].damping, f)
+    return np.asarray(2 * np.pi * f / c), np.asarray(rho)
+
+
 def _monopole_term(space: Space, load: Monopole) -> LoadTerm:
     point = np.array([load.position])
     tet, bary = space.geometry.locate(point)
@@ -656,7 +729,7 @@ def _monopole_term(space: Space, load: Monopole) -> LoadTerm:
         near = space.geometry.nearest_point(point[0])
         raise CaseError(
             f"the source '{load.name}' at {load.position} lies outside every region; the nearest point of the fluid is "
-            f"({near[0]:.4g}, {near[1]:.4g}, {near[2]:.4g})"
+            f"({near[0]:.4g}, {near[1]:.4g}, {near[2]:.4g}); a source beyond a surface that radiates is an 'outside_monopole'"
         )
 
     def psi(f: Floats) -> Complex:

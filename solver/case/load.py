@@ -104,6 +104,85 @@ class Monopole(Load):
         return cls("source", (0.3, 0.4, 0.25), 1e-3 + 0j)
 
 
+class IncidentField(Load):
+    """A field that comes from outside and meets a surface of kind `radiating`: what the model adds to it goes out again."""
+
+    label: str
+
+    @property
+    def name(self) -> str:
+        return self.label
+
+    def amplitude(self, f: Float, density: Complex) -> Complex:
+        """What multiplies `shape`, (nf,) [Pa], for a fluid of density (nf,)."""
+        raise NotImplementedError
+
+    def shape(self, points: Float, k: complex) -> tuple[Complex, Complex]:
+        """p / amplitude (q,) and its gradient (q, 3) [1/m] at points (q, 3), in a fluid without end."""
+        raise NotImplementedError
+
+    def delay(self, centre: Float) -> float:
+        """Path [m] at `centre`: the shape's phase there is e^{-ik delay}."""
+        raise NotImplementedError
+
+
+@kind("plane_wave")
+class PlaneWave(IncidentField):
+    """A plane wave from outside, p = P e^{-ik d.(x - x_0)}; a ground plane reflects it."""
+
+    label: str = quantity(help="name of the wave")
+    direction: tuple[float, float, float] = quantity(help="where the wave goes")
+    pressure: complex | Spectrum = quantity(help="complex peak pressure of the wave by itself", unit="Pa")
+    origin: tuple[float, float, float] = quantity(help="point where it has this pressure", unit="m", default=(0.0, 0.0, 0.0))
+
+    def validate(self) -> None:
+        if not any(self.direction):
+            raise FieldError("a plane wave's direction is (0, 0, 0); give the direction in which it travels")
+
+    def amplitude(self, f: Float, density: Complex) -> Complex:
+        return as_spectrum(self.pressure).at(f)
+
+    def shape(self, points: Float, k: complex) -> tuple[Complex, Complex]:
+        wave = np.exp(-1j * k * ((points - np.asarray(self.origin)) @ self._unit))
+        return wave, -1j * k * wave[:, None] * self._unit
+
+    def delay(self, centre: Float) -> float:
+        return float((centre - np.asarray(self.origin)) @ self._unit)
+
+    @property
+    def _unit(self) -> Float:
+        return np.asarray(np.asarray(self.direction) / np.linalg.norm(self.direction))
+
+    @classmethod
+    def example(cls) -> PlaneWave:
+        return cls("wave", (0.0, 0.0, 1.0), 1.0 + 0j)
+
+
+@kind("outside_monopole")
+class OutsideMonopole(IncidentField):
+    """Point source beyond a surface of kind `radiating`, p = i w rho Q e^{-ikr} / (4 pi r); a ground plane reflects it."""
+
+    label: str = quantity(help="name of the source")
+    position: tuple[float, float, float] = quantity(help="x, y, z", unit="m")
+    volume_velocity: complex | Spectrum = quantity(help="complex peak volume velocity", unit="m3/s")
+
+    def amplitude(self, f: Float, density: Complex) -> Complex:
+        return np.asarray(2j * np.pi * f * density * as_spectrum(self.volume_velocity).at(f))
+
+    def shape(self, points: Float, k: complex) -> tuple[Complex, Complex]:
+        away = points - np.asarray(self.position)
+        r = np.linalg.norm(away, axis=1)
+        wave = np.exp(-1j * k * r) / (4 * np.pi * r)
+        return wave, (-(1j * k + 1.0 / r) * wave / r)[:, None] * away
+
+    def delay(self, centre: Float) -> float:
+        return float(np.linalg.norm(centre - np.asarray(self.position)))
+
+    @classmethod
+    def example(cls) -> OutsideMonopole:
+        return cls("distant_source", (2.0, 0.0, 1.0), 1e-3 + 0j)
+
+
 class Combination(Declared):
     """Family of rules by which the loads of a load case act together."""
 

@@ -169,7 +169,8 @@ class Geometry:
     def _newton(self, tet: Ints, points: Floats, start: Floats) -> Floats:
         """Solve x(lambda) = point from a start that may be far outside; NaN where it does not converge."""
         bary = np.clip(start, -0.5, 1.5)
-        bary /= bary.sum(axis=1, keepdims=True)
+        total = bary.sum(axis=1, keepdims=True)
+        bary = np.where(total > 0, bary / np.where(total > 0, total, 1.0), 0.25)
         size = self.edge_lengths[tet].max(axis=1)
         with np.errstate(all="ignore"):
             for _ in range(_NEWTON_STEPS):

@@ -7,14 +7,14 @@ import pytest
 
 import meshes
 from cases import RHO_C, case_of
-from murmesh.solver.case.boundary import Radiating, Rigid, Vibrating
-from murmesh.solver.case.load import SurfaceVelocity
+from murmesh.solver.case.boundary import Pressure, Radiating, Rigid, Vibrating
+from murmesh.solver.case.load import IncidentField, Monopole, OutsideMonopole, PlaneWave, SurfaceVelocity
 from murmesh.solver.case.model import Case
 from murmesh.solver.case.motion import Uniform
 from murmesh.solver.errors import CaseError, FieldError, MeshError
 from murmesh.solver.result import Result, read_result, write_result
 from murmesh.solver.sweep import solve
-from reading import read_csv_reference
+from reading import read_csv_reference, read_json_reference
 
 RADIUS, SPEED = 0.25, 0.01
 PULSATING = [SurfaceVelocity("inner", Uniform(SPEED + 0j))]
@@ -137,3 +137,60 @@ def test_receivers_in_the_body_and_under_the_ground_are_refused() -> None:
 def test_a_ground_without_normal_is_refused() -> None:
     with pytest.raises(FieldError, match="normal is \\(0, 0, 0\\)"):
         Radiating(ground="rigid", ground_normal=(0.0, 0.0, 0.0))
+
+
+def test_a_wave_around_a_rigid_sphere() -> None:
+    """B04 at ka = 1 and 2: total pressure outside, within 1 % of the wave."""
+    a = 0.25
+    for case in [c for c in read_json_reference("B04_rigid_sphere_scattering.json")["cases"] if c["ka"] <= 2.0]:
+        places = [row for row in case["field"] if row["r_over_a"] > 1.0][::2]
+        angle = np.radians([row["theta_deg"] for row in places])
+        r = a * np.array([row["r_over_a"] for row in places])
+        points = {f"p{i}": (r[i] * np.sin(t), 0.0, r[i] * np.cos(t)) for i, t in enumerate(angle)}
+        wave = PlaneWave("wave", (0.0, 0.0, 2.0), 1.0 + 0j)
+        mesh = meshes.shell(2, (a, 0.3))
+        f = [case["ka"] / a * 343.0 / (2 * np.pi)]
+        result = solve(case_of(mesh, {"outer": Radiating()}, [wave], f, points, order=4))
+        published = np.array([complex(*row["p_total"]) for row in places])
+        found = result.load_cases[0].contributions[0, :, 0]
+        assert np.abs(found - published).max() < 0.01
+        assert result.load_cases[0].closure.max() < 1e-9
+        assert np.abs(result.imbalance()).max() < 1e-6 or abs(result.load_cases[0].supplied.sum()) < 1e-9
+
+
+WAVES = [
+    PlaneWave("wave", (1.0, 0.5, -2.0), 2.0 + 1.0j, (0.1, 0.0, 0.3)),
+    OutsideMonopole("distant", (0.4, 0.2, 0.5), 1e-3 + 0j),
+]
+
+
+@pytest.mark.parametrize("ground", ["none", "rigid", "pressure_release"])
+@pytest.mark.parametrize("wave", WAVES, ids=lambda w: w.kind_name)
+def test_where_nothing_is_in_its_way_a_field_from_outside_stays_itself(wave: IncidentField, ground: str) -> None:
+    """In a ball, or a dome with the reflection by its ground: inside and outside, over a band by the reduced model."""
+    mesh = meshes.ball(1, 0.2) if ground == "none" else meshes.dome(2, (0.0, 0.1, 0.2))
+    outer = "sphere" if ground == "none" else "outer"
+    floor = Pressure() if ground == "pressure_release" else Rigid()
+    kinds = {name: Radiating(ground=ground) if name == outer else floor for name in mesh.surfaces}
+    points = {"inside": (0.02, 0.05, 0.1), "outside": (0.1, -0.1, 0.4)}
+    f = np.linspace(200.0, 600.0, 3)
+    result = solve(case_of(mesh, kinds, [wave], f, points, order=5))
+    x, sign = np.array(list(points.values())), {"none": 0.0, "rigid": 1.0, "pressure_release": -1.0}[ground]
+    exact = []
+    for each in f:
+        k = 2 * np.pi * each / 343.0
+        scale = wave.amplitude(np.array([each]), np.array([1.21 + 0j]))[0]
+        exact.append(scale * (wave.shape(x, k)[0] + sign * wave.shape(x * [1, 1, -1], k)[0]))
+    found = result.load_cases[0].contributions[..., 0]
+    assert np.abs(found - exact).max() < 5e-3 * np.abs(exact).max()
+
+
+def test_sources_from_outside_are_declared_and_lie_outside() -> None:
+    mesh, kinds = meshes.ball(1, 0.2), {"sphere": Radiating()}
+    place = {"in": (0.0, 0.0, 0.1)}
+    with pytest.raises(CaseError, match=r"does not lie beyond 'sphere'.*make it a 'monopole'"):
+        solve(case_of(mesh, kinds, [OutsideMonopole("s", (0.0, 0.0, 0.1), 1e-3)], [200.0], place, order=2))
+    with pytest.raises(CaseError, match="a source beyond a surface that radiates is an 'outside_monopole'"):
+        solve(case_of(mesh, kinds, [Monopole("s", (0.0, 0.0, 0.5), 1e-3)], [200.0], place, order=2))
+    with pytest.raises(CaseError, match=r"needs one surface of kind 'radiating'.* has 0"):
+        solve(case_of(mesh, {}, [WAVES[0]], [200.0], place, order=2))

@@ -18,11 +18,12 @@ from murmesh.solver.topology import Topology
 from reading import read_csv_reference
 
 
-
 def rows(name: str) -> list[dict[str, str]]:
     """The rows of a reference, entries as text."""
     columns = read_csv_reference(name)
-    return [{key: str(value) for key, value in zip(columns, entry, strict=True)} for entry in zip(*columns.values(), strict=True)]
+    return [
+        {key: str(value) for key, value in zip(columns, entry, strict=True)} for entry in zip(*columns.values(), strict=True)
+    ]
 
 
 I01 = rows("I01_infinite_element_radial_exactness.csv")
@@ -81,7 +82,9 @@ def test_radial_functions_reach_the_published_errors(row: dict[str, str]) -> Non
 
 def test_jacobi_functions_keep_the_condition_number_low() -> None:
     """I02's case (n = 4, ka = 10): monomials 1.5e10 at eight functions, shifted Legendre 1.3e3; these below 80."""
-    published = {r["basis"]: float(r["cond"]) for r in rows("I02_infinite_element_condition_numbers.csv") if float(r["m"]) == 8}
+    published = {
+        r["basis"]: float(r["cond"]) for r in rows("I02_infinite_element_condition_numbers.csv") if float(r["m"]) == 8
+    }
     assert published["monomial"] > 1e9
     for count in (4, 8, 12, 20):
         assert float(scaled_condition(sphere_radial_matrix(count, 4, 10.0))) < 80.0
