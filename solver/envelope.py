@@ -253,14 +253,14 @@ def _require_star_shape(found: Envelope) -> None:
     close = min(gap, flat if radius.min() < 0.5 * found.largest_radius else gap)
     if close < _ON_PLANE * found.largest_radius:
         raise MeshError(
-            f"the centre {_words(found.centre)} m lies on the surface that radiates; expected a point inside, from which all of "
-            "the surface is seen: give another centre"
+            f"the centre {_words(found.centre)} m lies on the surface that radiates; expected a point inside, from which "
+            "all of the surface is seen: give another centre"
         )
     bad = np.count_nonzero((cosine <= _GRAZING).any(axis=1))
     raise MeshError(
-        f"the surface that radiates is not star-shaped about {_words(found.centre)} m: near {_words(at.points[worst])} m a ray "
-        f"from there grazes it or leaves it from behind ({bad} of {len(cosine)} triangles); give a centre from which all of it "
-        "is seen, or wrap the model in a convex surface"
+        f"the surface that radiates is not star-shaped about {_words(found.centre)} m: near {_words(at.points[worst])} m a "
+        f"ray from there grazes it or leaves it from behind ({bad} of {len(cosine)} triangles); give a centre from which all "
+        "of it is seen, or wrap the model in a convex surface"
     )
 
 
@@ -274,30 +274,31 @@ def _require_closed(found: Envelope) -> None:
     if found.ground is None:
         if len(ends):
             raise MeshError(
-                f"the surface that radiates is open along {len(ends)} edges, one at {_words(ends[0].mean(axis=0))} m; expected a "
-                "closed surface: add the missing surfaces to the kind, or give the ground plane that closes a dome"
+                f"the surface that radiates is open along {len(ends)} edges, one at {_words(ends[0].mean(axis=0))} m; "
+                "expected a closed surface: add the missing surfaces to the kind, or give the ground plane that closes a dome"
             )
         return
     n = np.asarray(found.ground.normal)
     size = found.largest_radius
     if not len(ends):
         raise MeshError(
-            "the surface that radiates is closed, but a ground plane is given; expected a dome that ends on the plane: leave out "
-            "the ground plane, or take the surfaces on it out of the kind"
+            "the surface that radiates is closed, but a ground plane is given; expected a dome that ends on the plane: leave "
+            "out the ground plane, or take the surfaces on it out of the kind"
         )
     off = np.abs((ends - found.centre) @ n).max(axis=1)
     if off.max() > _ON_PLANE * size:
         worst = ends[int(np.argmax(off))].mean(axis=0)
         raise MeshError(
-            f"the ground plane through the centre {_words(found.centre)} m does not hold the rim of the dome: at {_words(worst)} m "
-            f"the rim is {off.max():.3g} m off the plane; put the centre onto the plane of the rim, and check the normal"
+            f"the ground plane through the centre {_words(found.centre)} m does not hold the rim of the dome: at "
+            f"{_words(worst)} m the rim is {off.max():.3g} m off the plane; put the centre onto the plane of the rim, and "
+            "check the normal"
         )
     points = found.geometry.nodes[_face_nodes(found.geometry, found.tet, found.face)]
     depth = (points - found.centre) @ n
     if depth.min() < -_ON_PLANE * size:
         raise MeshError(
-            f"the dome reaches {-depth.min():.3g} m below its ground plane, at {_words(points[int(np.argmin(depth))])} m; expected "
-            "it on the side that the normal looks to: turn the normal round"
+            f"the dome reaches {-depth.min():.3g} m below its ground plane, at {_words(points[int(np.argmin(depth))])} m; "
+            "expected it on the side that the normal looks to: turn the normal round"
         )
 
 

@@ -101,7 +101,7 @@ class Exterior:
         free = ~env.held
         projected = np.zeros((len(env.trace), len(x)), dtype=np.complex128)
         projected[free] = self._project(traces[:, free].T @ (g * weights).T)
-        rows = np.asarray((self.operator(k).T[:, env.trace] @ projected).T)
+        rows = np.asarray((self.operator(k).T[:, env.trace] @ projected).T, dtype=np.complex128)
         rows[:, env.trace] += double
         return rows
 

@@ -3,6 +3,7 @@
     A(w) p = f(w),   A(w) = sum_j phi_j(w) A_j,   f(w) = sum_l F_l psi_l(w),   p_r = e_r^T p
 
     A(w) = sum_r [ K_r / rho_r - w^2 M_r / (rho_r c_r^2) ] + i w sum_s Y_s B_s     (all A_j real and symmetric)
+           + sum_e (1/rho) [ K_e + i (w/c) C_e - (w/c)^2 M_e ]         (infinite elements: real, K_e and C_e unsymmetric)
     f(w) = -i w sum_s integral q v_s dS + i w Q q(x_Q) + 2 i w Y_port p_in integral q dS
 
 Coefficients belong to media, boundary kinds and loads. Prescribed pressure is a constraint p = P q + g(w) on the sum.
