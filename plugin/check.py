@@ -21,6 +21,7 @@ RULES: tuple[Callable[[Scene], Iterable[Finding]], ...] = (
     shape.placement,
     shape.listing,
     shape.outside,
+    shape.radiation,
     shape.separate_parts,
     acoustics.resolution,
     acoustics.losses,

@@ -12,7 +12,7 @@ from murmesh.plugin.findings.scene import Scene
 from murmesh.plugin.mesh_source import LARGEST, SMALLEST, TaggedMesh, cell_keys
 from murmesh.plugin.skin import Skin
 from murmesh.solver.case.boundary import Boundary
-from murmesh.solver.errors import CaseError
+from murmesh.solver.errors import CaseError, MeshError
 
 Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
@@ -218,3 +218,27 @@ def outside(scene: Scene) -> Iterator[Finding]:
                 f"nearest point of the fluid is ({near[0]:.4g}, {near[1]:.4g}, {near[2]:.4g}) m"
             )
             yield error("source_outside", source.name, text, "move it into the air (metres)")
+
+
+def radiation(scene: Scene) -> Iterator[Finding]:
+    """Surfaces that radiate but are open, not star-shaped or off their ground, and receivers that are not beyond them."""
+    from murmesh.solver.exterior import Exterior
+    from murmesh.solver.receiver_points import locate_receivers, not_in_fluid
+    from murmesh.solver.space import discretise
+
+    names = [surface.name for surface in scene.case.surfaces if surface.boundary.radiates]
+    if not names:
+        return
+    try:
+        space = discretise(scene.case, order=1)
+        outside = [Exterior(outer.envelope, space.size) for outer in space.envelopes]
+    except MeshError as problem:
+        cure = "close the surface, or give another centre or ground plane: all of it must be seen from its centre"
+        yield error("radiating_surface", names[0], str(problem), cure)
+        return
+    samples = locate_receivers(scene.case, space.geometry)
+    for sample in np.flatnonzero(samples.tet < 0):
+        receiver, point = scene.case.receivers[samples.receiver[sample]], samples.points[sample]
+        if not any(each.beyond(point[None])[0] for each in outside):
+            cure = "move it into the air or beyond the surface that radiates, above its ground"
+            yield error("receiver_outside", receiver.name, str(not_in_fluid(receiver, point, space.geometry)), cure)

@@ -11,7 +11,8 @@ from typing import Any
 import numpy as np
 import pytest
 
-from meshes import TestMesh, box, cylinder, faces_where, quadratic
+from cases import case_of
+from meshes import TestMesh, box, cylinder, faces_where, quadratic, shell
 from murmesh.plugin import check as check_module
 from murmesh.plugin.check import Finding, as_json, check, check_case, render
 from murmesh.plugin.findings import shape
@@ -19,7 +20,17 @@ from murmesh.plugin.findings.acoustics import port_shape
 from murmesh.plugin.job import Job, Rule
 from murmesh.plugin.mesh_source import TaggedMesh, tagged_mesh
 from murmesh.plugin.model import build_case
-from murmesh.solver.case.boundary import Characteristic, Impedance, Port, Pressure, Rigid, Sheet, Vibrating, VibratingTreated
+from murmesh.solver.case.boundary import (
+    Characteristic,
+    Impedance,
+    Port,
+    Pressure,
+    Radiating,
+    Rigid,
+    Sheet,
+    Vibrating,
+    VibratingTreated,
+)
 from murmesh.solver.case.catalogue import Treatment
 from murmesh.solver.case.load import CrossSpectrum, Incoherent, LoadCase, SurfaceVelocity
 from murmesh.solver.case.medium import Air, GivenFluid, LossFactor, NoDamping, PorousMedium, ReverberationTime, WallAbsorption
@@ -537,3 +548,28 @@ def test_check_changes_nothing() -> None:
     text = made.to_json()
     check(made, mesh)
     assert made.to_json() == text
+
+
+def _errors_of_a_shell(kind: Radiating, receiver: tuple[float, float, float]) -> list[tuple[str, str]]:
+    mesh = shell(2, (0.25, 0.3))
+    load = SurfaceVelocity("inner", Uniform(0.01 + 0j))
+    case = case_of(mesh, {"inner": Vibrating(), "outer": kind}, [load], [200.0], {"ear": receiver}, order=3)
+    return [(found.code, found.message) for found in check_case(case) if found.severity == "error"]
+
+
+def test_a_sound_case_that_radiates_has_no_error() -> None:
+    assert not _errors_of_a_shell(Radiating(), (0.0, 0.0, 0.27))
+    assert not _errors_of_a_shell(Radiating(), (0.0, 2.0, 0.0))
+
+
+def test_a_receiver_in_the_body_is_an_error() -> None:
+    [(code, message)] = _errors_of_a_shell(Radiating(), (0.0, 0.1, 0.0))
+    assert code == "receiver_outside"
+    assert "'ear' lies outside every region" in message
+
+
+def test_a_centre_from_which_not_all_is_seen_is_an_error() -> None:
+    [(code, message)] = _errors_of_a_shell(Radiating((0.0, 0.0, 1.0)), (0.0, 2.0, 0.0))
+    assert code == "radiating_surface"
+    assert "surfaces/outer: " in message
+    assert "not star-shaped about (0, 0, 1) m" in message
