@@ -1,4 +1,4 @@
-"""Treatments: what can be applied to a panel, what it weighs and what it costs."""
+"""Treatments: what can be applied to a panel, what it weighs and costs; and the limits of a choice among them."""
 
 from __future__ import annotations
 
@@ -30,3 +30,22 @@ class Treatment(Declared):
     @classmethod
     def example(cls) -> Treatment:
         return cls("foam", 1.5, 12.0, 0.05, Layers.example(), "auto", 3.0, ("roof", "door_*"))
+
+
+@record
+class Limits(Declared):
+    """What a choice of treatments must keep to; at most one treatment goes on a panel."""
+
+    mass: float | None = quantity(help="largest mass added", unit="kg", low=0.0, default=None)
+    cost: float | None = quantity(help="largest cost", unit="EUR", low=0.0, default=None)
+    panels: int | None = quantity(help="largest number of treated panels", low=1, default=None)
+    thickness: float | None = quantity(help="largest thickness of a treatment", unit="m", low=0.0, default=None)
+    exclude: tuple[str, ...] = quantity(help="panels that stay as they are; names or globs", default=())
+    force: tuple[str, ...] = quantity(help="panels that must be treated; names", default=())
+    wanted_gain: float | None = quantity(
+        help="gain that is enough: the least cost that reaches it is looked for", unit="dB", positive=True, default=None
+    )
+
+    @classmethod
+    def example(cls) -> Limits:
+        return cls(6.0, 90.0, 3, 0.06, ("roof",), ("console",), 2.0)
