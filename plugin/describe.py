@@ -54,9 +54,10 @@ def number(value: float) -> str:
     return f"{value:.1f}" if np.isfinite(value) else "–"
 
 
-def signed(value: float, unit: str = "") -> str:
+def signed(value: float, unit: str = "", digits: int = 1) -> str:
     """A change or share with its sign, to 0.1; what rounds to nothing carries no sign."""
-    text = "0.0" if abs(value) < 0.05 else f"{value:+.1f}".replace("-", "−")
+    still = abs(value) < 0.5 * 10.0**-digits
+    text = f"{0:.{digits}f}" if still else f"{value:+.{digits}f}".replace("-", "−")
     return (text if np.isfinite(value) else "–") + unit
 
 

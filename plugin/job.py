@@ -23,7 +23,7 @@ import numpy as np
 from murmesh.plugin.gmsh_session import CAD
 from murmesh.plugin.mesh_source import UNITS, TaggedMesh, element_size, read_mesh
 from murmesh.solver.case.boundary import Boundary
-from murmesh.solver.case.catalogue import Treatment
+from murmesh.solver.case.catalogue import Limits, Treatment
 from murmesh.solver.case.fields import Declared, quantity, record
 from murmesh.solver.case.load import (
     Coherent,
@@ -142,6 +142,7 @@ class Job(Declared):
     receivers: tuple[Receiver, ...] = quantity(help="microphones and ears", default=())
     sweep: Sweep | None = quantity(help="frequencies", default=None)
     catalogue: tuple[Treatment, ...] = quantity(help="treatments to choose from", default=())
+    limits: Limits = quantity(help="what a choice of treatments must keep to", default=Limits())
 
     def validate(self) -> None:
         for what in ("regions", "surfaces", "receivers"):
@@ -220,6 +221,10 @@ class Job(Declared):
     def treatment(self, treatment: Treatment) -> Job:
         """Add a treatment to the catalogue."""
         return self.with_(catalogue=(*self.catalogue, treatment))
+
+    def with_limits(self, **options: Any) -> Job:
+        """Say what a choice of treatments must keep to; options of `Limits`."""
+        return self.with_(limits=self.limits.with_(**options))
 
     # -- what follows from it ------------------------------------------------------------------------------------------
 

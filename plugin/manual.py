@@ -47,6 +47,7 @@ RECORDS: dict[str, type[Declared]] = {
     "/load_cases/NAME": load.LoadCase,
     "/sweep": model.Sweep,
     "/catalogue/NAME": catalogue.Treatment,
+    "/limits": catalogue.Limits,
 }
 SCALARS: dict[type, str] = {str: "text", bool: "true or false", int: "whole number", float: "number", complex: "complex"}
 _WIDTH = 118

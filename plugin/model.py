@@ -37,7 +37,17 @@ def case_of(job: Job, resolved: Resolved) -> Case:
     number[used] = np.arange(len(used))
     mesh = Mesh(skin.nodes[used], number[skin.tets], resolved.tet_region, number[triangles], resolved.triangle_surface[named])
     loads = tuple(_expanded(load_case, resolved.surfaces) for load_case in job.all_load_cases)
-    return Case(mesh, resolved.regions, resolved.surfaces, job.require_sweep(), loads, job.receivers, job.catalogue, job.title)
+    return Case(
+        mesh,
+        resolved.regions,
+        resolved.surfaces,
+        job.require_sweep(),
+        loads,
+        job.receivers,
+        job.catalogue,
+        job.limits,
+        title=job.title,
+    )
 
 
 def case_from_gmsh(job: Job) -> Case:

@@ -54,6 +54,8 @@ LARGEST_PART, SMALL = 0.5, 600
 """Part of the system's unknowns that a model may have; models below `SMALL` are cheap in any case."""
 SCANNED_LINES = 60
 """Lines at which the estimate is looked at while the basis grows."""
+SMALLEST_ESTIMATE = 1e-5
+"""Estimates [dB] below which the ratio to the true deviation tells of rounding only."""
 DB = 20 / np.log(10)
 
 
@@ -245,18 +247,30 @@ def reduce(
     model = Reduction.start(full.system, samples)
     for step in steps:
         model = model.with_step(step)
-    while not _agreed(model, tolerance) and _worth_growing(model, len(lines)):
-        step = _next_step(full, model, lines, tolerance)
+    doubted = -1  # a line to look at although the last ones agreed
+    while True:
+        if _agreed(model, tolerance):
+            found, estimate = survey(model, lines)
+            if estimate.max() <= tolerance:
+                return model, Certificate(tolerance, True, _checks(model), estimate, model.size), found
+            doubted = _most_doubtful(model, estimate)
+        if not _worth_growing(model, len(lines)):
+            return model, Certificate(tolerance, False, _checks(model), np.full(len(lines), np.inf), model.size), []
+        step = _next_step(full, model, lines, tolerance, doubted)
         step = replace(step, line=lighten(lines[step.index], step.line))
         keep(len(model.steps), step)
         model = model.with_step(step)
         report(model)
-    checks = tuple(step.check for step in model.steps)
-    if not _agreed(model, tolerance):
-        return model, Certificate(tolerance, False, checks, np.full(len(lines), np.inf), model.size), []
-    found, estimate = survey(model, lines)
-    done = bool(estimate.max() <= tolerance)
-    return model, Certificate(tolerance, done, checks, estimate, model.size), found if done else []
+
+
+def _checks(model: Reduction) -> tuple[Check, ...]:
+    return tuple(step.check for step in model.steps)
+
+
+def _most_doubtful(model: Reduction, estimate: Floats) -> int:
+    """The line with the worst estimate among those not factorised yet."""
+    unseen = np.setdiff1d(np.arange(len(estimate)), [step.index for step in model.steps])
+    return int(unseen[np.argmax(estimate[unseen])]) if len(unseen) else -1
 
 
 def _worth_growing(model: Reduction, lines: int) -> bool:
@@ -274,11 +288,11 @@ def _agreed(model: Reduction, tolerance: float) -> bool:
     return len(model.steps) >= len(FIRST_LINES) + PASSES - 1 and all(step.check.agrees(tolerance) for step in last)
 
 
-def _next_step(full: Engine, model: Reduction, lines: list[Values], tolerance: float) -> Step:
-    index = _next_line(model, lines, tolerance)
+def _next_step(full: Engine, model: Reduction, lines: list[Values], tolerance: float, doubted: int) -> Step:
+    index = doubted if doubted >= 0 else _next_line(model, lines, tolerance)
     line, factor = full.solved(lines[index])
     check = _check(model, lines[index], line)
-    grows = len(model.steps) < len(FIRST_LINES) or not check.agrees(tolerance)
+    grows = doubted >= 0 or len(model.steps) < len(FIRST_LINES) or not check.agrees(tolerance)
     columns = _new_columns(full, model, line, factor, _frequencies(lines)) if grows else np.zeros((full.system.size, 0))
     return Step(index, line, columns, replace(check, grew=grows))
 
@@ -426,8 +440,8 @@ def survey(model: Reduction, lines: list[Values]) -> tuple[list[Line], Floats]:
 
 def _scale(model: Reduction) -> float:
     """Worst ratio of true deviation to raw estimate at the checked lines; 1 while there is none."""
-    known = [s.check for s in model.steps if np.isfinite(s.check.estimate) and s.check.estimate > 0]
-    return max([1.0, *(c.deviation / c.estimate for c in known)])
+    known = [s.check for s in model.steps if np.isfinite(s.check.estimate)]
+    return max([1.0, *(c.deviation / max(c.estimate, SMALLEST_ESTIMATE) for c in known)])
 
 
 def _raw_estimate(model: Reduction, values: Values, line: Line) -> Floats:

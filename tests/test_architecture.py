@@ -60,6 +60,7 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("plugin.model", "plugin.findings"),
     ("plugin.check",),
     ("plugin.load", "plugin.describe", "plugin.fields", "plugin.sampling"),
+    ("plugin.study",),
     ("plugin.pictures", "plugin.export"),
     ("plugin.gmsh_views",),
     ("plugin.script",),

@@ -11,6 +11,7 @@ from pathlib import Path
 from murmesh.plugin.check import check_case, render
 from murmesh.plugin.cli import levels as levels_command
 from murmesh.plugin.cli import rank as rank_command
+from murmesh.plugin.cli import treat as treat_command
 from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, register, say, show
 from murmesh.plugin.cli.draw import draw
 from murmesh.plugin.cli.export import export
@@ -19,6 +20,7 @@ from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.load import load_case_file
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.probe import gmsh_missing
+from murmesh.plugin.study import study
 from murmesh.plugin.summary import CAUTIONS, all_levels, trust
 from murmesh.solver.case.hdf5 import read_case, write_case
 from murmesh.solver.case.model import Case
@@ -44,6 +46,7 @@ def run(args: argparse.Namespace) -> int:
     result = _solve(case, folder)
     _answers(result)
     left_out += _files(result, folder)
+    left_out += _treatment(result, folder)
     say(f"finished in {time.monotonic() - started:.0f} s; everything is in {folder}")
     if left_out:
         say("murmesh: the demonstration is complete but for what this machine cannot do:")
@@ -63,11 +66,11 @@ def _case(folder: Path) -> tuple[Case, list[str]]:
     job = _copy_job(folder)
     missing = gmsh_missing()
     if missing:
-        say("1/5  gmsh cannot run here: taking the case that ships with murmesh")
+        say("1/6  gmsh cannot run here: taking the case that ships with murmesh")
         with as_file(files("murmesh.sample_geometry") / SHIPPED) as shipped:
             case = read_case(shipped)
     else:
-        say(f"1/5  meshing and tagging the cab ({job})")
+        say(f"1/6  meshing and tagging the cab ({job})")
         case = load_case_file(job)
     say(render(check_case(case)))
     write_case(case, folder / "cab.h5")
@@ -84,7 +87,7 @@ def _copy_job(folder: Path) -> Path:
 
 def _solve(case: Case, folder: Path) -> Result:
     lines = case.sweep.frequencies
-    say(f"2/5  solving {len(lines)} lines, {lines[0]:g} .. {lines[-1]:g} Hz, {len(case.load_cases)} load cases")
+    say(f"2/6  solving {len(lines)} lines, {lines[0]:g} .. {lines[-1]:g} Hz, {len(case.load_cases)} load cases")
     journal = Journal.at(folder / "cab_result.h5")
     result = solve(case, journal, report=show)
     write_result(result, folder / "cab_result.h5")
@@ -94,7 +97,7 @@ def _solve(case: Case, folder: Path) -> Result:
 
 
 def _answers(result: Result) -> None:
-    say("3/5  levels and rankings")
+    say("3/6  levels and rankings")
     answer(levels_command.text(all_levels(result)))
     answer(f"\n{trust(result)}")
     for held in result.load_cases:
@@ -104,9 +107,9 @@ def _answers(result: Result) -> None:
 
 
 def _files(result: Result, folder: Path) -> list[str]:
-    say("4/5  tables and VTK files")
-    export(result, folder / "files", list(EXPORTS))
-    say("5/5  pictures")
+    say("4/6  tables and VTK files")
+    export(result, folder / "files", [product for product in EXPORTS if product.source == "result"])
+    say("5/6  pictures")
     pictures = [picture for picture in PICTURES if picture.source == "result"]
     first, *others = [held.name for held in result.load_cases]
     left_out = draw(result, folder / "pictures", pictures, load_case=first)
@@ -116,10 +119,19 @@ def _files(result: Result, folder: Path) -> list[str]:
     return [f"pictures: {', '.join(left_out)} (the line that cures it stands above)"] if left_out else []
 
 
+def _treatment(result: Result, folder: Path) -> list[str]:
+    """Which trim part to treat, with what, for how many dB, within the limits of the job."""
+    say("6/6  treatments: two rankings, a choice within limits, and its verification")
+    found = study(result, report=lambda words: say(f"     {words}"))
+    answer(treat_command.text(found))
+    status = treat_command.products(found, folder / "treatment")
+    return ["treatment: one picture (the line that cures it stands above)"] if status == CANNOT else []
+
+
 register(
     Command(
         "demo",
-        "Run the demonstration: an invented cab with 14 panels, from geometry to levels, rankings and pictures.",
+        "Run the demonstration: an invented cab with 14 panels, from geometry to levels, rankings and a verified choice of treatments.",
         "  murmesh demo cab_demo",
         arguments,
         run,

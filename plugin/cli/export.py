@@ -12,14 +12,14 @@ from murmesh.solver.result import Result, read_result
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:
-    known = ", ".join(product.name for product in EXPORTS)
+    known = ", ".join(product.name for product in EXPORTS if product.source == "result")
     product_arguments(parser, "folder for the files")
     parser.add_argument("--format", action="append", default=[], help=f"one of: {known}; repeat for several (default: all)")
 
 
 def run(args: argparse.Namespace) -> int:
     result = read_result(args.result)
-    formats = [EXPORTS[name] for name in args.format] or list(EXPORTS)
+    formats = [EXPORTS[name] for name in args.format] or [product for product in EXPORTS if product.source == "result"]
     export(result, Path(args.folder), formats, **product_options(args))
     return DONE
 

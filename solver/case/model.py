@@ -14,7 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from murmesh.solver.case.boundary import Boundary, Sheet
-from murmesh.solver.case.catalogue import Treatment
+from murmesh.solver.case.catalogue import Limits, Treatment
 from murmesh.solver.case.fields import Declared, quantity, record, to_tree
 from murmesh.solver.case.load import IncomingWave, LoadCase, Monopole, SurfacePressure, SurfaceVelocity
 from murmesh.solver.case.medium import Damping, Medium, NoDamping
@@ -154,6 +154,7 @@ class Case(Declared):
     load_cases: tuple[LoadCase, ...] = quantity(help="operating states", default=())
     receivers: tuple[Receiver, ...] = quantity(help="microphones and ears", default=())
     catalogue: tuple[Treatment, ...] = quantity(help="treatments to choose from", default=())
+    limits: Limits = quantity(help="what a choice of treatments must keep to", default=Limits())
     title: str = quantity(help="title of the case", default="")
 
     def validate(self) -> None:

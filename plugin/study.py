@@ -1,0 +1,204 @@
+"""The treatment study of a result: what quietening and what treating every panel would bring, and the choice, verified.
+
+Two rankings that are never mixed. *Quieten*: the panel's velocity lowered by `QUIETER` dB, as a stiffener or an isolated mount
+might. *Treat*: each treatment of the catalogue on each panel it may go on. The top contributor is rarely where an absorber
+belongs, so the second ranking is a new solution for every entry.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from murmesh.plugin.files import written
+from murmesh.plugin.summary import CAUTIONS
+from murmesh.solver.case.catalogue import Limits, Treatment
+from murmesh.solver.case.model import Case
+from murmesh.solver.choice import Candidate, Choice, choose
+from murmesh.solver.contribution import rank
+from murmesh.solver.levels import level
+from murmesh.solver.result import Result
+from murmesh.solver.treatment import Goal, Option, Verification, WhatIf, verified
+
+Floats = npt.NDArray[np.float64]
+QUIETER = 6.0
+"""dB by which the ranking *quieten* lowers the velocity of a panel."""
+LOUDER = -0.005
+"""Gain [dB] below which a measure is marked as making it louder."""
+VERIFIED = 3
+"""How many of the best sets are solved again in full."""
+
+
+@dataclass(frozen=True)
+class Measure:
+    """One entry of a ranking: gain [dB], mass [kg] and cost [EUR] (0 for quietening, whose price nobody has given)."""
+
+    name: str
+    panel: str
+    gain: float
+    mass: float = 0.0
+    cost: float = 0.0
+
+    @property
+    def louder(self) -> bool:
+        """Whether it makes the goal louder."""
+        return self.gain < LOUDER
+
+
+@dataclass(frozen=True, eq=False)
+class Study:
+    """Baseline level [dB], both rankings best first, the choice, its verification, and what is needed for pictures."""
+
+    result: Result
+    whatif: WhatIf
+    goal: Goal
+    level: float
+    quieten: tuple[Measure, ...]
+    treat: tuple[Measure, ...]
+    limits: Limits
+    choice: Choice
+    verified: tuple[Verification, ...]
+    top_contributor: str
+
+    @property
+    def best(self) -> Candidate:
+        """The choice."""
+        return self.choice.candidates[0]
+
+    def used(self, candidate: Candidate) -> tuple[Option, ...]:
+        """The options of a candidate."""
+        return tuple(self.whatif.options[i] for i in candidate.chosen)
+
+    @property
+    def words(self) -> str:
+        """Whether the top contributor is where the absorber goes."""
+        absorbers = {t.name for t in self.result.case.catalogue if t.wall is not None}
+        treated = [option.panel for option in self.used(self.best) if option.treatment in absorbers]
+        if not treated:
+            return f"The top contributor is {self.top_contributor}; no absorber is chosen."
+        where = "an absorber goes there" if self.top_contributor in treated else f"absorbers go on {', '.join(treated)}"
+        return f"The top contributor is {self.top_contributor}; {where}."
+
+
+def study(
+    result: Result,
+    goal: Goal = Goal(),  # noqa: B008 - frozen
+    limits: Limits | None = None,
+    *,
+    verify: bool = True,
+    report: Callable[[str], None] = lambda words: None,
+) -> Study:
+    """Rank, choose within `limits` (None: those of the case) and verify.
+
+    Raises: ResultError without a reduced model, CaseError where nothing can be chosen, SolveError where a verified gain
+    disagrees with the prediction.
+    """
+    whatif = WhatIf.build(result, report=report)
+    report(f"{len(whatif.options)} options")
+    treat = [
+        Measure(option.name, option.panel, whatif.gain((i,), goal), option.mass, option.cost)
+        for i, option in enumerate(whatif.options)
+    ]
+    quieten = [_quietened(whatif, goal, panel) for panel in result.case.panels]
+    kept = limits or result.case.limits
+    choice = choose(whatif.options, kept, lambda chosen: whatif.energy(whatif.mean_squares(chosen, goal.load_case), goal))
+    report(choice.how)
+    checked = []
+    for number, candidate in enumerate(choice.candidates[:VERIFIED] if verify else ()):
+        report(f"solving choice {number + 1} again in full")
+        chosen = [whatif.options[i] for i in candidate.chosen]
+        checked.append(verified(result, chosen, goal, candidate.gain))
+    by_gain = lambda measure: -measure.gain  # noqa: E731
+    top = rank(result, goal.receivers, goal.band, goal.weighting, goal.load_case).rows[0].panel
+    bare = float(level(whatif.energy(whatif.mean_squares((), goal.load_case), goal) / len(_receivers(result.case, goal))))
+    return Study(
+        result, whatif, goal, bare, tuple(sorted(quieten, key=by_gain)), tuple(sorted(treat, key=by_gain)), kept, choice,
+        tuple(checked), top,
+    )  # fmt: skip
+
+
+def _receivers(case: Case, goal: Goal) -> tuple[str, ...]:
+    return goal.receivers or tuple(receiver.name for receiver in case.receivers)
+
+
+def _quietened(whatif: WhatIf, goal: Goal, panel: str) -> Measure:
+    """The panel with its velocity lowered and nothing else changed."""
+    change = whatif.change(Treatment(f"{QUIETER:g} dB", 0.0, 0.0, velocity_cut=QUIETER), panel)
+    before = whatif.energy(whatif.mean_squares((), goal.load_case), goal)
+    after = whatif.energy(whatif.squares([change], goal.load_case), goal)
+    return Measure(panel, panel, float(level(before) - level(after)))
+
+
+# ---------------------------------------------------------------------------------------------------------------------
+# as a tree, for scripts and for the page of a review
+
+
+def tree(found: Study) -> dict[str, Any]:
+    """Everything a table or a page shows, as plain numbers and texts."""
+    goal = found.goal
+    return {
+        "case_checksum": found.result.case.checksum,
+        "goal": {
+            "receivers": list(_receivers(found.result.case, goal)),
+            "load_case": found.result.load_case(goal.load_case).name,
+            "band_hz": list(goal.band or (float(found.result.frequencies[0]), float(found.result.frequencies[-1]))),
+            "weighting": goal.weighting,
+        },
+        "baseline_level_db": round(found.level, 3),
+        "quieten": [{"panel": m.panel, "cut_db": QUIETER, "gain_db": round(m.gain, 4)} for m in found.quieten],
+        "treat": [_measure(found, m) for m in found.treat],
+        "limits": {k: v for k, v in vars(found.limits).items() if v not in (None, ())},
+        "how": found.choice.how,
+        "choices": [_candidate(found, i) for i in range(min(10, len(found.choice.candidates)))],
+        "front": [
+            {"gain_db": round(c.gain, 4), "mass_kg": round(c.mass, 3), "cost_eur": round(c.cost, 2),
+             "measures": [o.name for o in found.used(c)]}
+            for c in found.choice.front
+        ],
+        "top_contributor": found.top_contributor,
+        "words": found.words,
+        "cautions": CAUTIONS,
+    }  # fmt: skip
+
+
+def _measure(found: Study, measure: Measure) -> dict[str, Any]:
+    index = next(i for i, option in enumerate(found.whatif.options) if option.name == measure.name)
+    bands = found.whatif.gains_by_band((index,), found.goal)
+    return {
+        "measure": measure.name,
+        "panel": measure.panel,
+        "gain_db": round(measure.gain, 4),
+        "mass_kg": round(measure.mass, 3),
+        "cost_eur": round(measure.cost, 2),
+        "gain_per_kg": round(measure.gain / measure.mass, 4) if measure.mass > 0 else None,
+        "gain_per_eur": round(measure.gain / measure.cost, 5) if measure.cost > 0 else None,
+        "louder": measure.louder,
+        "third_octaves": [
+            {"band_hz": float(band.nominal), "gain_db": round(gain, 3) if np.isfinite(gain) else None} for band, gain in bands
+        ],
+    }
+
+
+def _candidate(found: Study, index: int) -> dict[str, Any]:
+    candidate = found.choice.candidates[index]
+    checked = found.verified[index] if index < len(found.verified) else None
+    return {
+        "measures": [option.name for option in found.used(candidate)],
+        "predicted_gain_db": round(candidate.gain, 4),
+        "verified_gain_db": None if checked is None else round(checked.gain, 4),
+        "mass_kg": round(candidate.mass, 3),
+        "cost_eur": round(candidate.cost, 2),
+    }
+
+
+def write_study(found: Study, path: str | Path) -> Path:
+    """Write the study's tree as JSON."""
+    with written(Path(path)) as scratch:
+        scratch.write_text(json.dumps(tree(found), indent=1) + "\n", encoding="utf-8")
+    return Path(path)
