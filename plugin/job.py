@@ -23,7 +23,7 @@ import numpy as np
 from murmesh.plugin.gmsh_session import CAD
 from murmesh.plugin.mesh_source import UNITS, TaggedMesh, element_size, read_mesh
 from murmesh.solver.case.boundary import Boundary
-from murmesh.solver.case.catalogue import Limits, Treatment
+from murmesh.solver.case.catalogue import Limits, Ranges, Treatment
 from murmesh.solver.case.fields import Declared, quantity, record
 from murmesh.solver.case.load import (
     Coherent,
@@ -143,6 +143,7 @@ class Job(Declared):
     sweep: Sweep | None = quantity(help="frequencies", default=None)
     catalogue: tuple[Treatment, ...] = quantity(help="treatments to choose from", default=())
     limits: Limits = quantity(help="what a choice of treatments must keep to", default=Limits())
+    ranges: Ranges = quantity(help="what is not known exactly, for the spread of gains", default=Ranges())
 
     def validate(self) -> None:
         for what in ("regions", "surfaces", "receivers"):
@@ -225,6 +226,10 @@ class Job(Declared):
     def with_limits(self, **options: Any) -> Job:
         """Say what a choice of treatments must keep to; options of `Limits`."""
         return self.with_(limits=self.limits.with_(**options))
+
+    def with_ranges(self, **options: Any) -> Job:
+        """Say what is not known exactly; options of `Ranges`."""
+        return self.with_(ranges=self.ranges.with_(**options))
 
     # -- what follows from it ------------------------------------------------------------------------------------------
 

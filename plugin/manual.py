@@ -48,6 +48,7 @@ RECORDS: dict[str, type[Declared]] = {
     "/sweep": model.Sweep,
     "/catalogue/NAME": catalogue.Treatment,
     "/limits": catalogue.Limits,
+    "/ranges": catalogue.Ranges,
 }
 SCALARS: dict[type, str] = {str: "text", bool: "true or false", int: "whole number", float: "number", complex: "complex"}
 _WIDTH = 118

@@ -46,6 +46,7 @@ def case_of(job: Job, resolved: Resolved) -> Case:
         job.receivers,
         job.catalogue,
         job.limits,
+        job.ranges,
         title=job.title,
     )
 

@@ -25,12 +25,15 @@ from murmesh.solver.contribution import rank
 from murmesh.solver.levels import level
 from murmesh.solver.result import Result
 from murmesh.solver.treatment import Goal, Option, Verification, WhatIf, verified
+from murmesh.solver.uncertainty import Spread, spread
 
 Floats = npt.NDArray[np.float64]
 QUIETER = 6.0
 """dB by which the ranking *quieten* lowers the velocity of a panel."""
 LOUDER = -0.005
 """Gain [dB] below which a measure is marked as making it louder."""
+RIVALS = 4
+"""Single treatments whose order under what is not known is sampled."""
 VERIFIED = 3
 """How many of the best sets are solved again in full."""
 
@@ -65,6 +68,7 @@ class Study:
     choice: Choice
     verified: tuple[Verification, ...]
     top_contributor: str
+    spread: Spread | None = None
 
     @property
     def best(self) -> Candidate:
@@ -74,6 +78,26 @@ class Study:
     def used(self, candidate: Candidate) -> tuple[Option, ...]:
         """The options of a candidate."""
         return tuple(self.whatif.options[i] for i in candidate.chosen)
+
+    def stays_first(self) -> float:
+        """How often the choice stays first among those that were verified, 0 to 1; 1 without samples."""
+        if self.spread is None:
+            return 1.0
+        rivals = self.spread.gains[:, : min(VERIFIED, len(self.choice.candidates))]
+        return float(np.mean(rivals.argmax(axis=1) == 0))
+
+    def band(self, chosen: tuple[int, ...]) -> tuple[float, float] | None:
+        """The middle 80 % of a set's gains [dB] where it was sampled."""
+        if self.spread is None or chosen not in self.spread.sets:
+            return None
+        return self.spread.band(self.spread.sets.index(chosen))
+
+    def top_single(self) -> float:
+        """How often the best single treatment stays ahead of its `RIVALS` - 1 nearest, 0 to 1; 1 without samples."""
+        if self.spread is None:
+            return 1.0
+        singles = self.spread.gains[:, min(VERIFIED, len(self.choice.candidates)) :]
+        return float(np.mean(singles.argmax(axis=1) == 0))
 
     @property
     def words(self) -> str:
@@ -92,9 +116,11 @@ def study(
     limits: Limits | None = None,
     *,
     verify: bool = True,
+    samples: int = 0,
     report: Callable[[str], None] = lambda words: None,
 ) -> Study:
-    """Rank, choose within `limits` (None: those of the case) and verify.
+    """Rank, choose within `limits` (None: those of the case) and verify; `samples` draws of what is not known give the spread
+    of the gains of the best choices and, behind them, of every single treatment.
 
     Raises: ResultError without a reduced model, CaseError where nothing can be chosen, SolveError where a verified gain
     disagrees with the prediction.
@@ -114,12 +140,15 @@ def study(
         report(f"solving choice {number + 1} again in full")
         chosen = [whatif.options[i] for i in candidate.chosen]
         checked.append(verified(result, chosen, goal, candidate.gain))
+    best = sorted(range(len(treat)), key=lambda i: -treat[i].gain)[:RIVALS]
+    sets = [candidate.chosen for candidate in choice.candidates[:VERIFIED]] + [(i,) for i in best]
+    drawn = spread(result, whatif, sets, goal, result.case.ranges, samples, report=report) if samples else None
     by_gain = lambda measure: -measure.gain  # noqa: E731
     top = rank(result, goal.receivers, goal.band, goal.weighting, goal.load_case).rows[0].panel
     bare = float(level(whatif.energy(whatif.mean_squares((), goal.load_case), goal) / len(_receivers(result.case, goal))))
     return Study(
         result, whatif, goal, bare, tuple(sorted(quieten, key=by_gain)), tuple(sorted(treat, key=by_gain)), kept, choice,
-        tuple(checked), top,
+        tuple(checked), top, drawn,
     )  # fmt: skip
 
 
@@ -161,6 +190,10 @@ def tree(found: Study) -> dict[str, Any]:
              "measures": [o.name for o in found.used(c)]}
             for c in found.choice.front
         ],
+        "samples": 0 if found.spread is None else len(found.spread.gains),
+        "choice_stays_first": round(found.stays_first(), 3),
+        "best_single_stays_first": round(found.top_single(), 3),
+        "baseline_80_percent_db": None if found.spread is None else [round(v, 2) for v in found.spread.level_band],
         "top_contributor": found.top_contributor,
         "words": found.words,
         "cautions": CAUTIONS,
@@ -192,6 +225,7 @@ def _candidate(found: Study, index: int) -> dict[str, Any]:
         "measures": [option.name for option in found.used(candidate)],
         "predicted_gain_db": round(candidate.gain, 4),
         "verified_gain_db": None if checked is None else round(checked.gain, 4),
+        "gain_80_percent_db": None if (band := found.band(candidate.chosen)) is None else [round(v, 3) for v in band],
         "mass_kg": round(candidate.mass, 3),
         "cost_eur": round(candidate.cost, 2),
     }

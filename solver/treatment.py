@@ -50,7 +50,7 @@ Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 Ints = npt.NDArray[np.int64]
 
-VECTORS, TAIL = 32, 3e-3
+VECTORS, TAIL = 36, 3e-4
 """Largest number of trace vectors per panel, and the part of the traces' size that may be left out."""
 NEAR_FIELD_LINES = (0.15, 0.97)
 """Where in the list of lines A_0^-1 B T is solved in full."""

@@ -49,7 +49,7 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("solver.result", "solver.journal"),
     ("solver.sweep", "solver.modes", "solver.contribution"),
     ("solver.damped_modes", "solver.treatment"),
-    ("solver.choice",),
+    ("solver.choice", "solver.uncertainty"),
     ("solver.__main__", "sample_geometry"),
     ("plugin.probe", "plugin.files", "plugin.products", "plugin.manual", "plugin.summary"),
     ("plugin.gmsh_session", "plugin.tables"),

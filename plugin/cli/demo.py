@@ -131,7 +131,7 @@ def _treatment(result: Result, folder: Path) -> list[str]:
 register(
     Command(
         "demo",
-        "Run the demonstration: an invented cab with 14 panels, from geometry to levels, rankings and a verified choice of treatments.",
+        "Run the demonstration: an invented cab with 14 panels, from geometry to a verified choice of treatments.",
         "  murmesh demo cab_demo",
         arguments,
         run,

@@ -10,7 +10,7 @@ from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, answer_jso
 from murmesh.plugin.cli.draw import draw
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.pictures import PICTURES
-from murmesh.plugin.study import QUIETER, Study, study, tree, write_study
+from murmesh.plugin.study import QUIETER, VERIFIED, Study, study, tree, write_study
 from murmesh.plugin.summary import CAUTIONS
 from murmesh.solver.result import read_result
 from murmesh.solver.treatment import Goal
@@ -30,6 +30,9 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--wanted-gain", type=float, help="gain [dB] that is enough: the least cost that reaches it")
     parser.add_argument("--exclude", action="append", default=[], help="panel (or glob) that stays as it is; repeat for more")
     parser.add_argument("--force", action="append", default=[], help="panel that must be treated; repeat for more")
+    parser.add_argument(
+        "--samples", type=int, default=0, help="draws of what is not known, for the spread of gains (default: none)"
+    )
     parser.add_argument("--unverified", action="store_true", help="do not solve the best choices again in full")
     parser.add_argument("--json", action="store_true", help="print JSON")
 
@@ -39,7 +42,9 @@ def run(args: argparse.Namespace) -> int:
     goal = Goal(tuple(args.receiver), args.load_case, args.band, args.weighting)
     given = {key: value for key in ("mass", "cost", "panels", "thickness", "wanted_gain") if (value := getattr(args, key))}
     given |= {key: tuple(value) for key in ("exclude", "force") if (value := getattr(args, key))}
-    found = study(result, goal, result.case.limits.with_(**given), verify=not args.unverified, report=_told)
+    found = study(
+        result, goal, result.case.limits.with_(**given), verify=not args.unverified, samples=args.samples, report=_told
+    )
     if args.json:
         answer_json(tree(found))
     else:
@@ -82,9 +87,32 @@ def text(found: Study) -> str:
         "TREAT: each treatment of the catalogue where it may go\n"
         + table(("measure", f"gain [{unit}]", "kg", "EUR", "dB/kg", "dB/EUR", ""), treat),
         _choices(found, unit),
+        _spread(found, unit),
         found.words,
     ]
-    return "\n\n".join(parts)
+    return "\n\n".join(part for part in parts if part)
+
+
+def _spread(found: Study, unit: str) -> str:
+    """What the ranges of the case do to the baseline, the gains and the order of the best."""
+    if found.spread is None:
+        return ""
+    low, high = found.spread.level_band
+    ranges = found.result.case.ranges
+    lines = [
+        f"SPREAD over {len(found.spread.gains)} draws: residual damping x/÷ {ranges.damping:g}, flow resistivity x/÷ "
+        f"{ranges.flow_resistivity:g}, thickness x/÷ {ranges.thickness:g}, velocity ± {ranges.velocity:g} dB, phase ± "
+        f"{ranges.phase:g}°",
+        f"baseline {low:.1f} .. {high:.1f} {unit} (middle 80 %)",
+    ]
+    for candidate in found.choice.candidates[:VERIFIED]:
+        band = found.band(candidate.chosen)
+        if band:
+            names = " + ".join(option.name for option in found.used(candidate)) or "nothing"
+            lines.append(f"gain {band[0]:+.2f} .. {band[1]:+.2f} {unit}: {names}")
+    lines.append(f"the choice stays first in {100 * found.stays_first():.0f} % of the draws, the best single treatment in "
+                 f"{100 * found.top_single():.0f} %")  # fmt: skip
+    return "\n".join(lines)
 
 
 def _load_case(found: Study) -> str:

@@ -49,3 +49,18 @@ class Limits(Declared):
     @classmethod
     def example(cls) -> Limits:
         return cls(6.0, 90.0, 3, 0.06, ("roof",), ("console",), 2.0)
+
+
+@record
+class Ranges(Declared):
+    """What is not known exactly, as factors about the given values (2 means from half to twice) and as plus-minus ranges."""
+
+    damping: float = quantity(help="factor on the residual damping of every region", low=1.0, default=2.0)
+    flow_resistivity: float = quantity(help="factor on the flow resistivity of porous layers", low=1.0, default=1.5)
+    thickness: float = quantity(help="factor on the thickness of porous layers", low=1.0, default=1.1)
+    velocity: float = quantity(help="plus-minus range of every panel's velocity level", unit="dB", low=0.0, default=2.0)
+    phase: float = quantity(help="plus-minus range of every panel's phase", unit="deg", low=0.0, high=180.0, default=20.0)
+
+    @classmethod
+    def example(cls) -> Ranges:
+        return cls(2.0, 1.4, 1.1, 1.0, 30.0)

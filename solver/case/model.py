@@ -14,7 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from murmesh.solver.case.boundary import Boundary, Sheet
-from murmesh.solver.case.catalogue import Limits, Treatment
+from murmesh.solver.case.catalogue import Limits, Ranges, Treatment
 from murmesh.solver.case.fields import Declared, quantity, record, to_tree
 from murmesh.solver.case.load import IncomingWave, LoadCase, Monopole, SurfacePressure, SurfaceVelocity
 from murmesh.solver.case.medium import Damping, Medium, NoDamping
@@ -155,6 +155,7 @@ class Case(Declared):
     receivers: tuple[Receiver, ...] = quantity(help="microphones and ears", default=())
     catalogue: tuple[Treatment, ...] = quantity(help="treatments to choose from", default=())
     limits: Limits = quantity(help="what a choice of treatments must keep to", default=Limits())
+    ranges: Ranges = quantity(help="what is not known exactly, for the spread of gains", default=Ranges())
     title: str = quantity(help="title of the case", default="")
 
     def validate(self) -> None:
