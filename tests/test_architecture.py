@@ -59,10 +59,10 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("plugin.resolve",),
     ("plugin.model", "plugin.findings"),
     ("plugin.check",),
-    ("plugin.load", "plugin.describe", "plugin.fields", "plugin.sampling"),
-    ("plugin.study",),
+    ("plugin.load", "plugin.describe", "plugin.declared", "plugin.fields", "plugin.sampling"),
+    ("plugin.study", "plugin.compare", "plugin.balance", "plugin.audio"),
     ("plugin.pictures", "plugin.export"),
-    ("plugin.gmsh_views",),
+    ("plugin.gmsh_views", "plugin.report"),
     ("plugin.script",),
     ("plugin.cli", "plugin.window"),
 )

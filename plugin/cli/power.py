@@ -4,13 +4,10 @@ from __future__ import annotations
 
 import argparse
 
-import numpy as np
-import numpy.typing as npt
-
+from murmesh.plugin.balance import MEANING, Balance, balance
 from murmesh.plugin.cli.command import DONE, Command, answer, answer_json, band_argument, register, table
-from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import power_level
-from murmesh.solver.result import Result, read_result
+from murmesh.solver.result import read_result
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:
@@ -21,48 +18,20 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def run(args: argparse.Namespace) -> int:
-    result = read_result(args.result)
-    held = result.load_case(args.load_case)
-    weights = _weights(result, args.band, args.load_case)
-    supplied = dict(zip(held.loads, weights @ held.supplied, strict=True))
-    taken = dict(zip(result.power_labels, weights @ held.absorbed, strict=True))
+    found = balance(read_result(args.result), args.band, args.load_case)
     if args.json:
-        answer_json({"load_case": held.name, "put_in_w": supplied, "taken_w": taken})
+        answer_json({"load_case": found.load_case, "put_in_w": found.supplied, "taken_w": found.taken})
     else:
-        answer(text(held.name, supplied, taken))
+        answer(text(found))
     return DONE
 
 
-def _weights(result: Result, band: tuple[float, float] | None, load_case: str) -> npt.NDArray[np.float64]:
-    """How much each line counts: 1 for tones, its share of the frequency axis over the bandwidth for a density."""
-    f, case = result.frequencies, result.load_case_of(load_case)
-    low, high = band or (f[0], f[-1])
-    inside = (f >= low) & (f <= high)
-    if not inside.any():
-        raise ResultError(f"no line lies between {low:g} and {high:g} Hz; choose another band")
-    if case.spectrum == "tones" or inside.sum() == 1:
-        return inside.astype(np.float64)
-    edges = np.concatenate([[f[inside][0]], (f[inside][1:] + f[inside][:-1]) / 2, [f[inside][-1]]])
-    weights = np.zeros(len(f))
-    weights[inside] = np.diff(edges) / case.bandwidth
-    return weights
-
-
-def text(load_case: str, supplied: dict[str, float], taken: dict[str, float]) -> str:
+def text(found: Balance) -> str:
     """Both sides of the balance, largest first, and what is left over."""
-    total = sum(supplied.values())
-    rows = [(f"+ {name}", f"{w:.3e}", _level(w), _share(w, total)) for name, w in _largest_first(supplied)]
-    rows += [(f"- {name}", f"{w:.3e}", _level(w), _share(w, total)) for name, w in _largest_first(taken)]
+    rows = [(name, f"{w:.3e}", _level(w), _share(w, found.total)) for name, w in found.rows]
     body = table(("put in (+), taken (-)", "power [W]", "level [dB re 1 pW]", "of the input"), rows)
-    left = abs(total - sum(taken.values())) / abs(total) if total else 0.0
-    return (
-        f"Power balance, load case '{load_case}'\n{body}\nImbalance: {left:.0e} of the input.\n"
-        "A negative input means that the others drive that load's surface; volumes take power by their losses."
-    )
-
-
-def _largest_first(powers: dict[str, float]) -> list[tuple[str, float]]:
-    return sorted(powers.items(), key=lambda item: -item[1])
+    head = f"Power balance, load case '{found.load_case}'"
+    return f"{head}\n{body}\nImbalance: {found.imbalance:.0e} of the input.\n{MEANING}"
 
 
 def _level(power: float) -> str:
