@@ -21,11 +21,11 @@ Complex = npt.NDArray[np.complex128]
 
 
 def kept_line(result: Result, frequency: float | None = None, load_case: str = "") -> float:
-    """The kept line nearest to `frequency`, or (None) the one that is loudest at the receivers.
+    """The kept line nearest to `frequency`, or (None) the one that is loudest at the receivers; a model keeps every line.
 
     Raises ResultError where no field is kept, or none near `frequency`.
     """
-    lines = result.field_frequencies
+    lines = result.field_frequencies if frequency is None or result.model is None else result.frequencies
     if not len(lines):
         raise ResultError("the result keeps no field; name the lines to keep as field_frequencies and solve again")
     if frequency is not None:

@@ -35,7 +35,7 @@ _CELLS, _LEAST, _MOST = 250, 60, 1200  # along a cut's longer edge; at least alo
 _CONTOUR = 5.0  # dB
 _BESIDE = 1e-7  # of the model's longest extent
 _NEAR = 0.05  # metres: a receiver farther from the plane is drawn hollow
-_BAR, _LABELS, _ABOVE, _UNDER = 1.35, 0.8, 0.35, 0.62  # inches: colour bar, room left of, above and below a cut
+BAR, _LABELS, _ABOVE, _UNDER = 1.35, 0.8, 0.35, 0.62  # inches: colour bar, room left of, above and below a cut
 _MOST_HEIGHT = 9.0  # inches
 
 
@@ -126,8 +126,7 @@ def figure(
 ) -> Figure:
     """The figure, for further work."""
     line = kept_line(result, frequency, load_case)
-    skin = sample_skin(result.space, 0 if result.space.geometry.curved.any() else 1)
-    cuts = [_cut(result, skin, Plane.of(*plane), line, load_case) for plane in planes or default_planes(result.case)]
+    cuts = cuts_of(result, planes, line, load_case)
     levels = [field_levels(result, cut.pressure.reshape(-1, cut.pressure.shape[2]), load_case) for cut in cuts]
     scale = level_limits(np.concatenate(levels), limits)
     facts = [
@@ -145,9 +144,15 @@ def figure(
         axes = sheet.axes(left, bottom, *(cut.size * layout.scale))
         _draw(axes, result.case, cut, values.reshape(cut.pressure.shape[:2]), scale, layout.scale)
     high = min(layout.height - 0.6, 4.2)
-    bar = sheet.axes(sheet.width - _BAR + 0.3, (layout.height - high) / 2, 0.24, high)
+    bar = sheet.axes(sheet.width - BAR + 0.3, (layout.height - high) / 2, 0.24, high)
     colour_bar(bar, scale, f"level [{level_unit('Z', is_density(result, load_case))}]")
     return sheet.figure
+
+
+def cuts_of(result: Result, planes: Sequence[tuple[Vector, Vector]], line: float, load_case: str) -> list[Cut]:
+    """The field at a kept line on `planes`, or on the default ones."""
+    skin = sample_skin(result.space, 0 if result.space.geometry.curved.any() else 1)
+    return [_cut(result, skin, Plane.of(*plane), line, load_case) for plane in planes or default_planes(result.case)]
 
 
 def default_planes(case: Case) -> list[tuple[Vector, Vector]]:
@@ -168,7 +173,7 @@ class Arrangement:
 
     @classmethod
     def of(cls, cuts: Sequence[Cut]) -> Arrangement:
-        size, free = np.array([cut.size for cut in cuts]), Page.full_width() - _BAR
+        size, free = np.array([cut.size for cut in cuts]), Page.full_width() - BAR
         count, room = len(cuts), _ABOVE + _UNDER
         row = min((free - count * _LABELS) / size[:, 0].sum(), (_MOST_HEIGHT - room) / size[:, 1].max())
         column = min((free - _LABELS) / size[:, 0].max(), (_MOST_HEIGHT - count * room) / size[:, 1].sum())
@@ -235,6 +240,12 @@ def _draw(axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, 
     steps = np.arange(scale[0], scale[1] + 0.1, _CONTOUR)
     axes.contour(levels, steps, extent=extent, colors=INK, linewidths=0.5, alpha=0.45)
     axes.add_collection(LineCollection(list(cut.outline), colors=INK, linewidths=1.2, clip_on=False))
+    frame_cut(axes, case, cut, scale_of_lengths)
+
+
+def frame_cut(axes: Axes, case: Case, cut: Cut, scale_of_lengths: float) -> None:
+    """Axes in metres, the title and the receivers of a cut; `scale_of_lengths` in inches per metre."""
+    extent = (cut.low[0], cut.high[0], cut.low[1], cut.high[1])
     for side in axes.spines.values():
         side.set_visible(False)
     axes.set_xlabel(f"{cut.plane.axes[0]} [m]")

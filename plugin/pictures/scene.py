@@ -25,7 +25,7 @@ Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 Image = npt.NDArray[np.uint8]
 
-_FROM = np.array([-0.52, -0.70, 0.49])  # the first corner: behind, to the right, above; the second lies opposite
+FIRST_CORNER = np.array([-0.52, -0.70, 0.49])  # the first corner: behind, to the right, above; the second lies opposite
 _SHARP = np.cos(np.radians(30.0))  # an edge is drawn where neighbours differ by more
 _FIT = 1.06
 _CAPTION = 0.32  # inches above a view
@@ -72,7 +72,7 @@ class View:
 
 def corner_views(points: Floats, aspect: float) -> tuple[View, View]:
     """The two views from opposite corners, at the same scale."""
-    return View.along(_FROM, points, aspect), View.along(-_FROM, points, aspect)
+    return View.along(FIRST_CORNER, points, aspect), View.along(-FIRST_CORNER, points, aspect)
 
 
 @dataclass(frozen=True, eq=False)
