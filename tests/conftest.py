@@ -9,7 +9,10 @@ os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 os.environ.setdefault("MURMESH_THREADS", "1")
 os.environ["MPLBACKEND"] = "Agg"
 
-from collections.abc import Iterator
+import shutil
+import subprocess
+from collections.abc import Callable, Iterator
+from pathlib import Path
 
 import pytest
 
@@ -48,3 +51,26 @@ def gmsh_library() -> None:
 def rendering() -> None:
     """Pictures can be drawn off screen; import pyvista inside the test."""
     _insist(probe.rendering_missing())
+
+
+@pytest.fixture
+def browser(tmp_path: Path) -> Callable[..., tuple[str, str]]:
+    """`open(page, *words) -> (standard output, console)` in a headless browser that can reach no network."""
+    found = shutil.which("chromium") or shutil.which("google-chrome")
+    _insist(None if found else "no Chromium is here; apt-get install -y --no-install-recommends chromium")
+
+    def opened(page: Path, *words: str) -> tuple[str, str]:
+        offline = "--host-resolver-rules=MAP * ~NOTFOUND"
+        command = [
+            str(found),
+            "--headless=new",
+            "--no-sandbox",
+            "--disable-gpu",
+            offline,
+            f"--user-data-dir={tmp_path / 'profile'}",
+        ]
+        command += ["--enable-logging=stderr", "--hide-scrollbars", *words, page.as_uri()]
+        done = subprocess.run(command, capture_output=True, text=True, timeout=90, check=True)
+        return done.stdout, "\n".join(line for line in done.stderr.splitlines() if "CONSOLE" in line)
+
+    return opened

@@ -1,0 +1,103 @@
+"""Treat: what quietening and what treating each panel would bring, never mixed, and the choice that was solved again in full.
+
+All of it comes from the tree of a study (`study.tree`, the file that `murmesh treat` writes), so the page computes no gain.
+"""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+from murmesh.plugin.describe import band_words, names, signed
+from murmesh.plugin.report.html import Html, join, not_computed, note, table, tag
+from murmesh.plugin.report.review import Review
+from murmesh.solver.case.catalogue import Treatment
+from murmesh.solver.errors import ResultError
+from murmesh.solver.result import Result
+
+TITLE = "Treat: what an absorber or a cut of velocity is worth"
+Tree = dict[str, Any]
+_LOUDER = -0.005  # dB
+_MEANING = (
+    "Gain: level before less level after, each from the field with the measure in place, one at a time: gains of several "
+    "panels do not add up. Not modelled: the panel's own response to a treatment, and sound through it."
+)
+_WHY = (
+    "The page was written without a study of treatments (`murmesh treat RESULT FOLDER`, then `murmesh report --study "
+    "FOLDER/study.json`). A ranking by contribution does not say where an absorber helps."
+)
+
+
+def read_study(path: str | Path, result: Result) -> Tree:
+    """The tree of a study of this very case. Raises ResultError for another file, or a study of another case."""
+    try:
+        tree = json.loads(Path(path).read_text(encoding="utf-8"))
+        checksum = tree["case_checksum"]
+    except (OSError, ValueError, KeyError, TypeError) as problem:
+        raise ResultError(f"{path}: this is no study ({problem}); make one with `murmesh treat RESULT FOLDER`") from None
+    if checksum != result.case.checksum:
+        raise ResultError(f"{path}: the study is of another case than the result; run `murmesh treat` on this result")
+    return dict(tree)
+
+
+def section(review: Review, found: Tree | None = None) -> Html:
+    """Verified choice, both rankings and the catalogue; without a study, that nothing was computed."""
+    try:
+        parts = list(_answer(found)) if found else [not_computed(_WHY)]
+    except (KeyError, TypeError, IndexError) as problem:
+        raise ResultError(f"the study lacks {problem}; make it anew with `murmesh treat`") from None
+    catalogue = review.result.case.catalogue
+    return join([*parts, tag("h3", "Catalogue"), _catalogue(catalogue)] if catalogue else parts)
+
+
+def _answer(found: Tree) -> Iterator[Html]:
+    goal, unit = found["goal"], f"dB({found['goal']['weighting']})"
+    yield tag("p", tag("strong", found["words"]))
+    place = f"{', '.join(goal['receivers'])}, load case {goal['load_case']}, {band_words(tuple(goal['band_hz']))}"
+    yield note(f"At {place}; {found['baseline_level_db']:.1f} {unit} re 20 µPa without any measure. {_MEANING}")
+    yield tag("h3", "Verified options: the best sets within the limits")
+    sets = ("set", f"predicted [{unit}]", f"verified [{unit}]", "mass [kg]", "cost [EUR]")
+    yield table(sets, [_choice(item) for item in found["choices"]])
+    yield note(f"Limits: {_limits(found['limits'])}. How the sets were found: {found['how']}.")
+    yield tag("h3", "Quieten: the panel's velocity lowered, nothing else changed")
+    rows = [(m["panel"], _gets(m["gain_db"]), f"{m['cut_db']:g}", signed(m["gain_db"])) for m in found["quieten"]]
+    yield table(("panel", "it gets", "cut of velocity [dB]", f"gain [{unit}]"), rows, words=2)
+    yield tag("h3", "Treat: each treatment where it may go")
+    header = ("measure", "it gets", f"gain [{unit}]", "mass [kg]", "cost [EUR]", "dB per kg", "dB per EUR")
+    yield table(header, [_treated(item) for item in found["treat"]], words=2)
+
+
+def _choice(item: Tree) -> tuple[str, ...]:
+    predicted, checked = item["predicted_gain_db"], item["verified_gain_db"]
+    said = "not solved again" if checked is None else f"{signed(checked)} (off by {abs(predicted - checked):.3f})"
+    what = " + ".join(item["measures"]) or "nothing"
+    return what, signed(predicted), said, f"{item['mass_kg']:.1f}", f"{item['cost_eur']:.0f}"
+
+
+def _treated(item: Tree) -> tuple[str, ...]:
+    per = (
+        "–" if item[key] is None else f"{item[key]:.{digits}f}" for key, digits in (("gain_per_kg", 2), ("gain_per_eur", 3))
+    )
+    head = item["measure"], _gets(item["gain_db"]), signed(item["gain_db"])
+    return *head, f"{item['mass_kg']:.1f}", f"{item['cost_eur']:.0f}", *per
+
+
+def _gets(gain: float) -> str:
+    return "LOUDER" if gain < _LOUDER else "quieter" if gain > -_LOUDER else "no change"
+
+
+def _limits(limits: Tree) -> str:
+    return names((f"{key.replace('_', ' ')} {_plain(value)}" for key, value in limits.items()), 9) or "none"
+
+
+def _plain(value: object) -> str:
+    return ", ".join(str(item) for item in value) if isinstance(value, list | tuple) else str(value)
+
+
+def _catalogue(catalogue: tuple[Treatment, ...]) -> Html:
+    rows = [
+        (t.name, names(t.panels), f"{t.mass_per_area:g}", f"{t.cost_per_area:g}", f"{1000 * t.thickness:g}") for t in catalogue
+    ]
+    return table(("treatment", "may go on", "mass [kg/m²]", "cost [EUR/m²]", "thickness [mm]"), rows, words=2)
