@@ -20,6 +20,7 @@ from murmesh.solver.result import Result
 TITLE = "Treat: what an absorber or a cut of velocity is worth"
 Tree = dict[str, Any]
 _LOUDER = -0.005  # dB
+_UNITS = {"mass": " kg", "cost": " EUR", "thickness": " m", "wanted_gain": " dB"}
 _MEANING = (
     "Gain: level before less level after, each from the field with the measure in place, one at a time: gains of several "
     "panels do not add up. Not modelled: the panel's own response to a treatment, and sound through it."
@@ -57,7 +58,7 @@ def _answer(found: Tree) -> Iterator[Html]:
     yield tag("p", tag("strong", found["words"]))
     place = f"{', '.join(goal['receivers'])}, load case {goal['load_case']}, {band_words(tuple(goal['band_hz']))}"
     yield note(f"At {place}; {found['baseline_level_db']:.1f} {unit} re 20 µPa without any measure. {_MEANING}")
-    yield tag("h3", "Verified options: the best sets within the limits")
+    yield tag("h3", "Options: the best sets within the limits, and what a full solution says")
     sets = ("set", f"predicted [{unit}]", f"verified [{unit}]", "mass [kg]", "cost [EUR]")
     yield table(sets, [_choice(item) for item in found["choices"]])
     yield note(f"Limits: {_limits(found['limits'])}. How the sets were found: {found['how']}.")
@@ -89,7 +90,9 @@ def _gets(gain: float) -> str:
 
 
 def _limits(limits: Tree) -> str:
-    return names((f"{key.replace('_', ' ')} {_plain(value)}" for key, value in limits.items()), 9) or "none"
+    return (
+        names((f"{key.replace('_', ' ')} {_plain(value)}{_UNITS.get(key, '')}" for key, value in limits.items()), 9) or "none"
+    )
 
 
 def _plain(value: object) -> str:
