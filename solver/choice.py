@@ -55,7 +55,7 @@ class Candidate:
 
 @dataclass(frozen=True)
 class Choice:
-    """Candidates, best first, the front of gain against mass and cost, how they were found, and the number of exact energies."""
+    """Candidates, best first, the front of gain against mass and cost, how they were found, and how many were computed."""
 
     candidates: tuple[Candidate, ...]
     front: tuple[Candidate, ...]
