@@ -17,7 +17,7 @@ import numpy as np
 import numpy.typing as npt
 
 from murmesh.plugin.files import written
-from murmesh.plugin.summary import CAUTIONS
+from murmesh.plugin.summary import CAUTIONS, Levels, levels
 from murmesh.solver.case.catalogue import Limits, Treatment
 from murmesh.solver.case.model import Case
 from murmesh.solver.choice import Candidate, Choice, choose
@@ -77,6 +77,20 @@ class Study:
     def used(self, candidate: Candidate) -> tuple[Option, ...]:
         """The options of a candidate."""
         return tuple(self.whatif.options[i] for i in candidate.chosen)
+
+    @property
+    def before_after(self) -> tuple[tuple[Levels, Levels], ...]:
+        """Levels of every receiver of the goal as it is and with the choice: solved in full, predicted without that."""
+        case, goal = self.result.case, self.goal
+        predicted = self.whatif.mean_squares(self.best.chosen, goal.load_case)
+        pairs = []
+        for name in _receivers(case, goal):
+            after = predicted[self.result.receiver(name)]
+            if self.verified:
+                after = self.verified[0].result.mean_square(name, goal.load_case)
+            head = self.result, name, goal.load_case, goal.weighting
+            pairs.append((levels(*head), levels(*head, after)))
+        return tuple(pairs)
 
     @property
     def words(self) -> str:
@@ -171,6 +185,8 @@ def tree(found: Study) -> dict[str, Any]:
              "measures": [o.name for o in found.used(c)]}
             for c in found.choice.front
         ],
+        "before_after": [_pair(before, after) for before, after in found.before_after],
+        "before_after_is": "solved in full" if found.verified else "predicted",
         "top_contributor": found.top_contributor,
         "words": found.words,
         "cautions": CAUTIONS,
@@ -196,6 +212,23 @@ def _bands(measure: Measure) -> list[dict[str, Any]]:
         {"band_hz": float(band.nominal), "gain_db": round(gain, 3) if np.isfinite(gain) else None}
         for band, gain in measure.bands
     ]
+
+
+def _pair(before: Levels, after: Levels) -> dict[str, Any]:
+    bands = zip(before.bands, before.band_levels.tolist(), after.band_levels.tolist(), strict=True)
+    return {
+        "receiver": before.receiver,
+        "unit": before.unit,
+        "before_db": _level(before.overall),
+        "after_db": _level(after.overall),
+        "third_octaves": [
+            {"band_hz": float(band.nominal), "before_db": _level(old), "after_db": _level(new)} for band, old, new in bands
+        ],
+    }
+
+
+def _level(value: float) -> float | None:
+    return round(value, 2) if np.isfinite(value) else None
 
 
 def _candidate(found: Study, index: int) -> dict[str, Any]:

@@ -210,7 +210,7 @@ class _Pairs:
             first, second = search.worth(guess, chosen, SLACK)
             (heapq.heappush if len(heap) < KEPT else heapq.heappushpop)(heap, (-first, -second, chosen))
             rest = order[start:]
-            steps = self.single[rest] + self.pair[np.ix_(rest, chosen)].sum(axis=1)
+            steps = self.single[rest] + self.pair[np.ix_(rest, np.array(chosen, dtype=np.int64))].sum(axis=1)
             lowest = guess + self._lowest(rest, steps, most - len(chosen))
             if len(heap) == KEPT and search.worth(lowest, chosen, SLACK) >= (-heap[0][0], -heap[0][1]):
                 continue
@@ -222,7 +222,8 @@ class _Pairs:
 
     def _of(self, chosen: Chosen) -> float:
         """sum_i d_i + sum_ij d_ij."""
-        return float(self.single[list(chosen)].sum() + 0.5 * self.pair[np.ix_(chosen, chosen)].sum())
+        at = np.array(chosen, dtype=np.int64)
+        return float(self.single[at].sum() + 0.5 * self.pair[np.ix_(at, at)].sum())
 
     def _lowest(self, rest: Ints, steps: Floats, count: int) -> float:
         """A bound from below of what `count` more options can change: every pair shares out its help to both of its ends."""

@@ -175,7 +175,7 @@ def test_options_pick_what_a_picture_takes() -> None:
 
 def test_without_rendering_a_3d_picture_says_the_cure(tmp_path: Path, result: Result, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(probe, "rendering_missing", lambda: "no picture can be drawn: try apt-get")
-    assert {p.name for p in PICTURES if p.renders} == {"mode_shape", "panel_colours", "surface_map"}
+    assert {p.name for p in PICTURES if p.renders} == {"gain_colours", "mode_shape", "panel_colours", "surface_map"}
     for picture in FROM_RESULT:
         if picture.renders:
             with pytest.raises(MissingLibraryError, match="apt-get"):

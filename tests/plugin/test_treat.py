@@ -16,7 +16,7 @@ from murmesh.plugin import study as study_module
 from murmesh.plugin.cli import main
 from murmesh.plugin.cli import treat as treat_command
 from murmesh.plugin.export import EXPORTS
-from murmesh.plugin.pictures import PICTURES, gain_colours, two_rankings
+from murmesh.plugin.pictures import before_after, gain_colours, two_rankings
 from murmesh.plugin.pictures.style import texts
 from murmesh.plugin.probe import rendering_missing
 from murmesh.plugin.study import QUIETER, Study, study, tree
@@ -117,8 +117,7 @@ def test_a_goal_of_one_ear_band_and_load_case() -> None:
     assert tree(found)["goal"] == {
         "receivers": ["left_ear"], "load_case": "idle", "band_hz": [80.0, 160.0], "weighting": "Z"
     }  # fmt: skip
-    with pytest.raises(ResultError, match="holds no verified choice"):
-        PICTURES["before_after"].make(found, Path("unused.png"))
+    assert "predicted, not solved again" in " ".join(texts(before_after.figure(found)))
 
 
 def test_the_option_table_holds_every_measure_and_choice(tmp_path: Path) -> None:
@@ -145,7 +144,18 @@ def test_the_tree_is_plain_json() -> None:
     assert {band["band_hz"] for band in held["quieten"][0]["third_octaves"]} >= {63.0, 125.0, 200.0}
 
 
-@pytest.mark.skipif(rendering_missing() is not None, reason="nothing can be rendered here")
+def test_before_and_after_are_those_of_full_solutions_or_predicted_alike() -> None:
+    found = _study()
+    solved, predicted = found.before_after, replace(found, verified=()).before_after
+    assert [before.receiver for before, _ in solved] == ["left_ear", "right_ear"]
+    for (before, after), (same, guess) in zip(solved, predicted, strict=True):
+        assert before.overall == same.overall and after.overall < before.overall
+        assert guess.overall == pytest.approx(after.overall, abs=0.02)
+        np.testing.assert_allclose(guess.band_levels, after.band_levels, atol=0.05)
+    assert "solved in full" in " ".join(texts(before_after.figure(found)))
+
+
+@pytest.mark.usefixtures("rendering")
 def test_panels_carry_their_best_treatment_and_its_gain() -> None:
     found = _study()
     words = " ".join(texts(gain_colours.figure(found)))
