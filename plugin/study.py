@@ -8,7 +8,7 @@ belongs, so the second ranking is a new solution for every entry.
 from __future__ import annotations
 
 import json
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -17,14 +17,14 @@ import numpy as np
 import numpy.typing as npt
 
 from murmesh.plugin.files import written
-from murmesh.plugin.summary import CAUTIONS
+from murmesh.plugin.summary import CAUTIONS, Levels, levels
 from murmesh.solver.case.catalogue import Limits, Treatment
 from murmesh.solver.case.model import Case
 from murmesh.solver.choice import Candidate, Choice, choose
 from murmesh.solver.contribution import rank
-from murmesh.solver.levels import level
+from murmesh.solver.levels import Band, level
 from murmesh.solver.result import Result
-from murmesh.solver.treatment import Goal, Option, Verification, WhatIf, verified
+from murmesh.solver.treatment import Change, Goal, Option, Verification, WhatIf, verified
 from murmesh.solver.uncertainty import Spread, spread
 
 Floats = npt.NDArray[np.float64]
@@ -40,13 +40,16 @@ VERIFIED = 3
 
 @dataclass(frozen=True)
 class Measure:
-    """One entry of a ranking: gain [dB], mass [kg] and cost [EUR] (0 for quietening, whose price nobody has given)."""
+    """One entry of a ranking: gain [dB], over all and per third octave (nan where nothing is heard), mass [kg] and cost [EUR]
+    (0 for quietening, whose price nobody has given)."""
 
     name: str
     panel: str
     gain: float
+    bands: tuple[tuple[Band, float], ...]
     mass: float = 0.0
     cost: float = 0.0
+    treatment: str = ""
 
     @property
     def louder(self) -> bool:
@@ -100,6 +103,20 @@ class Study:
         return float(np.mean(singles.argmax(axis=1) == 0))
 
     @property
+    def before_after(self) -> tuple[tuple[Levels, Levels], ...]:
+        """Levels of every receiver of the goal as it is and with the choice: solved in full, predicted without that."""
+        case, goal = self.result.case, self.goal
+        predicted = self.whatif.mean_squares(self.best.chosen, goal.load_case)
+        pairs = []
+        for name in _receivers(case, goal):
+            after = predicted[self.result.receiver(name)]
+            if self.verified:
+                after = self.verified[0].result.mean_square(name, goal.load_case)
+            head = self.result, name, goal.load_case, goal.weighting
+            pairs.append((levels(*head), levels(*head, after)))
+        return tuple(pairs)
+
+    @property
     def words(self) -> str:
         """Whether the top contributor is where the absorber goes."""
         absorbers = {t.name for t in self.result.case.catalogue if t.wall is not None}
@@ -128,7 +145,7 @@ def study(
     whatif = WhatIf.build(result, report=report)
     report(f"{len(whatif.options)} options")
     treat = [
-        Measure(option.name, option.panel, whatif.gain((i,), goal), option.mass, option.cost)
+        _measured(whatif, goal, option.name, option.panel, [whatif.changes[i]], option.mass, option.cost, option.treatment)
         for i, option in enumerate(whatif.options)
     ]
     quieten = [_quietened(whatif, goal, panel) for panel in result.case.panels]
@@ -159,9 +176,13 @@ def _receivers(case: Case, goal: Goal) -> tuple[str, ...]:
 def _quietened(whatif: WhatIf, goal: Goal, panel: str) -> Measure:
     """The panel with its velocity lowered and nothing else changed."""
     change = whatif.change(Treatment(f"{QUIETER:g} dB", 0.0, 0.0, velocity_cut=QUIETER), panel)
-    before = whatif.energy(whatif.mean_squares((), goal.load_case), goal)
-    after = whatif.energy(whatif.squares([change], goal.load_case), goal)
-    return Measure(panel, panel, float(level(before) - level(after)))
+    return _measured(whatif, goal, panel, panel, [change])
+
+
+def _measured(whatif: WhatIf, goal: Goal, name: str, panel: str, changes: Sequence[Change], *more: Any) -> Measure:
+    before, after = (whatif.squares(held, goal.load_case) for held in ((), changes))
+    gain = float(level(whatif.energy(before, goal)) - level(whatif.energy(after, goal)))
+    return Measure(name, panel, gain, whatif.band_gains(before, after, goal), *more)
 
 
 # ---------------------------------------------------------------------------------------------------------------------
@@ -180,8 +201,11 @@ def tree(found: Study) -> dict[str, Any]:
             "weighting": goal.weighting,
         },
         "baseline_level_db": round(found.level, 3),
-        "quieten": [{"panel": m.panel, "cut_db": QUIETER, "gain_db": round(m.gain, 4)} for m in found.quieten],
-        "treat": [_measure(found, m) for m in found.treat],
+        "quieten": [
+            {"panel": m.panel, "cut_db": QUIETER, "gain_db": round(m.gain, 4), "louder": m.louder, "third_octaves": _bands(m)}
+            for m in found.quieten
+        ],
+        "treat": [_measure(m) for m in found.treat],
         "limits": {k: v for k, v in vars(found.limits).items() if v not in (None, ())},
         "how": found.choice.how,
         "choices": [_candidate(found, i) for i in range(min(10, len(found.choice.candidates)))],
@@ -194,15 +218,15 @@ def tree(found: Study) -> dict[str, Any]:
         "choice_stays_first": round(found.stays_first(), 3),
         "best_single_stays_first": round(found.top_single(), 3),
         "baseline_80_percent_db": None if found.spread is None else [round(v, 2) for v in found.spread.level_band],
+        "before_after": [_pair(before, after) for before, after in found.before_after],
+        "before_after_is": "solved in full" if found.verified else "predicted",
         "top_contributor": found.top_contributor,
         "words": found.words,
         "cautions": CAUTIONS,
     }  # fmt: skip
 
 
-def _measure(found: Study, measure: Measure) -> dict[str, Any]:
-    index = next(i for i, option in enumerate(found.whatif.options) if option.name == measure.name)
-    bands = found.whatif.gains_by_band((index,), found.goal)
+def _measure(measure: Measure) -> dict[str, Any]:
     return {
         "measure": measure.name,
         "panel": measure.panel,
@@ -212,10 +236,32 @@ def _measure(found: Study, measure: Measure) -> dict[str, Any]:
         "gain_per_kg": round(measure.gain / measure.mass, 4) if measure.mass > 0 else None,
         "gain_per_eur": round(measure.gain / measure.cost, 5) if measure.cost > 0 else None,
         "louder": measure.louder,
+        "third_octaves": _bands(measure),
+    }
+
+
+def _bands(measure: Measure) -> list[dict[str, Any]]:
+    return [
+        {"band_hz": float(band.nominal), "gain_db": round(gain, 3) if np.isfinite(gain) else None}
+        for band, gain in measure.bands
+    ]
+
+
+def _pair(before: Levels, after: Levels) -> dict[str, Any]:
+    bands = zip(before.bands, before.band_levels.tolist(), after.band_levels.tolist(), strict=True)
+    return {
+        "receiver": before.receiver,
+        "unit": before.unit,
+        "before_db": _level(before.overall),
+        "after_db": _level(after.overall),
         "third_octaves": [
-            {"band_hz": float(band.nominal), "gain_db": round(gain, 3) if np.isfinite(gain) else None} for band, gain in bands
+            {"band_hz": float(band.nominal), "before_db": _level(old), "after_db": _level(new)} for band, old, new in bands
         ],
     }
+
+
+def _level(value: float) -> float | None:
+    return round(value, 2) if np.isfinite(value) else None
 
 
 def _candidate(found: Study, index: int) -> dict[str, Any]:

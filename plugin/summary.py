@@ -52,10 +52,10 @@ class Levels:
         return f"dB({self.weighting}) re 20 uPa" if self.weighting != "Z" else "dB re 20 uPa"
 
 
-def levels(result: Result, receiver: str, load_case: str = "", weighting: str = "A") -> Levels:
-    """Overall and third-octave levels at a receiver."""
+def levels(result: Result, receiver: str, load_case: str = "", weighting: str = "A", other: Floats | None = None) -> Levels:
+    """Overall and third-octave levels at a receiver; or those of another mean square (nf,) there, which has no error bar."""
     held = result.load_case_of(load_case)
-    square = result.mean_square(receiver, load_case)
+    square = result.mean_square(receiver, load_case) if other is None else other
     f = result.frequencies
     # a tone belongs to the band it lies in, so the outermost bands need not be covered whole
     bands = third_octaves(float(f[0]), float(f[-1]))
@@ -68,7 +68,7 @@ def levels(result: Result, receiver: str, load_case: str = "", weighting: str = 
     overall, found = read(square)
     bar, corrected = result.mesh_bar(receiver, load_case), result.corrected(receiver, load_case)
     bars = None
-    if bar is not None and corrected is not None:
+    if other is None and bar is not None and corrected is not None:
         high, high_bands = read(square * 10 ** (bar / 10))
         heard = np.isfinite(found)
         widths = np.subtract(high_bands, found, out=np.full(len(found), np.nan), where=heard)

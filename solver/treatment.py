@@ -333,9 +333,14 @@ class WhatIf:
 
     def gains_by_band(self, chosen: Sequence[int], goal: Goal) -> tuple[tuple[Band, float], ...]:
         """Gain [dB] of every third octave in the goal's band; nan where nothing is heard."""
+        old, new = (self.mean_squares(c, goal.load_case) for c in ((), tuple(chosen)))
+        return self.band_gains(old, new, goal)
+
+    def band_gains(self, before: Floats, after: Floats, goal: Goal) -> tuple[tuple[Band, float], ...]:
+        """Gain [dB] between two sets of mean squares (receivers, nf), as `gains_by_band`."""
         whole = _goal_band(self.frequencies, goal)
         bands = third_octaves(whole.lower, whole.upper)
-        old, new = (self._energies(self.mean_squares(c, goal.load_case), goal, bands) for c in ((), tuple(chosen)))
+        old, new = (self._energies(squares, goal, bands) for squares in (before, after))
         heard = (old > 0) & (new > 0)
         gains = np.where(heard, 10 * np.log10(np.where(heard, old, 1.0) / np.where(heard, new, 1.0)), np.nan)
         return tuple(zip(bands, gains.tolist(), strict=True))

@@ -3,21 +3,41 @@
 from __future__ import annotations
 
 import argparse
+import sys
+from contextlib import redirect_stdout
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
-from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, answer_json, band_argument, register, say, table
+from murmesh.plugin.cli.command import (
+    CANNOT,
+    DONE,
+    Command,
+    answer,
+    answer_json,
+    band_argument,
+    register,
+    result_path,
+    say,
+    table,
+)
 from murmesh.plugin.cli.draw import draw
 from murmesh.plugin.export import EXPORTS
+from murmesh.plugin.load import load_case_file
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.study import QUIETER, VERIFIED, Study, study, tree, write_study
 from murmesh.plugin.summary import CAUTIONS
-from murmesh.solver.result import read_result
+from murmesh.solver.case.catalogue import Limits
+from murmesh.solver.case.model import Case
+from murmesh.solver.errors import ResultError
+from murmesh.solver.result import Result, read_result
 from murmesh.solver.treatment import Goal
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:
-    parser.add_argument("result", help="result file with a reduced model")
+    parser.add_argument(
+        "result", help="result file with a reduced model; or a solved job, whose catalogue and limits count as they are now"
+    )
     parser.add_argument("folder", nargs="?", help="folder for the tables and pictures")
     parser.add_argument("--receiver", action="append", default=[], help="receiver; repeat for several (default: all)")
     parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz (default: the whole sweep)")
@@ -38,9 +58,13 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def run(args: argparse.Namespace) -> int:
-    result = read_result(args.result)
+    result = result_of(Path(args.result))
     goal = Goal(tuple(args.receiver), args.load_case, args.band, args.weighting)
-    given = {key: value for key in ("mass", "cost", "panels", "thickness", "wanted_gain") if (value := getattr(args, key))}
+    given = {
+        key: value
+        for key in ("mass", "cost", "panels", "thickness", "wanted_gain")
+        if (value := getattr(args, key)) is not None
+    }
     given |= {key: tuple(value) for key in ("exclude", "force") if (value := getattr(args, key))}
     found = study(
         result, goal, result.case.limits.with_(**given), verify=not args.unverified, samples=args.samples, report=_told
@@ -49,7 +73,30 @@ def run(args: argparse.Namespace) -> int:
         answer_json(tree(found))
     else:
         answer(f"{text(found)}\n\n{CAUTIONS}")
-    return products(found, Path(args.folder)) if args.folder else DONE
+    if not args.folder:
+        return DONE
+    with redirect_stdout(sys.stderr if args.json else sys.stdout):  # JSON stands alone
+        return products(found, Path(args.folder))
+
+
+def result_of(path: Path) -> Result:
+    """A result; of a job (.toml, .msh) the result beside it, with the catalogue and the limits the job has now.
+
+    Raises: ResultError where the job is not solved yet, or has changed otherwise since.
+    """
+    if path.suffix == ".h5":
+        return read_result(path)
+    case, target = load_case_file(path), result_path(path)
+    if not target.is_file():
+        raise ResultError(f"'{path}' is not solved yet: there is no '{target}'; run murmesh solve {path} first")
+    result = read_result(target)
+    if _untreated(case).checksum != _untreated(result.case).checksum:
+        raise ResultError(f"'{path}' has changed since '{target}' was solved, in more than its treatments; solve it again")
+    return replace(result, case=case)
+
+
+def _untreated(case: Case) -> Case:
+    return case.with_(catalogue=(), limits=Limits())
 
 
 def _told(words: str) -> None:

@@ -7,29 +7,40 @@ from pathlib import Path
 
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.export.tables import decibels, write_table
-from murmesh.plugin.study import QUIETER, Study
+from murmesh.plugin.study import LOUDER, QUIETER, Study
 from murmesh.plugin.summary import CAUTIONS
 
-COLUMNS = ("table", "measure", "gain_db", "verified_db", "mass_kg", "cost_eur", "louder")
+COLUMNS = ("table", "measure", "gain_db", "verified_db", "mass_kg", "cost_eur", "gain_per_kg", "gain_per_eur", "louder")
 REMARKS = (
     f"quieten: the panel's velocity lowered by {QUIETER:g} dB; treat: one treatment on one panel; choice: sets within limits",
     "gain_db: level before less level after, positive is quieter; verified_db: from a full solution with the set in place",
+    "louder: yes where the level rises; gain_..._hz_db: per third octave, empty where nothing is heard",
     CAUTIONS,
 )
 
 
-@EXPORTS.member("options_csv", ".csv", "gains of quietening, treatments and choices", source="study")
+@EXPORTS.member(
+    "options_csv", ".csv", "gains of quietening, treatments and choices, over all and per third octave", source="study"
+)
 def write(study: Study, path: Path) -> Path:
     """Write one row per measure and per choice."""
-    return write_table(study.result, path, REMARKS, COLUMNS, _rows(study))
+    bands = tuple(f"gain_{band.nominal}_hz_db" for band, _ in study.treat[0].bands)
+    return write_table(study.result, path, REMARKS, (*COLUMNS, *bands), _rows(study))
 
 
 def _rows(study: Study) -> Iterator[tuple[str, ...]]:
     for name, measures in (("quieten", study.quieten), ("treat", study.treat)):
         for m in measures:
-            yield name, m.name, decibels(m.gain), "", f"{m.mass:.3f}", f"{m.cost:.2f}", "yes" if m.louder else ""
+            yield (name, m.name, decibels(m.gain), "", *_amounts(m.gain, m.mass, m.cost), "yes" if m.louder else "",
+                   *(decibels(gain) for _, gain in m.bands))  # fmt: skip
     for number, candidate in enumerate(study.choice.candidates[:10]):
         checked = decibels(study.verified[number].gain) if number < len(study.verified) else ""
         names = " + ".join(option.name for option in study.used(candidate)) or "nothing"
-        louder = "yes" if candidate.gain < 0 else ""
-        yield "choice", names, decibels(candidate.gain), checked, f"{candidate.mass:.3f}", f"{candidate.cost:.2f}", louder
+        bands = study.whatif.gains_by_band(candidate.chosen, study.goal)
+        yield ("choice", names, decibels(candidate.gain), checked, *_amounts(candidate.gain, candidate.mass, candidate.cost),
+               "yes" if candidate.gain < LOUDER else "", *(decibels(gain) for _, gain in bands))  # fmt: skip
+
+
+def _amounts(gain: float, mass: float, cost: float) -> tuple[str, ...]:
+    """Mass, cost, and the gain per each; empty where there is none, as for quietening."""
+    return f"{mass:.3f}", f"{cost:.2f}", f"{gain / mass:.3f}" if mass > 0 else "", f"{gain / cost:.4f}" if cost > 0 else ""

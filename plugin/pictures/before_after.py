@@ -13,31 +13,24 @@ from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.pictures.study_facts import goal_facts
 from murmesh.plugin.pictures.style import LINES, look, page, save
 from murmesh.plugin.study import Study
-from murmesh.plugin.summary import Levels, levels
-from murmesh.solver.errors import ResultError
+from murmesh.plugin.summary import Levels
 
 _ROW = 2.7  # inches
 
 
 @PICTURES.member("before_after", ".png", "third octaves before and after the chosen treatments", source="study")
 def draw(study: Study, path: Path) -> Path:
-    """Draw a row per receiver. Raises ResultError for a study that was not verified."""
+    """Draw a row per receiver."""
     with look():
         return save(figure(study), path)
 
 
 def figure(study: Study) -> Figure:
     """The figure, for further work."""
-    if not study.verified:
-        raise ResultError("the study holds no verified choice, so there is no spectrum after it; verify it")
-    checked, goal = study.verified[0], study.goal
-    listed = goal.receivers or tuple(receiver.name for receiver in study.result.case.receivers)
-    pairs = [
-        tuple(levels(result, name, goal.load_case, goal.weighting) for result in (study.result, checked.result))
-        for name in listed
-    ]
-    chosen = " + ".join(option.name for option in checked.chosen) or "nothing"
-    facts = [*goal_facts(study), f"with {chosen}: {signed(-checked.gain, ' dB', digits=2)} (solved in full)"]
+    pairs, how = study.before_after, "solved in full" if study.verified else "predicted, not solved again"
+    gain = study.verified[0].gain if study.verified else study.best.gain
+    chosen = " + ".join(option.name for option in study.used(study.best)) or "nothing"
+    facts = [*goal_facts(study), f"with {chosen}: {signed(-gain, ' dB', digits=2)} ({how})"]
     notes = [
         "Numbers above the bars: change of the band's level. Gains are more credible than absolute levels.",
         f"Convention: {CONVENTION}. {origin(study.result)}.",

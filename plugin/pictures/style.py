@@ -32,7 +32,7 @@ Floats = npt.NDArray[np.float64]
 
 WIDTH, DPI = 14.0, 100  # inches, dots per inch: 1400 px
 INK, QUIET, HAIR, ACCENT = "#1f2a30", "#56646c", "#c9d0d3", "#a3421f"
-LEVEL_MAP, SIGNED_MAP = "cividis", "PuOr_r"
+LEVEL_MAP, SIGNED_MAP, GAIN_MAP = "cividis", "PuOr_r", "PuOr"  # orange is what makes it louder, in shares and in gains
 RANGE_DB = 40.0
 LINES = (("#1f4e79", "-"), ("#c8641e", (0, (6, 2))), ("#2f7d5b", (0, (1.5, 1.5))), ("#7a4b94", (0, (6, 2, 1.5, 2))))
 """Colour and dashes of the first, second, ... curve in one chart."""

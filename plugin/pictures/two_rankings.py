@@ -38,15 +38,16 @@ def figure(study: Study) -> Figure:
     sheet = page("What quietening and what treating would bring", goal_facts(study), notes, height)
     unit = level_unit(study.goal.weighting).split(" re ")[0]
     half = sheet.width / 2
+    gains = np.array([m.gain for m in (*left, *right)])
+    scale = min(0.0, 1.15 * float(gains.min(initial=0.0))), 1.2 * max(float(gains.max(initial=0.0)), 0.1)
     for at, measures, title in ((1.9, left, "quieten"), (half + 2.6, right, "treat")):
         width = half - (2.4 if at < half else 3.1)
         axes = sheet.axes(at, height - 0.45 - _BAR * len(measures), width, _BAR * len(measures))
-        _bars(axes, measures, f"{title}: gain [{unit}]")
+        _bars(axes, measures, f"{title}: gain [{unit}]", scale)
     return sheet.figure
 
 
-def _bars(axes: Axes, measures: Sequence[Measure], label: str) -> None:
-    gains = np.array([m.gain for m in measures])
+def _bars(axes: Axes, measures: Sequence[Measure], label: str, scale: tuple[float, float]) -> None:
     for i, m in enumerate(measures):
         face, hatch = ("white", "////") if m.louder else (LINES[0][0], "")
         axes.barh(i, m.gain, 0.66, facecolor=face, edgecolor=ACCENT if m.louder else LINES[0][0], hatch=hatch, linewidth=0.9)
@@ -54,7 +55,7 @@ def _bars(axes: Axes, measures: Sequence[Measure], label: str) -> None:
                       fontsize=9)  # fmt: skip
     axes.set_yticks(range(len(measures)), [short(m.name, 32) for m in measures], fontsize=9.5)
     axes.set_ylim(len(measures) - 0.5, -0.5)
-    axes.set_xlim(min(0.0, 1.15 * float(gains.min(initial=0.0))), 1.2 * max(float(gains.max(initial=0.0)), 0.1))
+    axes.set_xlim(*scale)  # one scale for both rankings: a decibel is as long in either
     axes.axvline(0, color=INK, linewidth=1.0)
     axes.grid(True, axis="x")
     axes.set_axisbelow(True)

@@ -175,7 +175,13 @@ def test_options_pick_what_a_picture_takes() -> None:
 
 def test_without_rendering_a_3d_picture_says_the_cure(tmp_path: Path, result: Result, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(probe, "rendering_missing", lambda: "no picture can be drawn: try apt-get")
-    assert {p.name for p in PICTURES if p.renders} == {"mode_shape", "panel_colours", "surface_map", "surface_phase"}
+    assert {p.name for p in PICTURES if p.renders} == {
+        "gain_colours",
+        "mode_shape",
+        "panel_colours",
+        "surface_map",
+        "surface_phase",
+    }
     for picture in (*FROM_RESULT, PICTURES["surface_phase"]):
         if picture.renders:
             with pytest.raises(MissingLibraryError, match="apt-get"):
