@@ -27,7 +27,7 @@ from murmesh.plugin.load import load_case_file
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.study import QUIETER, VERIFIED, Study, study, tree, write_study
 from murmesh.plugin.summary import CAUTIONS
-from murmesh.solver.case.catalogue import Limits
+from murmesh.solver.case.catalogue import Limits, Ranges
 from murmesh.solver.case.model import Case
 from murmesh.solver.errors import ResultError
 from murmesh.solver.result import Result, read_result
@@ -80,7 +80,7 @@ def run(args: argparse.Namespace) -> int:
 
 
 def result_of(path: Path) -> Result:
-    """A result; of a job (.toml, .msh) the result beside it, with the catalogue and the limits the job has now.
+    """A result; of a job (.toml, .msh) the result beside it, with catalogue, limits and ranges as the job has them now.
 
     Raises: ResultError where the job is not solved yet, or has changed otherwise since.
     """
@@ -96,7 +96,7 @@ def result_of(path: Path) -> Result:
 
 
 def _untreated(case: Case) -> Case:
-    return case.with_(catalogue=(), limits=Limits())
+    return case.with_(catalogue=(), limits=Limits(), ranges=Ranges())
 
 
 def _told(words: str) -> None:
