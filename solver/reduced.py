@@ -26,7 +26,7 @@ import numpy as np
 import numpy.typing as npt
 import scipy.linalg
 
-from murmesh.solver.engine import Engine, Line
+from murmesh.solver.engine import Drive, Engine, Line, Response
 from murmesh.solver.linalg import Factor
 from murmesh.solver.receiver_points import Samples
 from murmesh.solver.system import LoadSet, LoadTerm, Projected, Stack, System, Values
@@ -206,10 +206,10 @@ class Sketch:
         adjoint = np.concatenate([self.adjoint, np.stack([self.matrix @ product for product in left])], axis=2)
         return replace(self, forward=forward, adjoint=adjoint)
 
-    def forward_residual(self, number: int, values: Values, field: Complex) -> float:
-        """|f - A W y| of the columns (K, r) of load case `number` together."""
-        forces = self.load_sets[number].vectors(values.psi[number])[0] @ values.mix[number]
-        return float(np.linalg.norm(forces - Stack(self.forward).combine(values.phi) @ field))
+    def forward_residuals(self, number: int, values: Values, fields: Complex) -> Complex:
+        """S (f_l - A W y_l) of every load of load case `number`, (rows, loads), from the fields (K, loads)."""
+        forces = self.load_sets[number].vectors(values.psi[number])[0]
+        return np.asarray(forces - Stack(self.forward).combine(values.phi) @ fields)
 
     def adjoint_residual(self, values: Values, adjoints: Complex) -> Floats:
         """|e - A^T W z| of every receiver sample, (samples,)."""
@@ -396,14 +396,13 @@ def orthonormal(basis: Floats, columns: Floats, keep_above: float = KEEP_ABOVE) 
 def _check(model: Reduction, values: Values, exact: Line) -> Check:
     if not model.size:
         return Check(exact.frequency, np.inf, np.inf, np.inf, True)
-    line = model.engine().line(values)
+    line, estimate = _estimated(model, model.engine(), values)
     pairs = list(zip(line.responses, exact.responses, strict=True))
     field = max((_field_deviation(model, a.field, b.field) for a, b in pairs), default=0.0)
     heard = [
         deviation(model.samples, a.contributions, b.contributions, mix) for (a, b), mix in zip(pairs, values.mix, strict=True)
     ]
     level = max(heard, default=0.0) if len(model.samples.receiver) else field
-    estimate = float(_raw_estimate(model, values, line).max(initial=0.0))
     return Check(exact.frequency, level, field, estimate, False)
 
 
@@ -433,9 +432,9 @@ def _field_deviation(model: Reduction, coordinates: Complex, exact: Complex) -> 
 def survey(model: Reduction, lines: list[Values]) -> tuple[list[Line], Floats]:
     """Lines from the model, and their estimated deviations [dB], scaled by the worst ratio seen at the checks."""
     engine = model.engine()
-    found = [replace(engine.line(values), residual=float("nan")) for values in lines]
-    raw = [float(_raw_estimate(model, *pair).max(initial=0.0)) for pair in zip(lines, found, strict=True)]
-    return found, np.asarray(raw) * _scale(model)
+    pairs = [_estimated(model, engine, values) for values in lines]
+    found = [replace(line, residual=float("nan")) for line, _ in pairs]
+    return found, np.array([raw for _, raw in pairs]) * _scale(model)
 
 
 def _scale(model: Reduction) -> float:
@@ -444,15 +443,37 @@ def _scale(model: Reduction) -> float:
     return max([1.0, *(c.deviation / max(c.estimate, SMALLEST_ESTIMATE) for c in known)])
 
 
-def _raw_estimate(model: Reduction, values: Values, line: Line) -> Floats:
-    """|r_z| |r_p| / |p| in dB for every load case and receiver sample: an output misses r_z^T A^-1 r_p."""
+def _estimated(model: Reduction, engine: Engine, values: Values) -> tuple[Line, float]:
+    """A line from the model's `engine`, and its raw estimate [dB]: the largest over load cases and receiver samples."""
+    line, factor = engine.solved(values)
+    matrix = engine.system.matrix(values.phi)
     adjoint = model.sketch.adjoint_residual(values, line.adjoints)
-    out = []
+    out = [0.0]
     for number, response in enumerate(line.responses):
-        forward = model.sketch.forward_residual(number, values, response.field)
-        if len(model.samples.receiver):
-            heard = np.sqrt(_mean_square(model.samples, values.heard(model.projected.receivers @ response.field)))
-            out.append(DB * np.log1p(adjoint * forward / np.maximum(heard[model.samples.receiver], 1e-300)))
-        else:
-            out.append(np.atleast_1d(DB * np.log1p(forward / max(float(np.linalg.norm(response.field)), 1e-300))))
-    return np.concatenate(out) if out else np.zeros(1)
+        alone = _fields_alone(engine, factor, matrix, values, number)
+        residuals = model.sketch.forward_residuals(number, values, alone)
+        out.append(_raw_estimate(model, values, response, adjoint, residuals, values.mix[number]))
+    return line, max(out)
+
+
+def _fields_alone(engine: Engine, factor: Factor, matrix: Any, values: Values, number: int) -> Complex:
+    """The field of every load of load case `number` by itself, (K, loads)."""
+    drive = Drive.of(engine.system.load_sets[number], matrix, values.psi[number], values.mix[number])
+    fields = np.array(drive.given, dtype=np.complex128)
+    fields[engine.free] += factor.solve(drive.inside[engine.free])
+    return fields
+
+
+def _raw_estimate(
+    model: Reduction, values: Values, response: Response, adjoint: Floats, residuals: Complex, mix: Complex
+) -> float:
+    """|r_z| |r| / |p| [dB]: an output misses r_z^T A^-1 r, with r of the load case for its level, and with r of each load
+    for its contribution. Both are needed: where loads cancel, their sum is found long before its parts are."""
+    together = float(np.linalg.norm(residuals @ mix))
+    if not len(model.samples.receiver):
+        return float(DB * np.log1p(together / max(float(np.linalg.norm(response.field)), 1e-300)))
+    heard = np.sqrt(_mean_square(model.samples, values.heard(model.projected.receivers @ response.field)))
+    level = adjoint * together / np.maximum(heard[model.samples.receiver], 1e-300)
+    apart = np.linalg.norm(residuals, axis=0).max(initial=0.0)
+    contribution = adjoint * apart / np.maximum(np.abs(response.contributions).max(axis=1, initial=0.0), 1e-300)
+    return float(DB * np.log1p(np.maximum(level, contribution).max()))
