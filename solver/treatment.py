@@ -287,11 +287,20 @@ class WhatIf:
         if not len(at):
             return np.zeros((len(self.frequencies), 0), dtype=np.complex128), at, np.zeros((0, 0, 0), dtype=np.complex128)
         d = np.column_stack([d for _, d in walls]).repeat([c.stop - c.start for c, _ in walls], axis=1)
-        # single precision moves a gain by 1e-5 dB and halves the time
-        system = self.tables.g[:, at[:, None], at] * d[:, None, :].astype(np.complex64)
-        system[:, np.arange(len(at)), np.arange(len(at))] += 1.0
         right = (self.tables.traces[number][:, at] @ weight).astype(np.complex64)
-        return d, at, np.linalg.solve(system, right).astype(np.complex128)
+        return d, at, np.linalg.solve(self._closed(walls, len(at)), right).astype(np.complex128)
+
+    def _closed(self, walls: Sequence[tuple[slice, Complex]], size: int) -> npt.NDArray[np.complex64]:
+        """I + G D (nf, m, m), block by block; single precision moves a gain by 1e-5 dB and halves the time."""
+        out = np.empty((len(self.frequencies), size, size), dtype=np.complex64)
+        ends = np.cumsum([0, *(c.stop - c.start for c, _ in walls)])
+        blocks = [slice(int(a), int(b)) for a, b in pairwise(ends)]
+        for (right, d), columns in zip(walls, blocks, strict=True):
+            factor = d.astype(np.complex64)[:, None, None]
+            for (left, _), rows in zip(walls, blocks, strict=True):
+                np.multiply(self.tables.g[:, left, right], factor, out=out[:, rows, columns])
+        out[:, np.arange(size), np.arange(size)] += 1.0
+        return out
 
     def mean_squares(self, chosen: Sequence[int], load_case: str = "") -> Floats:
         """(receivers, nf) [Pa2, per hertz for a density] with these options in place; () is the baseline.
