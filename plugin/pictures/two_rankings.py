@@ -41,7 +41,7 @@ def figure(study: Study) -> Figure:
     gains = np.array([m.gain for m in (*left, *right)])
     scale = min(0.0, 1.15 * float(gains.min(initial=0.0))), 1.2 * max(float(gains.max(initial=0.0)), 0.1)
     for at, measures, title in ((1.9, left, "quieten"), (half + 2.6, right, "treat")):
-        width = half - (2.4 if at < half else 3.1)
+        width = half - 3.1
         axes = sheet.axes(at, height - 0.45 - _BAR * len(measures), width, _BAR * len(measures))
         _bars(axes, measures, f"{title}: gain [{unit}]", scale)
     return sheet.figure

@@ -169,6 +169,7 @@ def test_both_rankings_share_one_scale_in_the_picture() -> None:
     figure = two_rankings.figure(_study())
     left, right = figure.axes
     assert left.get_xlim() == right.get_xlim()
+    assert left.get_position().width == pytest.approx(right.get_position().width)
     hatched = sum(bool(bar.get_hatch()) for axes in figure.axes for bar in axes.patches)
     assert hatched == sum(m.louder for m in (*_study().quieten, *_study().treat))
 
