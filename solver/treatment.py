@@ -37,10 +37,10 @@ from murmesh.solver.case.load import LoadCase, SurfaceVelocity
 from murmesh.solver.case.model import Case
 from murmesh.solver.case.spectrum import as_spectrum
 from murmesh.solver.engine import Engine
-from murmesh.solver.errors import CaseError, ResultError, SolveError, nearest
+from murmesh.solver.errors import CaseError, SolveError, nearest
 from murmesh.solver.levels import Band, band_energy, level, third_octaves
 from murmesh.solver.receiver_points import Samples, locate_receivers
-from murmesh.solver.reduced import orthonormal
+from murmesh.solver.reduced import orthonormal, reduce
 from murmesh.solver.result import Result
 from murmesh.solver.space import Side, Space
 from murmesh.solver.sweep import solve
@@ -216,12 +216,11 @@ class WhatIf:
 
     @classmethod
     def build(cls, result: Result, *, report: Callable[[str], None] = lambda words: None) -> WhatIf:
-        """Tables of a result's case.
+        """Tables of a result's case, on the basis of its reduced model or, where its lines were solved directly, on one grown
+        for the purpose.
 
-        Raises: ResultError where the result holds no reduced model; CaseError where its catalogue is empty.
+        Raises: CaseError where no panel can carry a treatment of the catalogue.
         """
-        if result.model is None:
-            raise ResultError("what-ifs need the reduced model of a sweep; solve the case with the method 'reduced'")
         case, space = result.case, result.space
         choices = options(case, space)
         if not choices:
@@ -388,11 +387,14 @@ class _Builder:
     def of(cls, result: Result, choices: tuple[Option, ...], report: Callable[[str], None]) -> _Builder:
         samples = locate_receivers(result.case, result.space.geometry)
         system = build_system(result.space, samples)
-        assert result.model is not None  # `build` has looked
-        free = result.model.basis[:, ~result.model.projected.fixed].astype(np.float64)
-        basis = orthonormal(np.zeros((system.size, 0)), free)
-        values = system.values(result.frequencies)
-        return cls(result, Engine.of(system), samples, values, basis, choices, report)
+        engine, values = Engine.of(system), system.values(result.frequencies)
+        if result.model is not None:
+            held, fixed = result.model.basis.astype(np.float64), result.model.projected.fixed
+        else:
+            model, _, _ = reduce(engine, samples, values, result.case.sweep.tolerance)
+            held, fixed = model.basis, model.projected.fixed
+        basis = orthonormal(np.zeros((system.size, 0)), held[:, ~fixed])
+        return cls(result, engine, samples, values, basis, choices, report)
 
     @property
     def system(self) -> System:

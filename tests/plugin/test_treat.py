@@ -209,7 +209,7 @@ def test_a_solved_job_is_treated_with_the_catalogue_it_has_now(tmp_path: Path, m
         treat_command.result_of(job)
 
 
-def test_a_result_without_a_reduced_model_says_the_cure(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
-    write_result(solved_box.result(sheet=False), tmp_path / "r.h5")  # ten lines are solved one by one
+def test_an_empty_catalogue_says_the_cure(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    write_result(solved_box.result(sheet=False), tmp_path / "r.h5")
     assert main(["treat", str(tmp_path / "r.h5")]) == 2
-    assert "solve the case with the method 'reduced'" in capsys.readouterr().err
+    assert "the catalogue holds no treatment that any panel can carry; add one" in capsys.readouterr().err

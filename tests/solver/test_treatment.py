@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-from dataclasses import replace
 from functools import cache
 from pathlib import Path
 
@@ -22,7 +21,7 @@ from murmesh.solver.case.motion import Uniform
 from murmesh.solver.case.porous import Miki
 from murmesh.solver.case.spectrum import Table
 from murmesh.solver.case.wall import AirGap, Given, Layers, PorousLayer
-from murmesh.solver.errors import CaseError, ResultError, SolveError
+from murmesh.solver.errors import CaseError, SolveError
 from murmesh.solver.result import Result
 from murmesh.solver.sweep import solve
 from murmesh.solver.treatment import Goal, Option, WhatIf, options, result_gain, treated_case, verified
@@ -126,9 +125,13 @@ def test_a_choice_is_verified_and_a_wrong_prediction_fails_loudly() -> None:
         verified(_result(), [option], Goal(), right + 0.06)
 
 
-def test_what_ifs_need_a_model_and_a_catalogue() -> None:
-    with pytest.raises(ResultError, match="solve the case with the method 'reduced'"):
-        WhatIf.build(replace(_result(), model=None))
+def test_direct_lines_give_the_same_gains() -> None:
+    direct = WhatIf.build(solve(_case(), method="direct"))
+    for i in (0, 5, 9):
+        assert direct.gain((i,), Goal()) == pytest.approx(_whatif().gain((i,), Goal()), abs=2e-3)
+
+
+def test_what_ifs_need_a_catalogue() -> None:
     with pytest.raises(CaseError, match="the catalogue holds no treatment"):
         WhatIf.build(solve(_case().with_(catalogue=())))
 
