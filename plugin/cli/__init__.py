@@ -8,9 +8,14 @@ from __future__ import annotations
 
 import argparse
 import importlib
+import os
 import pkgutil
 import sys
 import warnings
+
+# Thousands of small dense solves: a second BLAS thread costs more than it gives, on a busy machine a hundred times more. The
+# sparse solver has threads of its own. NumPy reads this when it is first imported.
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 from murmesh.plugin.cli.command import COMMANDS, Command
 from murmesh.solver.errors import FallbackWarning, MurmeshError, ValidityWarning
