@@ -4,7 +4,11 @@ from __future__ import annotations
 
 import argparse
 import json
+import re
 import shutil
+import signal
+import subprocess
+import sys
 from pathlib import Path
 from typing import Any
 
@@ -214,6 +218,31 @@ def test_an_interrupt_has_status_130(monkeypatch: pytest.MonkeyPatch, capsys: py
     monkeypatch.setattr("murmesh.plugin.cli.kinds.table_of_kinds", interrupted)
     assert main(["kinds"]) == 130
     assert "the same command goes on from there" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize("method", ["direct", "reduced"])
+def test_ctrl_c_leaves_what_is_finished(folder: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str], method: str) -> None:
+    """A real signal to a real process: it says how to go on, and the same command does."""
+    case = read_case(folder / "cab.h5")
+    lines = case.sweep.with_(frequencies=np.linspace(90.0, 190.0, 60), order=2, error_bar=False, field_frequencies=[])
+    write_case(case.with_(sweep=lines), tmp_path / "cab.h5")
+    call = ["solve", str(tmp_path / "cab.h5"), "--method", method]
+    program = "import sys; from murmesh.plugin.cli import main; sys.exit(main(sys.argv[1:]))"
+    child = subprocess.Popen([sys.executable, "-c", program, *call], stderr=subprocess.PIPE, text=True)
+    assert child.stderr
+    said = ""
+    while "2/60 lines" not in said and (letter := child.stderr.read(1)):
+        said += letter
+    child.send_signal(signal.SIGINT)
+    said += child.stderr.read()
+    child.stderr.close()
+    assert child.wait() == 130, said
+    assert "interrupted; finished lines are kept, the same command goes on from there" in said
+    assert "Traceback" not in said and "factorised" in said and "s left" in said
+    assert not (tmp_path / "cab_result.h5").exists()
+    assert main(call) == 0
+    assert re.search(r"[2-9] kept from before", capsys.readouterr().err)
+    assert read_result(tmp_path / "cab_result.h5").frequencies.size == 60
 
 
 def test_bands_are_two_numbers() -> None:

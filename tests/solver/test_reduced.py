@@ -12,7 +12,10 @@ import pytest
 import scipy.sparse as sp
 from random_case import random_case
 
+from cases import case_of, lossy
+from meshes import box
 from murmesh.solver import reduced, sweep
+from murmesh.solver.case.load import Monopole
 from murmesh.solver.case.model import Case
 from murmesh.solver.engine import Engine
 from murmesh.solver.errors import FallbackWarning, FormatError, ResultError, ValidityWarning
@@ -54,6 +57,30 @@ def test_a_certificate_is_never_false(seed: int) -> None:
         scale = np.abs(b.supplied).sum(axis=1, keepdims=True)
         assert np.abs(a.supplied - b.supplied).max(initial=0.0) < 1e-2 * scale.max()
         assert np.abs(found.imbalance(a.name)).max() < 1e-6
+
+
+def _cancelling(seed: int) -> Case:
+    """A pair of opposite sources 0.2 mm apart beside a weak third one: the parts are far larger than their sum."""
+    rng = np.random.default_rng(seed)
+    lengths = 1.2 + 1.6 * rng.random(3)
+    sources = (("one", 0.3 * lengths, 1e-4), ("other", 0.3 * lengths + 1e-4, -1e-4), ("far", 0.8 * lengths, 1e-7))
+    loads = [Monopole(name, tuple(place), complex(strength)) for name, place, strength in sources]
+    ears = lengths * (0.15 + 0.7 * rng.random((3, 3)))
+    damping = lossy(float(10 ** rng.uniform(-5, -2)))
+    return case_of(
+        box(3, 3, 3, tuple(lengths)), {}, loads, np.linspace(30.0, 420.0, 120),
+        {f"ear{i}": tuple(ear) for i, ear in enumerate(ears)}, damping=damping, order=3, error_bar=False, method="reduced",
+    )  # fmt: skip
+
+
+@pytest.mark.parametrize("seed", [4, 18])
+def test_the_estimate_sees_loads_that_cancel(seed: int) -> None:
+    """Their sum is found long before their contributions are, and the certificate speaks of both."""
+    case = _cancelling(seed)
+    found = _solved(case, "reduced")
+    assert found.certificate is not None and found.certificate.certified
+    worst = worst_deviation(found, _solved(case, "direct"))
+    assert worst <= 2 * found.certificate.estimate.max() <= 2 * case.sweep.tolerance
 
 
 def test_fields_of_any_frequency_come_from_the_file(tmp_path: Path) -> None:
