@@ -116,8 +116,7 @@ class Certificate:
         return (
             f"certified within {self.tolerance:g} dB of the direct solution: {self.factorisations} factorised lines, "
             f"{self.size} unknowns in the model; the last {PASSES}, unseen by the model, agree within "
-            f"{self.worst_check:.1e} dB, and its own estimate for every line is {float(self.estimate.max(initial=0.0)):.1e} dB "
-            "at most"
+            f"{self.worst_check:.1e} dB, and its own estimate is at most {float(self.estimate.max(initial=0.0)):.1e} dB"
         )
 
 
