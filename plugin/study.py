@@ -24,8 +24,9 @@ from murmesh.solver.choice import Candidate, Choice, choose
 from murmesh.solver.contribution import rank
 from murmesh.solver.levels import Band, level
 from murmesh.solver.result import Result
-from murmesh.solver.treatment import Change, Goal, Option, Verification, WhatIf, verified
+from murmesh.solver.treatment import Goal, Option, Verification, verified
 from murmesh.solver.uncertainty import Spread, spread
+from murmesh.solver.whatif import Change, WhatIf
 
 Floats = npt.NDArray[np.float64]
 QUIETER = 6.0
@@ -159,7 +160,7 @@ def study(
         checked.append(verified(result, chosen, goal, candidate.gain))
     best = sorted(range(len(treat)), key=lambda i: -treat[i].gain)[:RIVALS]
     sets = [candidate.chosen for candidate in choice.candidates[:VERIFIED]] + [(i,) for i in best]
-    drawn = spread(result, whatif, sets, goal, result.case.ranges, samples, report=report) if samples else None
+    drawn = spread(whatif, sets, goal, result.case.ranges, samples, report=report) if samples else None
     by_gain = lambda measure: -measure.gain  # noqa: E731
     top = rank(result, goal.receivers, goal.band, goal.weighting, goal.load_case).rows[0].panel
     bare = float(level(whatif.energy(whatif.mean_squares((), goal.load_case), goal) / len(_receivers(result.case, goal))))

@@ -1,35 +1,36 @@
 """How sure a gain is: sampling of what is not known, through the what-if tables.
 
-Ranges are declared once (`case.catalogue.Ranges`); each sample draws a factor for the flow resistivity and the thickness of
-every treatment, and a level and phase for the velocity of every panel,
+Ranges are declared once (`case.catalogue.Ranges`). Every sample draws a level and phase for the velocity of every panel, and
+factors for the flow resistivity and the thickness of every treatment and for the residual damping of the whole case,
 
-    h_l -> h_l 10^(dL/20) e^{i dphi},   dY -> that of the changed stack,
+    h_l -> h_l 10^(dL/20) e^{i dphi},   dY -> that of the changed stack,   A_0 -> that of the changed losses.
 
-and one factor for the residual damping of the whole case. Damping changes the baseline itself, so tables are made for the
-factors of `DAMPING_STEPS` times the range's end and band energies are interpolated in the logarithm of the factor between
-them. Factors are log-uniform, levels and phases uniform; the seed is fixed, so that a study can be repeated.
+Levels and phases are uniform. Factors are log-uniform, and drawn from three values only: size^x with x = -sqrt(1/2), 0 or
+sqrt(1/2), Chebyshev's points of equal weights, which have the mean, variance and skewness of a uniform x (M. Abramowitz and
+I. A. Stegun, Handbook of Mathematical Functions, 25.4.28; cited from memory). So every stack and every damping is computed
+exactly and once, whatever the number of samples. The seed is fixed, so that a study can be repeated.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.case.catalogue import Ranges, Treatment
+from murmesh.solver.case.catalogue import Ranges
 from murmesh.solver.case.medium import CombinedDamping, Damping, LossFactor, ReverberationTime, WallAbsorption
 from murmesh.solver.case.model import Case
 from murmesh.solver.case.porous import PorousLaw
 from murmesh.solver.case.spectrum import Spectrum, Table
 from murmesh.solver.case.wall import Layers, PorousLayer, WallLaw
-from murmesh.solver.result import Result
-from murmesh.solver.sweep import solve
-from murmesh.solver.treatment import Change, Goal, WhatIf
+from murmesh.solver.levels import level
+from murmesh.solver.treatment import Goal, treatment_called
+from murmesh.solver.whatif import Change, WhatIf
 
 Floats = npt.NDArray[np.float64]
-DAMPING_STEPS = (-1.0, 0.0, 1.0)
+POINTS = (-float(np.sqrt(0.5)), 0.0, float(np.sqrt(0.5)))
 
 
 @dataclass(frozen=True, eq=False)
@@ -102,7 +103,6 @@ def _resistive(law: PorousLaw, factor: float) -> PorousLaw:
 
 
 def spread(
-    result: Result,
     whatif: WhatIf,
     sets: Sequence[tuple[int, ...]],
     goal: Goal,
@@ -113,77 +113,54 @@ def spread(
     report: Callable[[str], None] = lambda words: None,
 ) -> Spread:
     """Gains of `sets` (indices into the options) over `samples` draws of everything that is not known."""
-    steps = _damping_tables(result, whatif, ranges, report)
+    tables = [_Table(each, ranges) for each in _damping_tables(whatif, ranges, report)]
     rng = np.random.default_rng(seed)
     report(f"{samples} samples of {len(sets)} sets")
     gains, levels = np.zeros((samples, len(sets))), np.zeros(samples)
     for number in range(samples):
         draw = _Draw.of(rng, whatif.case, ranges)
-        bare = _energy(steps, draw, (), goal)
-        levels[number] = 10 * np.log10(bare / max(len(goal.receivers or whatif.case.receivers), 1) / 4e-10)
-        gains[number] = [10 * np.log10(bare / _energy(steps, draw, chosen, goal)) for chosen in sets]
+        table = tables[draw.damping if len(tables) > 1 else 0]
+        bare = table.energy(draw, (), goal)
+        levels[number] = level(bare / max(len(goal.receivers or whatif.case.receivers), 1))
+        gains[number] = [10 * np.log10(bare / table.energy(draw, chosen, goal)) for chosen in sets]
     return Spread(tuple(sets), gains, levels)
 
 
-def _damping_tables(
-    result: Result, whatif: WhatIf, ranges: Ranges, report: Callable[[str], None]
-) -> list[tuple[float, WhatIf]]:
-    """Tables at the logarithms of the damping factors."""
+def _damping_tables(whatif: WhatIf, ranges: Ranges, report: Callable[[str], None]) -> list[WhatIf]:
+    """What-ifs for every point of the damping; one where it is known."""
     if ranges.damping <= 1.0:
-        return [(0.0, whatif)]
+        return [whatif]
     found = []
-    for step in DAMPING_STEPS:
-        if step == 0.0:
-            found.append((0.0, whatif))
-            continue
-        factor = ranges.damping**step
-        report(f"tables with the residual damping times {factor:.2g}")
-        case = damped_case(result.case, factor)
-        case = case.with_(sweep=case.sweep.with_(error_bar=False, method="reduced"))
-        other = solve(case, orders=result.orders.astype(np.int64))
-        found.append((float(np.log(factor)), WhatIf.build(other)))
+    for point in POINTS:
+        factor = ranges.damping**point
+        report(f"residual damping times {factor:.2g}")
+        found.append(whatif if point == 0.0 else whatif.damped(damped_case(whatif.case, factor), report))
     return found
 
 
 @dataclass(frozen=True, eq=False)
 class _Draw:
-    """One draw: logarithm of the damping factor, factors by treatment, and a complex factor per panel."""
+    """One draw: numbers of the points of the damping and, by treatment, of flow resistivity and thickness; a complex factor
+    per panel."""
 
-    damping: float
-    resistivity: dict[str, float]
-    thickness: dict[str, float]
+    damping: int
+    stacks: dict[str, tuple[int, int]]
     velocity: dict[str, complex]
 
     @classmethod
     def of(cls, rng: np.random.Generator, case: Case, ranges: Ranges) -> _Draw:
-        def factor(size: float) -> float:
-            return float(size ** rng.uniform(-1, 1))
-
-        names = [treatment.name for treatment in case.catalogue]
+        points = rng.integers(len(POINTS), size=(len(case.catalogue), 2))
         phases = np.deg2rad(ranges.phase) * rng.uniform(-1, 1, len(case.panels))
         levels = ranges.velocity * rng.uniform(-1, 1, len(case.panels))
         velocity = 10 ** (levels / 20) * np.exp(1j * phases)
         return cls(
-            float(np.log(ranges.damping) * rng.uniform(-1, 1)),
-            {name: factor(ranges.flow_resistivity) for name in names},
-            {name: factor(ranges.thickness) for name in names},
+            int(rng.integers(len(POINTS))),
+            {t.name: (int(i), int(j)) for t, (i, j) in zip(case.catalogue, points, strict=True)},
             {panel: complex(v) for panel, v in zip(case.panels, velocity, strict=True)},
         )
 
-    def changes(self, whatif: WhatIf, chosen: tuple[int, ...]) -> list[Change]:
-        """What the chosen options do in this draw, and what is different about the panels' velocities."""
-        found = [self._loads(whatif)]
-        by_name = {treatment.name: treatment for treatment in whatif.case.catalogue}
-        for i in chosen:
-            option = whatif.options[i]
-            found.append(whatif.change(self._treatment(by_name[option.treatment]), option.panel))
-        return found
-
-    def _treatment(self, treatment: Treatment) -> Treatment:
-        wall = changed_stack(treatment.wall, self.resistivity[treatment.name], self.thickness[treatment.name])
-        return replace(treatment, wall=wall)
-
-    def _loads(self, whatif: WhatIf) -> Change:
+    def loads(self, whatif: WhatIf) -> Change:
+        """What is different about the panels' velocities."""
         lines = len(whatif.frequencies)
         factors = tuple(
             np.tile([self.velocity.get(load.acts_on, 1.0 + 0j) for load in held.loads], (lines, 1))
@@ -192,13 +169,26 @@ class _Draw:
         return Change((), factors)
 
 
-def _energy(steps: list[tuple[float, WhatIf]], draw: _Draw, chosen: tuple[int, ...], goal: Goal) -> float:
-    """Band energy of a draw, interpolated between the tables on either side of its damping."""
-    places = [place for place, _ in steps]
-    upper = min(int(np.searchsorted(places, draw.damping)), len(steps) - 1)
-    pair = steps[max(upper - 1, 0) : upper + 1]
-    logs = []
-    for _, whatif in pair:
-        squares = whatif.squares(draw.changes(whatif, chosen), goal.load_case)
-        logs.append(np.log(whatif.energy(squares, goal)))
-    return float(np.exp(np.interp(draw.damping, [place for place, _ in pair], logs)))
+@dataclass(frozen=True, eq=False)
+class _Table:
+    """What-ifs at one damping, and what was asked of them before: options with changed stacks."""
+
+    whatif: WhatIf
+    ranges: Ranges
+    known: dict[tuple[float, ...], Change] = field(default_factory=dict)
+
+    def energy(self, draw: _Draw, chosen: tuple[int, ...], goal: Goal) -> float:
+        """Band energy of a draw."""
+        changes = [draw.loads(self.whatif), *(self._change(i, draw) for i in chosen)]
+        return self.whatif.energy(self.whatif.squares(changes, goal.load_case), goal)
+
+    def _change(self, number: int, draw: _Draw) -> Change:
+        option = self.whatif.options[number]
+        treatment = treatment_called(self.whatif.case, option.treatment)
+        sizes = self.ranges.flow_resistivity, self.ranges.thickness
+        factors = [size ** POINTS[i] for size, i in zip(sizes, draw.stacks[treatment.name], strict=True)]
+        key = number, *factors
+        if key not in self.known:
+            changed = replace(treatment, wall=changed_stack(treatment.wall, *factors))
+            self.known[key] = self.whatif.change(changed, option.panel)
+        return self.known[key]

@@ -49,6 +49,8 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("solver.result", "solver.journal"),
     ("solver.sweep", "solver.modes", "solver.contribution"),
     ("solver.damped_modes", "solver.treatment"),
+    ("solver.trace_tables",),
+    ("solver.whatif",),
     ("solver.choice", "solver.uncertainty"),
     ("solver.__main__", "sample_geometry"),
     ("plugin.probe", "plugin.files", "plugin.products", "plugin.manual", "plugin.summary"),

@@ -15,7 +15,8 @@ from murmesh.solver import choice
 from murmesh.solver.case.catalogue import Limits
 from murmesh.solver.choice import Choice, Chosen, Energy, choose
 from murmesh.solver.sweep import solve
-from murmesh.solver.treatment import Goal, Option, WhatIf
+from murmesh.solver.treatment import Goal, Option
+from murmesh.solver.whatif import WhatIf
 
 BUDGETS = 20
 

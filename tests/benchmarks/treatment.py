@@ -10,7 +10,8 @@ from bench import Row, benchmark, best_of, timed
 from murmesh.plugin.load import load_case_file
 from murmesh.sample_geometry import __file__ as home
 from murmesh.solver.sweep import solve
-from murmesh.solver.treatment import Goal, WhatIf, result_gain, treated_case
+from murmesh.solver.treatment import Goal, result_gain, treated_case
+from murmesh.solver.whatif import WhatIf
 
 
 @benchmark("treatment")

@@ -11,7 +11,7 @@ import pytest
 
 import meshes
 from cases import case_of, lossy, monopole
-from murmesh.solver import treatment
+from murmesh.solver import trace_tables
 from murmesh.solver.case.boundary import Impedance, Rigid, Vibrating
 from murmesh.solver.case.catalogue import Ranges, Treatment
 from murmesh.solver.case.load import Incoherent, LoadCase, SurfaceVelocity
@@ -24,8 +24,9 @@ from murmesh.solver.case.wall import AirGap, Given, Layers, PorousLayer
 from murmesh.solver.errors import CaseError, SolveError
 from murmesh.solver.result import Result
 from murmesh.solver.sweep import solve
-from murmesh.solver.treatment import Goal, Option, WhatIf, options, result_gain, treated_case, verified
+from murmesh.solver.treatment import Goal, Option, options, result_gain, treated_case, verified
 from murmesh.solver.uncertainty import changed_stack, damped_case, scaled_damping, spread
+from murmesh.solver.whatif import WhatIf
 
 REFERENCES = Path(__file__).parent.parent / "references"
 SIZE = (1.1, 0.9, 0.7)
@@ -186,7 +187,7 @@ def test_the_sensitivity_of_a05c() -> None:
 
 def test_ranges_of_one_point_have_no_spread() -> None:
     none = Ranges(1.0, 1.0, 1.0, 0.0, 0.0)
-    found = spread(_result(), _whatif(), [(0,), (1,)], Goal(), none, 3)
+    found = spread(_whatif(), [(0,), (1,)], Goal(), none, 3)
     assert np.allclose(found.gains, [_whatif().gain((i,), Goal()) for i in (0, 1)], atol=1e-6)
     assert found.stays_first(int(found.gains[0].argmax())) == 1.0
 
@@ -194,7 +195,7 @@ def test_ranges_of_one_point_have_no_spread() -> None:
 def test_the_spread_is_that_of_full_solutions() -> None:
     """Flow resistivity alone, twice: its extremes come from full solutions of the changed catalogue."""
     number = next(i for i, o in enumerate(_whatif().options) if (o.panel, o.treatment) == ("z1", "foam"))
-    found = spread(_result(), _whatif(), [(number,)], Goal(), Ranges(1.0, 2.0, 1.0, 0.0, 0.0), 40)
+    found = spread(_whatif(), [(number,)], Goal(), Ranges(1.0, 2.0, 1.0, 0.0, 0.0), 40)
     ends = []
     for factor in (0.5, 1.0, 2.0):
         foam = _catalogue()[0].with_(wall=changed_stack(FOAM, factor, 1.0))
@@ -206,7 +207,7 @@ def test_the_spread_is_that_of_full_solutions() -> None:
 
 def test_damping_moves_levels_and_gains() -> None:
     ranges = Ranges(2.0, 1.0, 1.0, 0.0, 0.0)
-    found = spread(_result(), _whatif(), [(0,)], Goal(), ranges, 12)
+    found = spread(_whatif(), [(0,)], Goal(), ranges, 12)
     ends = []
     for factor in (0.5, 2.0):
         bare = solve(damped_case(_case(), factor))
@@ -220,7 +221,7 @@ def test_damping_moves_levels_and_gains() -> None:
 
 def test_velocity_and_phase_are_drawn_alike_every_time() -> None:
     ranges = Ranges(1.0, 1.0, 1.0, 3.0, 40.0)
-    one, two = (spread(_result(), _whatif(), [(0,), (3,)], Goal(), ranges, 20) for _ in range(2))
+    one, two = (spread(_whatif(), [(0,), (3,)], Goal(), ranges, 20) for _ in range(2))
     assert np.array_equal(one.gains, two.gains) and np.std(one.levels) > 0.2
     assert 0.0 < one.stays_first(0) + one.stays_first(1) <= 1.0
 
@@ -238,7 +239,7 @@ def test_scaled_damping_and_stacks() -> None:
 
 def test_vectors_are_needed(monkeypatch: pytest.MonkeyPatch) -> None:
     """With too few trace vectors the gain is off: the test of the tables can fail."""
-    monkeypatch.setattr(treatment, "VECTORS", 2)
+    monkeypatch.setattr(trace_tables, "VECTORS", 2)
     poor = WhatIf.build(_result())
     option = Option("z1", "foam", *[0.0] * 4)
     i = next(i for i, o in enumerate(poor.options) if (o.panel, o.treatment) == (option.panel, option.treatment))
