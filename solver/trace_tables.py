@@ -131,9 +131,18 @@ class BandTables:
                 system[:, rows, block] = response.on_far @ self.coupling[:, row, column]
             system[:, rows, rows] = np.eye(rows.stop - rows.start)
             right[:, rows] = response.on_far @ heard[:, rows]
-        taken = np.linalg.solve(system, right) if len(walls) > 1 else right
+        taken = _solved_after(blocks[0].stop, system, right)
         missed = np.sum([response.missed[load_case] for _, response in walls], axis=0) @ weight
         return np.asarray(bare - np.swapaxes(self.adjoints[:, at], 1, 2) @ taken - missed, dtype=np.complex128)
+
+
+def _solved_after(first: int, system: Single, right: Single) -> Single:
+    """system^-1 right (nf, m, r), where the leading `first` rows and columns are those of the unit matrix."""
+    if first == right.shape[1]:
+        return right
+    above, below = system[:, :first, first:], system[:, first:, :first]
+    rest = np.linalg.solve(system[:, first:, first:] - below @ above, right[:, first:] - below @ right[:, :first])
+    return np.concatenate([right[:, :first] - above @ rest, rest], axis=1)
 
 
 @dataclass(frozen=True, eq=False)

@@ -126,7 +126,7 @@ def _files(result: Result, folder: Path) -> list[str]:
 def _treatment(result: Result, folder: Path) -> list[str]:
     """Which trim part to treat, with what, for how many dB, within the limits of the job."""
     say("6/6  treatments: two rankings, a choice within limits, its verification; the page for a review")
-    found = study(result, report=lambda words: say(f"     {words}"))
+    found = study(result, samples=treat_command.SAMPLES, report=lambda words: say(f"     {words}"))
     answer(treat_command.text(found))
     status = treat_command.products(found, folder / "treatment")
     answer(str(write_page(Review(result, target=TARGET), folder / "review.html", tree(found))))

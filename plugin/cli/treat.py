@@ -33,6 +33,9 @@ from murmesh.solver.errors import ResultError
 from murmesh.solver.result import Result, read_result
 from murmesh.solver.treatment import Goal
 
+SAMPLES = 100
+"""Draws for the spread of gains, unless said otherwise."""
+
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument(
@@ -50,9 +53,8 @@ def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("--wanted-gain", type=float, help="gain [dB] that is enough: the least cost that reaches it")
     parser.add_argument("--exclude", action="append", default=[], help="panel (or glob) that stays as it is; repeat for more")
     parser.add_argument("--force", action="append", default=[], help="panel that must be treated; repeat for more")
-    parser.add_argument(
-        "--samples", type=int, default=0, help="draws of what is not known, for the spread of gains (default: none)"
-    )
+    words = f"draws of what is not known, for the spread of gains (default {SAMPLES}; 0: none)"
+    parser.add_argument("--samples", type=int, default=SAMPLES, help=words)
     parser.add_argument("--unverified", action="store_true", help="do not solve the best choices again in full")
     parser.add_argument("--json", action="store_true", help="print JSON")
 

@@ -11,6 +11,7 @@ from murmesh.plugin.load import load_case_file
 from murmesh.sample_geometry import __file__ as home
 from murmesh.solver.sweep import solve
 from murmesh.solver.treatment import Goal, result_gain, treated_case
+from murmesh.solver.uncertainty import spread
 from murmesh.solver.whatif import WhatIf
 
 
@@ -29,11 +30,19 @@ def treatment(quick: bool) -> Iterator[Row]:
     for i in order:
         if whatif.options[i].panel not in {whatif.options[j].panel for j in chosen}:
             chosen.append(i)
+    walls = [i for i in chosen if whatif.changes[i].walls]
     for count in (1, 3, 5):
-        combination = chosen[:count]
-        seconds = best_of(5, lambda c=combination: whatif.gain(c, goal))  # type: ignore[misc]
-        yield Row(f"cab: a combination of {count}", 1000 * seconds, "ms", "234 lines, 14 sample points", 20)
-    for name, sets, target in (("single", [[i] for i in (order[:3] if quick else order)], 1e-3), ("five", [chosen[:5]], 1e-2)):
+        seconds = best_of(5, lambda c=walls[:count]: whatif.gain(c, goal))  # type: ignore[misc]
+        yield Row(f"cab: a combination of {count} absorbers", 1000 * seconds, "ms", "234 lines, 14 sample points", 20)
+    drawn, known = [*((i,) for i in order[:4]), *(tuple(chosen[:n]) for n in (2, 3))], case.ranges.with_(damping=1.0)
+    _, seconds = timed(lambda: spread(whatif, drawn, goal, known, 200))
+    yield Row("cab: 200 samples, damping known", seconds, "s", f"{len(drawn)} sets", 10)
+    _, seconds = timed(lambda: spread(whatif, drawn, goal, case.ranges, 200))
+    yield Row("cab: 200 samples, tables of two dampings included", seconds, "s", f"{len(drawn)} sets")
+    for name, sets, target in (
+        ("single", [[i] for i in (order[:3] if quick else order)], 1e-3),
+        ("five", [chosen[:5], walls[:5]], 1e-2),
+    ):
         off = [abs(whatif.gain(s, goal) - result_gain(result, solve(treated_case(case, _of(whatif, s))), goal)) for s in sets]
         yield Row(f"cab: gain, {name}", max(off), "dB", f"{len(sets)} full solutions", target)
 
