@@ -9,7 +9,8 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -25,7 +26,7 @@ from murmesh.solver.contribution import rank
 from murmesh.solver.levels import Band, level
 from murmesh.solver.result import Result
 from murmesh.solver.treatment import Goal, Option, Verification, verified
-from murmesh.solver.uncertainty import Spread, spread
+from murmesh.solver.uncertainty import Act, Spread, spread
 from murmesh.solver.whatif import Change, WhatIf
 
 Floats = npt.NDArray[np.float64]
@@ -33,8 +34,6 @@ QUIETER = 6.0
 """dB by which the ranking *quieten* lowers the velocity of a panel."""
 LOUDER = -0.005
 """Gain [dB] below which a measure is marked as making it louder."""
-RIVALS = 4
-"""Single treatments whose order under what is not known is sampled."""
 VERIFIED = 3
 """How many of the best sets are solved again in full."""
 
@@ -42,7 +41,8 @@ VERIFIED = 3
 @dataclass(frozen=True)
 class Measure:
     """One entry of a ranking: gain [dB], over all and per third octave (nan where nothing is heard), mass [kg] and cost [EUR]
-    (0 for quietening, whose price nobody has given)."""
+    (0 for quietening, whose price nobody has given); where what is not known was sampled, between which gains [dB] and which
+    places of its ranking the middle 80 % of the draws put it."""
 
     name: str
     panel: str
@@ -51,6 +51,8 @@ class Measure:
     mass: float = 0.0
     cost: float = 0.0
     treatment: str = ""
+    spread: tuple[float, float] | None = None
+    places: tuple[int, int] | None = None
 
     @property
     def louder(self) -> bool:
@@ -73,6 +75,7 @@ class Study:
     verified: tuple[Verification, ...]
     top_contributor: str
     spread: Spread | None = None
+    """Of the best choices, at most `VERIFIED` of them."""
 
     @property
     def best(self) -> Candidate:
@@ -85,23 +88,11 @@ class Study:
 
     def stays_first(self) -> float:
         """How often the choice stays first among those that were verified, 0 to 1; 1 without samples."""
-        if self.spread is None:
-            return 1.0
-        rivals = self.spread.gains[:, : min(VERIFIED, len(self.choice.candidates))]
-        return float(np.mean(rivals.argmax(axis=1) == 0))
+        return 1.0 if self.spread is None else self.spread.stays_first()
 
-    def band(self, chosen: tuple[int, ...]) -> tuple[float, float] | None:
-        """The middle 80 % of a set's gains [dB] where it was sampled."""
-        if self.spread is None or chosen not in self.spread.sets:
-            return None
-        return self.spread.band(self.spread.sets.index(chosen))
-
-    def top_single(self) -> float:
-        """How often the best single treatment stays ahead of its `RIVALS` - 1 nearest, 0 to 1; 1 without samples."""
-        if self.spread is None:
-            return 1.0
-        singles = self.spread.gains[:, min(VERIFIED, len(self.choice.candidates)) :]
-        return float(np.mean(singles.argmax(axis=1) == 0))
+    def band(self, number: int) -> tuple[float, float] | None:
+        """The middle 80 % of the gains [dB] of one of the first choices where it was sampled."""
+        return None if self.spread is None or number >= self.spread.gains.shape[1] else self.spread.band(number)
 
     @property
     def before_after(self) -> tuple[tuple[Levels, Levels], ...]:
@@ -138,7 +129,7 @@ def study(
     report: Callable[[str], None] = lambda words: None,
 ) -> Study:
     """Rank, choose within `limits` (None: those of the case) and verify; `samples` draws of what is not known give the spread
-    of the gains of the best choices and, behind them, of every single treatment.
+    of the gains of the best choices, and spread and places of every entry of the rankings.
 
     Raises: ResultError without a reduced model, CaseError where nothing can be chosen, SolveError where a verified gain
     disagrees with the prediction.
@@ -149,7 +140,7 @@ def study(
         _measured(whatif, goal, option.name, option.panel, [whatif.changes[i]], option.mass, option.cost, option.treatment)
         for i, option in enumerate(whatif.options)
     ]
-    quieten = [_quietened(whatif, goal, panel) for panel in result.case.panels]
+    quieten = [_measured(whatif, goal, panel, panel, [whatif.change(*_quieter(panel))]) for panel in result.case.panels]
     kept = limits or result.case.limits
     choice = choose(whatif.options, kept, lambda chosen: whatif.energy(whatif.mean_squares(chosen, goal.load_case), goal))
     report(choice.how)
@@ -158,9 +149,16 @@ def study(
         report(f"solving choice {number + 1} again in full")
         chosen = [whatif.options[i] for i in candidate.chosen]
         checked.append(verified(result, chosen, goal, candidate.gain))
-    best = sorted(range(len(treat)), key=lambda i: -treat[i].gain)[:RIVALS]
-    sets = [candidate.chosen for candidate in choice.candidates[:VERIFIED]] + [(i,) for i in best]
-    drawn = spread(whatif, sets, goal, result.case.ranges, samples, report=report) if samples else None
+    drawn = None
+    if samples:
+        sets = [[whatif.act(i) for i in candidate.chosen] for candidate in choice.candidates[:VERIFIED]]
+        singles = [[whatif.act(i)] for i in range(len(treat))]
+        found = spread(whatif, [*sets, *singles, *([_quieter(m.panel)] for m in quieten)], goal, result.case.ranges, samples,
+                       report=report)  # fmt: skip
+        ends = np.cumsum([0, len(sets), len(treat), len(quieten)])
+        of_sets, of_treat, of_quieten = (slice(int(a), int(b)) for a, b in pairwise(ends))
+        treat, quieten = _spread_out(treat, found, of_treat), _spread_out(quieten, found, of_quieten)
+        drawn = replace(found, gains=found.gains[:, of_sets])
     by_gain = lambda measure: -measure.gain  # noqa: E731
     top = rank(result, goal.receivers, goal.band, goal.weighting, goal.load_case).rows[0].panel
     bare = float(level(whatif.energy(whatif.mean_squares((), goal.load_case), goal) / len(_receivers(result.case, goal))))
@@ -174,10 +172,17 @@ def _receivers(case: Case, goal: Goal) -> tuple[str, ...]:
     return goal.receivers or tuple(receiver.name for receiver in case.receivers)
 
 
-def _quietened(whatif: WhatIf, goal: Goal, panel: str) -> Measure:
+def _quieter(panel: str) -> Act:
     """The panel with its velocity lowered and nothing else changed."""
-    change = whatif.change(Treatment(f"{QUIETER:g} dB", 0.0, 0.0, velocity_cut=QUIETER), panel)
-    return _measured(whatif, goal, panel, panel, [change])
+    return Treatment(f"{QUIETER:g} dB", 0.0, 0.0, velocity_cut=QUIETER), panel
+
+
+def _spread_out(measures: Sequence[Measure], found: Spread, columns: slice) -> list[Measure]:
+    """The measures with what the draws say of them."""
+    places = found.places(columns)
+    return [
+        replace(m, spread=found.band(columns.start + i), places=places[i]) for i, m in enumerate(measures)
+    ]  # fmt: skip
 
 
 def _measured(whatif: WhatIf, goal: Goal, name: str, panel: str, changes: Sequence[Change], *more: Any) -> Measure:
@@ -203,7 +208,8 @@ def tree(found: Study) -> dict[str, Any]:
         },
         "baseline_level_db": round(found.level, 3),
         "quieten": [
-            {"panel": m.panel, "cut_db": QUIETER, "gain_db": round(m.gain, 4), "louder": m.louder, "third_octaves": _bands(m)}
+            {"panel": m.panel, "cut_db": QUIETER, "gain_db": round(m.gain, 4), "louder": m.louder, **_drawn(m),
+             "third_octaves": _bands(m)}
             for m in found.quieten
         ],
         "treat": [_measure(m) for m in found.treat],
@@ -217,7 +223,6 @@ def tree(found: Study) -> dict[str, Any]:
         ],
         "samples": 0 if found.spread is None else len(found.spread.gains),
         "choice_stays_first": round(found.stays_first(), 3),
-        "best_single_stays_first": round(found.top_single(), 3),
         "baseline_80_percent_db": None if found.spread is None else [round(v, 2) for v in found.spread.level_band],
         "before_after": [_pair(before, after) for before, after in found.before_after],
         "before_after_is": "solved in full" if found.verified else "predicted",
@@ -237,8 +242,15 @@ def _measure(measure: Measure) -> dict[str, Any]:
         "gain_per_kg": round(measure.gain / measure.mass, 4) if measure.mass > 0 else None,
         "gain_per_eur": round(measure.gain / measure.cost, 5) if measure.cost > 0 else None,
         "louder": measure.louder,
+        **_drawn(measure),
         "third_octaves": _bands(measure),
     }
+
+
+def _drawn(measure: Measure) -> dict[str, Any]:
+    """The middle 80 % of the draws; null without samples."""
+    gains = None if measure.spread is None else [round(v, 3) for v in measure.spread]
+    return {"gain_80_percent_db": gains, "places_80_percent": measure.places}
 
 
 def _bands(measure: Measure) -> list[dict[str, Any]]:
@@ -272,7 +284,7 @@ def _candidate(found: Study, index: int) -> dict[str, Any]:
         "measures": [option.name for option in found.used(candidate)],
         "predicted_gain_db": round(candidate.gain, 4),
         "verified_gain_db": None if checked is None else round(checked.gain, 4),
-        "gain_80_percent_db": None if (band := found.band(candidate.chosen)) is None else [round(v, 3) for v in band],
+        "gain_80_percent_db": None if (band := found.band(index)) is None else [round(v, 3) for v in band],
         "mass_kg": round(candidate.mass, 3),
         "cost_eur": round(candidate.cost, 2),
     }

@@ -19,42 +19,53 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.case.catalogue import Ranges
+from murmesh.solver.case.catalogue import Ranges, Treatment
 from murmesh.solver.case.medium import CombinedDamping, Damping, LossFactor, ReverberationTime, WallAbsorption
 from murmesh.solver.case.model import Case
 from murmesh.solver.case.porous import PorousLaw
 from murmesh.solver.case.spectrum import Spectrum, Table
 from murmesh.solver.case.wall import Layers, PorousLayer, WallLaw
 from murmesh.solver.levels import level
-from murmesh.solver.treatment import Goal, treatment_called
+from murmesh.solver.treatment import Goal
 from murmesh.solver.whatif import Change, WhatIf
 
 Floats = npt.NDArray[np.float64]
 POINTS = (-float(np.sqrt(0.5)), 0.0, float(np.sqrt(0.5)))
 
 
+Act = tuple[Treatment, str]
+"""A treatment and the panel that it goes on."""
+
+
 @dataclass(frozen=True, eq=False)
 class Spread:
-    """Gains (samples, sets) [dB], baseline levels (samples,) [dB], and the sets they are of."""
+    """Gains (samples, sets) [dB] and baseline levels (samples,) [dB]."""
 
-    sets: tuple[tuple[int, ...], ...]
     gains: Floats
     levels: Floats
 
-    def band(self, number: int, inner: float = 0.8) -> tuple[float, float]:
-        """The middle `inner` of a set's gains [dB]: from its lower to its upper quantile."""
-        low, high = np.quantile(self.gains[:, number], [0.5 - inner / 2, 0.5 + inner / 2])
-        return float(low), float(high)
+    def band(self, number: int) -> tuple[float, float]:
+        """The middle 80 % of a set's gains [dB]."""
+        return _middle(self.gains[:, number])
 
     @property
     def level_band(self) -> tuple[float, float]:
         """The middle 80 % of the baseline levels [dB]."""
-        low, high = np.quantile(self.levels, [0.1, 0.9])
-        return float(low), float(high)
+        return _middle(self.levels)
 
-    def stays_first(self, number: int = 0) -> float:
-        """How often a set is the best of them all, 0 to 1."""
-        return float(np.mean(self.gains.argmax(axis=1) == number))
+    def stays_first(self, among: slice = slice(None)) -> float:
+        """How often the first of some sets is the best of them, 0 to 1."""
+        return float(np.mean(self.gains[:, among].argmax(axis=1) == 0))
+
+    def places(self, among: slice = slice(None)) -> tuple[tuple[int, int], ...]:
+        """Between which places the middle 80 % of the draws put each of some sets among them; 1 is the best."""
+        order = (-self.gains[:, among]).argsort(axis=1, kind="stable").argsort(axis=1) + 1
+        return tuple((round(low), round(high)) for low, high in (_middle(column) for column in order.T))
+
+
+def _middle(values: npt.ArrayLike) -> tuple[float, float]:
+    low, high = np.quantile(np.asarray(values, dtype=np.float64), [0.1, 0.9], method="nearest")
+    return float(low), float(high)
 
 
 def scaled_damping(damping: Damping, factor: float) -> Damping:
@@ -104,7 +115,7 @@ def _resistive(law: PorousLaw, factor: float) -> PorousLaw:
 
 def spread(
     whatif: WhatIf,
-    sets: Sequence[tuple[int, ...]],
+    sets: Sequence[Sequence[Act]],
     goal: Goal,
     ranges: Ranges,
     samples: int = 200,
@@ -112,7 +123,7 @@ def spread(
     seed: int = 1,
     report: Callable[[str], None] = lambda words: None,
 ) -> Spread:
-    """Gains of `sets` (indices into the options) over `samples` draws of everything that is not known."""
+    """Gains of `sets`, each at most one treatment per panel, over `samples` draws of everything that is not known."""
     tables = [_Table(each, ranges) for each in _damping_tables(whatif, ranges, report)]
     rng = np.random.default_rng(seed)
     report(f"{samples} samples of {len(sets)} sets")
@@ -123,7 +134,7 @@ def spread(
         bare = table.energy(draw, (), goal)
         levels[number] = level(bare / max(len(goal.receivers or whatif.case.receivers), 1))
         gains[number] = [10 * np.log10(bare / table.energy(draw, chosen, goal)) for chosen in sets]
-    return Spread(tuple(sets), gains, levels)
+    return Spread(gains, levels)
 
 
 def _damping_tables(whatif: WhatIf, ranges: Ranges, report: Callable[[str], None]) -> list[WhatIf]:
@@ -175,20 +186,19 @@ class _Table:
 
     whatif: WhatIf
     ranges: Ranges
-    known: dict[tuple[float, ...], Change] = field(default_factory=dict)
+    known: dict[tuple[str, str, float, float], Change] = field(default_factory=dict)
 
-    def energy(self, draw: _Draw, chosen: tuple[int, ...], goal: Goal) -> float:
+    def energy(self, draw: _Draw, chosen: Sequence[Act], goal: Goal) -> float:
         """Band energy of a draw."""
-        changes = [draw.loads(self.whatif), *(self._change(i, draw) for i in chosen)]
+        changes = [draw.loads(self.whatif), *(self._change(act, draw) for act in chosen)]
         return self.whatif.energy(self.whatif.squares(changes, goal.load_case), goal)
 
-    def _change(self, number: int, draw: _Draw) -> Change:
-        option = self.whatif.options[number]
-        treatment = treatment_called(self.whatif.case, option.treatment)
-        sizes = self.ranges.flow_resistivity, self.ranges.thickness
-        factors = [size ** POINTS[i] for size, i in zip(sizes, draw.stacks[treatment.name], strict=True)]
-        key = number, *factors
+    def _change(self, act: Act, draw: _Draw) -> Change:
+        treatment, panel = act
+        resistivity, thickness = (POINTS[i] for i in draw.stacks.get(treatment.name, (1, 1)))
+        factors = self.ranges.flow_resistivity**resistivity, self.ranges.thickness**thickness
+        key = treatment.name, panel, *factors
         if key not in self.known:
             changed = replace(treatment, wall=changed_stack(treatment.wall, *factors))
-            self.known[key] = self.whatif.change(changed, option.panel)
+            self.known[key] = self.whatif.change(changed, panel)
         return self.known[key]

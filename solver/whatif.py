@@ -83,7 +83,12 @@ class WhatIf:
     @cached_property
     def changes(self) -> tuple[Change, ...]:
         """What every option does, in their order."""
-        return tuple(self.change(treatment_called(self.case, option.treatment), option.panel) for option in self.options)
+        return tuple(self.change(*self.act(number)) for number in range(len(self.options)))
+
+    def act(self, number: int) -> tuple[Treatment, str]:
+        """The treatment and the panel of an option."""
+        option = self.options[number]
+        return treatment_called(self.case, option.treatment), option.panel
 
     def change(self, treatment: Treatment, panel: str) -> Change:
         """What a treatment does on a panel; laws are asked, nothing is solved."""

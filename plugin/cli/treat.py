@@ -25,7 +25,7 @@ from murmesh.plugin.cli.draw import draw
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.load import load_case_file
 from murmesh.plugin.pictures import PICTURES
-from murmesh.plugin.study import QUIETER, VERIFIED, Study, study, tree, write_study
+from murmesh.plugin.study import QUIETER, VERIFIED, Measure, Study, study, tree, write_study
 from murmesh.plugin.summary import CAUTIONS
 from murmesh.solver.case.catalogue import Limits, Ranges
 from murmesh.solver.case.model import Case
@@ -123,23 +123,32 @@ def text(found: Study) -> str:
     unit = f"dB({goal.weighting})" if goal.weighting != "Z" else "dB"
     where = ", ".join(goal.receivers) or "all receivers"
     head = f"Baseline {found.level:.1f} {unit} re 20 uPa, mean over {where}, load case '{_load_case(found)}'"
-    quiet = [(m.panel, _gain(m.gain), "louder" if m.louder else "") for m in found.quieten]
+    quiet = [(m.panel, _gain(m.gain), *_drawn(m), "louder" if m.louder else "") for m in found.quieten]
+    drawn = ("80 % of draws", "place") if found.spread else ()
     treat = [
-        (m.name, _gain(m.gain), f"{m.mass:.2f}", f"{m.cost:.1f}", _per(m.gain, m.mass), _per(m.gain, m.cost, 3),
+        (m.name, _gain(m.gain), *_drawn(m), f"{m.mass:.2f}", f"{m.cost:.1f}", _per(m.gain, m.mass), _per(m.gain, m.cost, 3),
          "louder" if m.louder else "")
         for m in found.treat
     ]  # fmt: skip
     parts = [
         head,
         f"QUIETEN: the panel's velocity lowered by {QUIETER:g} dB, nothing else changed\n"
-        + table(("panel", f"gain [{unit}]", ""), quiet),
+        + table(("panel", f"gain [{unit}]", *drawn, ""), quiet),
         "TREAT: each treatment of the catalogue where it may go\n"
-        + table(("measure", f"gain [{unit}]", "kg", "EUR", "dB/kg", "dB/EUR", ""), treat),
+        + table(("measure", f"gain [{unit}]", *drawn, "kg", "EUR", "dB/kg", "dB/EUR", ""), treat),
         _choices(found, unit),
         _spread(found, unit),
         found.words,
     ]
     return "\n\n".join(part for part in parts if part)
+
+
+def _drawn(measure: Measure) -> tuple[str, ...]:
+    """Gains and places of the middle 80 % of the draws."""
+    if measure.spread is None or measure.places is None:
+        return ()
+    low, high = measure.places
+    return f"{_gain(measure.spread[0])} .. {_gain(measure.spread[1])}", f"{low}" if low == high else f"{low}-{high}"
 
 
 def _spread(found: Study, unit: str) -> str:
@@ -154,13 +163,12 @@ def _spread(found: Study, unit: str) -> str:
         f"{ranges.phase:g}°",
         f"baseline {low:.1f} .. {high:.1f} {unit} (middle 80 %)",
     ]
-    for candidate in found.choice.candidates[:VERIFIED]:
-        band = found.band(candidate.chosen)
+    for number, candidate in enumerate(found.choice.candidates[:VERIFIED]):
+        band = found.band(number)
         if band:
             names = " + ".join(option.name for option in found.used(candidate)) or "nothing"
             lines.append(f"gain {band[0]:+.2f} .. {band[1]:+.2f} {unit}: {names}")
-    lines.append(f"the choice stays first in {100 * found.stays_first():.0f} % of the draws, the best single treatment in "
-                 f"{100 * found.top_single():.0f} %")  # fmt: skip
+    lines.append(f"the choice stays first of these in {100 * found.stays_first():.0f} % of the draws")
     return "\n".join(lines)
 
 

@@ -15,6 +15,7 @@ from murmesh.plugin.pictures.study_facts import goal_facts
 from murmesh.plugin.pictures.style import ACCENT, INK, LINES, look, page, save
 from murmesh.plugin.study import QUIETER, Measure, Study
 
+_DRAWN = "Dark lines: the middle 80 % of the draws of what is not known. "
 _BAR, _MOST = 0.3, 24  # inches per bar, bars at most
 
 
@@ -32,13 +33,13 @@ def figure(study: Study) -> Figure:
     notes = [
         f"Quieten: the panel's velocity lowered by {QUIETER:g} dB and nothing else. Treat: computed with the treatment "
         "in place for every bar. The two answer different questions and are not to be mixed.",
-        f"Hatched bars make it louder. {study.words}",
+        f"Hatched bars make it louder. {_DRAWN if study.spread else ''}{study.words}",
         f"Convention: {CONVENTION}. {origin(study.result)}.",
     ]
     sheet = page("What quietening and what treating would bring", goal_facts(study), notes, height)
     unit = level_unit(study.goal.weighting).split(" re ")[0]
     half = sheet.width / 2
-    gains = np.array([m.gain for m in (*left, *right)])
+    gains = np.array([gain for m in (*left, *right) for gain in (m.gain, *(m.spread or ()))])
     scale = min(0.0, 1.15 * float(gains.min(initial=0.0))), 1.2 * max(float(gains.max(initial=0.0)), 0.1)
     for at, measures, title in ((1.9, left, "quieten"), (half + 2.6, right, "treat")):
         width = half - 3.1
@@ -51,8 +52,10 @@ def _bars(axes: Axes, measures: Sequence[Measure], label: str, scale: tuple[floa
     for i, m in enumerate(measures):
         face, hatch = ("white", "////") if m.louder else (LINES[0][0], "")
         axes.barh(i, m.gain, 0.66, facecolor=face, edgecolor=ACCENT if m.louder else LINES[0][0], hatch=hatch, linewidth=0.9)
-        axes.annotate(signed(float(m.gain), digits=2), (max(m.gain, 0.0), i), (4, 0), textcoords="offset points", va="center",
-                      fontsize=9)  # fmt: skip
+        if m.spread:
+            axes.hlines(i, *m.spread, color=INK, linewidth=1.4)
+        end = max(m.gain, 0.0, *(m.spread or ()))
+        axes.annotate(signed(float(m.gain), digits=2), (end, i), (4, 0), textcoords="offset points", va="center", fontsize=9)
     axes.set_yticks(range(len(measures)), [short(m.name, 32) for m in measures], fontsize=9.5)
     axes.set_ylim(len(measures) - 0.5, -0.5)
     axes.set_xlim(*scale)  # one scale for both rankings: a decibel is as long in either

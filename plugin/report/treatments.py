@@ -59,30 +59,55 @@ def _answer(found: Tree) -> Iterator[Html]:
     place = f"{', '.join(goal['receivers'])}, load case {goal['load_case']}, {band_words(tuple(goal['band_hz']))}"
     yield note(f"At {place}; {found['baseline_level_db']:.1f} {unit} re 20 µPa without any measure. {_MEANING}")
     yield tag("h3", "Options: the best sets within the limits, and what a full solution says")
-    sets = ("set", f"predicted [{unit}]", f"verified [{unit}]", "mass [kg]", "cost [EUR]")
-    yield table(sets, [_choice(item) for item in found["choices"]])
-    yield note(f"Limits: {_limits(found['limits'])}. How the sets were found: {found['how']}.")
+    drawn = ("80 % of the draws", "place") if found["samples"] else ()
+    sets = ("set", f"predicted [{unit}]", f"verified [{unit}]", *drawn[:1], "mass [kg]", "cost [EUR]")
+    yield table(sets, [_choice(item, len(drawn[:1])) for item in found["choices"]])
+    yield note(f"Limits: {_limits(found['limits'])}. How the sets were found: {found['how']}. {_stability(found)}")
     yield tag("h3", "Quieten: the panel's velocity lowered, nothing else changed")
-    rows = [(m["panel"], _gets(m["gain_db"]), f"{m['cut_db']:g}", signed(m["gain_db"])) for m in found["quieten"]]
-    yield table(("panel", "it gets", "cut of velocity [dB]", f"gain [{unit}]"), rows, words=2)
+    rows = [
+        (m["panel"], _gets(m["gain_db"]), f"{m['cut_db']:g}", signed(m["gain_db"]), *_drawn(m)[: len(drawn)])
+        for m in found["quieten"]
+    ]
+    yield table(("panel", "it gets", "cut of velocity [dB]", f"gain [{unit}]", *drawn), rows, words=2)
     yield tag("h3", "Treat: each treatment where it may go")
-    header = ("measure", "it gets", f"gain [{unit}]", "mass [kg]", "cost [EUR]", "dB per kg", "dB per EUR")
-    yield table(header, [_treated(item) for item in found["treat"]], words=2)
+    header = ("measure", "it gets", f"gain [{unit}]", *drawn, "mass [kg]", "cost [EUR]", "dB per kg", "dB per EUR")
+    yield table(header, [_treated(item, len(drawn)) for item in found["treat"]], words=2)
 
 
-def _choice(item: Tree) -> tuple[str, ...]:
+def _choice(item: Tree, drawn: int) -> tuple[str, ...]:
     predicted, checked = item["predicted_gain_db"], item["verified_gain_db"]
     said = "not solved again" if checked is None else f"{signed(checked)} (off by {abs(predicted - checked):.3f})"
     what = " + ".join(item["measures"]) or "nothing"
-    return what, signed(predicted), said, f"{item['mass_kg']:.1f}", f"{item['cost_eur']:.0f}"
+    return what, signed(predicted), said, *_drawn(item)[:drawn], f"{item['mass_kg']:.1f}", f"{item['cost_eur']:.0f}"
 
 
-def _treated(item: Tree) -> tuple[str, ...]:
+def _treated(item: Tree, drawn: int) -> tuple[str, ...]:
     per = (
         "–" if item[key] is None else f"{item[key]:.{digits}f}" for key, digits in (("gain_per_kg", 2), ("gain_per_eur", 3))
     )
-    head = item["measure"], _gets(item["gain_db"]), signed(item["gain_db"])
+    head = item["measure"], _gets(item["gain_db"]), signed(item["gain_db"]), *_drawn(item)[:drawn]
     return *head, f"{item['mass_kg']:.1f}", f"{item['cost_eur']:.0f}", *per
+
+
+def _drawn(item: Tree) -> tuple[str, str]:
+    """Gains and places of the middle 80 % of the draws."""
+    gains, places = item["gain_80_percent_db"], item.get("places_80_percent")
+    if gains is None:
+        return "–", "–"
+    low, high = places or ("–", "–")
+    return f"{signed(gains[0])} … {signed(gains[1])}", f"{low}" if low == high else f"{low} to {high}"
+
+
+def _stability(found: Tree) -> str:
+    """What the draws say of the choice and of the level."""
+    if not found["samples"]:
+        return "What is not known exactly was not sampled."
+    low, high = found["baseline_80_percent_db"]
+    return (
+        f"In {found['samples']} draws of what is not known exactly the first set stayed first of those solved again in "
+        f"{100 * found['choice_stays_first']:.0f} %; the middle 80 % of the levels without any measure lie from {low:.1f} to "
+        f"{high:.1f} dB."
+    )
 
 
 def _gets(gain: float) -> str:

@@ -190,7 +190,7 @@ def _treated() -> tuple[Result, dict[str, Any]]:
     lines = np.arange(60.0, 240.1, 5.0)
     sweep = case.sweep.with_(frequencies=lines, method="reduced", field_frequencies=np.empty(0))
     result = solve(case.with_(catalogue=(foam, cut), sweep=sweep))
-    return result, tree_of(study(result, limits=Limits(cost=10.0, panels=2)))
+    return result, tree_of(study(result, limits=Limits(cost=10.0, panels=2), samples=5))
 
 
 def test_a_study_stands_in_the_page(rendering: None) -> None:
@@ -203,6 +203,9 @@ def test_a_study_stands_in_the_page(rendering: None) -> None:
         assert f"<td>{item['measure']}</td>" in text
     gets = ["LOUDER" if item["gain_db"] < -0.005 else "quieter" for item in (*found["treat"], *found["quieten"])]
     assert text.count("<td>LOUDER</td>") == gets.count("LOUDER")
+    assert "In 5 draws of what is not known exactly" in text and "<th>80 % of the draws</th>" in text
+    unsampled = treatments.section(Review(result), tree_of(study(result, samples=0, verify=False)))
+    assert "was not sampled" in unsampled and "80 % of the draws" not in unsampled
     assert "cost 10.0" in text and "Not computed." not in treatments.section(Review(result), found)
 
 

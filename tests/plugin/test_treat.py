@@ -54,6 +54,11 @@ def _study() -> Study:
     return study(_result())
 
 
+@cache
+def _drawn() -> Study:
+    return study(_result(), samples=12, verify=False)
+
+
 def test_both_rankings_are_kept_apart_and_sorted() -> None:
     found = _study()
     assert [m.panel for m in found.treat].count("x0") == 1 and {m.panel for m in found.quieten} == {"x0", "x1", "z0"}
@@ -136,6 +141,28 @@ def test_the_option_table_holds_every_measure_and_choice(tmp_path: Path) -> None
     assert [bool(row["verified_db"]) for row in choices[:4]] == [True, True, True, False]
 
 
+def test_draws_say_how_stable_every_gain_and_place_is(tmp_path: Path) -> None:
+    found = _drawn()
+    for measures in (found.quieten, found.treat):
+        places = [m.places for m in measures if m.places]
+        assert len(places) == len(measures) and all(1 <= low <= high <= len(measures) for low, high in places)
+        assert all(m.spread and m.spread[0] <= m.spread[1] for m in measures)
+        assert any(m.spread and m.spread[1] - m.spread[0] > 0.05 for m in measures)
+    path = EXPORTS["options_csv"].make(found, tmp_path / "options.csv")
+    rows = list(csv.DictReader(line for line in path.read_text("ascii").splitlines() if not line.startswith("#")))
+    best = found.treat[0]
+    row = next(row for row in rows if row["measure"] == best.name)
+    assert best.spread and (float(row["gain_low_db"]), float(row["gain_high_db"])) == pytest.approx(best.spread, abs=0.006)
+    assert (int(row["place_low"]), int(row["place_high"])) == best.places
+    assert next(row for row in rows if row["table"] == "choice")["gain_low_db"]
+    held = tree(found)["treat"][0]
+    assert held["places_80_percent"] == best.places and held["gain_80_percent_db"] == pytest.approx(best.spread, abs=1e-3)
+    words = treat_command.text(found)
+    assert "80 % of draws" in words and "SPREAD over 12 draws" in words and "80 % of draws" not in treat_command.text(_study())
+    lines = sum(len(axes.collections) for axes in two_rankings.figure(found).axes)
+    assert lines == len(found.quieten) + len(found.treat)
+
+
 def test_the_tree_is_plain_json() -> None:
     held = json.loads(json.dumps(tree(_study()), allow_nan=False))
     assert held["limits"] == {"mass": 1.8} and held["case_checksum"] == _result().case.checksum
@@ -176,7 +203,20 @@ def test_both_rankings_share_one_scale_in_the_picture() -> None:
 
 def test_treat_writes_its_tables_and_pictures(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     write_result(_result(), tmp_path / "r.h5")
-    status = main(["treat", str(tmp_path / "r.h5"), str(tmp_path / "out"), "--panels", "2", "--exclude", "z*", "--json"])
+    status = main(
+        [
+            "treat",
+            str(tmp_path / "r.h5"),
+            str(tmp_path / "out"),
+            "--panels",
+            "2",
+            "--exclude",
+            "z*",
+            "--samples",
+            "2",
+            "--json",
+        ]
+    )
     held = json.loads(capsys.readouterr().out)
     assert status == (0 if rendering_missing() is None else 2)
     assert held["limits"] == {"mass": 1.8, "panels": 2, "exclude": ["z*"]}
@@ -187,7 +227,7 @@ def test_treat_writes_its_tables_and_pictures(tmp_path: Path, capsys: pytest.Cap
 
 def test_treat_prints_both_rankings_the_choice_and_cautions(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     write_result(_result(), tmp_path / "r.h5")
-    assert main(["treat", str(tmp_path / "r.h5"), "--mass", "0", "--unverified"]) == 0
+    assert main(["treat", str(tmp_path / "r.h5"), "--mass", "0", "--unverified", "--samples", "0"]) == 0
     out = capsys.readouterr().out
     assert out.index("QUIETEN") < out.index("TREAT") < out.index("CHOICE within 0 kg") < out.index("Predictions are not")
     assert "nothing" in out.split("CHOICE")[1]  # no mass may be added

@@ -187,15 +187,16 @@ def test_the_sensitivity_of_a05c() -> None:
 
 def test_ranges_of_one_point_have_no_spread() -> None:
     none = Ranges(1.0, 1.0, 1.0, 0.0, 0.0)
-    found = spread(_whatif(), [(0,), (1,)], Goal(), none, 3)
+    found = spread(_whatif(), [[_whatif().act(i)] for i in (0, 1)], Goal(), none, 3)
     assert np.allclose(found.gains, [_whatif().gain((i,), Goal()) for i in (0, 1)], atol=1e-6)
-    assert found.stays_first(int(found.gains[0].argmax())) == 1.0
+    first = int(found.gains[0].argmax())
+    assert found.stays_first() == (first == 0) and found.places()[first] == (1, 1) and found.places()[1 - first] == (2, 2)
 
 
 def test_the_spread_is_that_of_full_solutions() -> None:
     """Flow resistivity alone, twice: its extremes come from full solutions of the changed catalogue."""
     number = next(i for i, o in enumerate(_whatif().options) if (o.panel, o.treatment) == ("z1", "foam"))
-    found = spread(_whatif(), [(number,)], Goal(), Ranges(1.0, 2.0, 1.0, 0.0, 0.0), 40)
+    found = spread(_whatif(), [[_whatif().act(number)]], Goal(), Ranges(1.0, 2.0, 1.0, 0.0, 0.0), 40)
     ends = []
     for factor in (0.5, 1.0, 2.0):
         foam = _catalogue()[0].with_(wall=changed_stack(FOAM, factor, 1.0))
@@ -207,7 +208,7 @@ def test_the_spread_is_that_of_full_solutions() -> None:
 
 def test_damping_moves_levels_and_gains() -> None:
     ranges = Ranges(2.0, 1.0, 1.0, 0.0, 0.0)
-    found = spread(_whatif(), [(0,)], Goal(), ranges, 12)
+    found = spread(_whatif(), [[_whatif().act(0)]], Goal(), ranges, 12)
     ends = []
     for factor in (0.5, 2.0):
         bare = solve(damped_case(_case(), factor))
@@ -221,9 +222,12 @@ def test_damping_moves_levels_and_gains() -> None:
 
 def test_velocity_and_phase_are_drawn_alike_every_time() -> None:
     ranges = Ranges(1.0, 1.0, 1.0, 3.0, 40.0)
-    one, two = (spread(_whatif(), [(0,), (3,)], Goal(), ranges, 20) for _ in range(2))
+    one, two = (spread(_whatif(), [[_whatif().act(i)] for i in (0, 3)], Goal(), ranges, 20) for _ in range(2))
     assert np.array_equal(one.gains, two.gains) and np.std(one.levels) > 0.2
-    assert 0.0 < one.stays_first(0) + one.stays_first(1) <= 1.0
+    ahead = one.gains[:, 0] >= one.gains[:, 1]
+    assert one.stays_first() == np.mean(ahead) and one.stays_first(slice(1, 2)) == 1.0
+    low, high = one.places()[0]
+    assert 1 <= low <= high <= 2 and (low == 1) == (np.mean(ahead) > 0.1)
 
 
 def test_scaled_damping_and_stacks() -> None:
