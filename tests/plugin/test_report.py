@@ -203,7 +203,7 @@ def test_a_study_stands_in_the_page(rendering: None) -> None:
         assert f"<td>{item['measure']}</td>" in text
     gets = ["LOUDER" if item["gain_db"] < -0.005 else "quieter" for item in (*found["treat"], *found["quieten"])]
     assert text.count("<td>LOUDER</td>") == gets.count("LOUDER")
-    assert "In 5 draws of what is not known exactly" in text and "<th>80 % of the draws</th>" in text
+    assert "In 5 draws of what is not known exactly" in text and "80 % of the draws" in text
     unsampled = treatments.section(Review(result), tree_of(study(result, samples=0, verify=False)))
     assert "was not sampled" in unsampled and "80 % of the draws" not in unsampled
     assert "cost 10.0" in text and "Not computed." not in treatments.section(Review(result), found)
