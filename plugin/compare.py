@@ -21,6 +21,7 @@ from murmesh.plugin.summary import Levels, levels
 from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import Band
 from murmesh.solver.orders import orders_text
+from murmesh.solver.radiation import mean_square, places
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
@@ -37,6 +38,8 @@ class Pair:
 
     before: Levels
     after: Levels
+    loss: Floats | None = None
+    """Insertion loss (nf,) [dB] line by line, before less after; None where the sweeps differ."""
 
     @property
     def receiver(self) -> str:
@@ -104,7 +107,8 @@ def compare(before: Result, after: Result, weighting: str = "A") -> Comparison:
                 f"receiver '{receiver}' in load case '{name}' is not in the result '{missing[0]}': no change shown"
             )
             continue
-        pair = Pair(levels(before, receiver, name, weighting), levels(after, receiver, name, weighting))
+        loss = insertion_loss(before, after, receiver, name) if _same_lines(before, after) else None
+        pair = Pair(levels(before, receiver, name, weighting), levels(after, receiver, name, weighting), loss)
         if pair.before.spectrum != pair.after.spectrum:
             left_out.append(f"load case '{name}' holds tones in one result and a density in the other: no change shown")
         else:
@@ -114,7 +118,7 @@ def compare(before: Result, after: Result, weighting: str = "A") -> Comparison:
             "the two results share no receiver and load case of one kind, so no levels can be compared; "
             f"before has {_list(before)}, after has {_list(after)}: give them the same names"
         )
-    if len(before.frequencies) != len(after.frequencies) or not np.allclose(before.frequencies, after.frequencies):
+    if not _same_lines(before, after):
         left_out.append("the sweeps differ: bands hold what each sweep covers of them, so levels may differ for that alone")
     order = {place: i for i, place in enumerate(_places(before))}
     pairs.sort(key=lambda pair: order[pair.load_case, pair.receiver])
@@ -122,7 +126,24 @@ def compare(before: Result, after: Result, weighting: str = "A") -> Comparison:
 
 
 def _places(result: Result) -> dict[tuple[str, str], None]:
-    return {(held.name, receiver.name): None for held in result.load_cases for receiver in result.case.receivers}
+    return {(held.name, place): None for held in result.load_cases for place in places(result)}
+
+
+def _same_lines(before: Result, after: Result) -> bool:
+    return len(before.frequencies) == len(after.frequencies) and np.allclose(before.frequencies, after.frequencies)
+
+
+def insertion_loss(without: Result, with_: Result, place: str, load_case: str = "") -> Floats:
+    """Level without less level with a measure (nf,) [dB], at a receiver or of a radiated power; nan where either is silent.
+
+    Raises: ResultError where the sweeps differ, or the place is not in both.
+    """
+    if not _same_lines(without, with_):
+        raise ResultError("the two sweeps differ, so there is no insertion loss line by line; solve both on the same lines")
+    squares = [mean_square(result, place, load_case) for result in (without, with_)]
+    heard = (squares[0] > 0) & (squares[1] > 0)
+    old, new = (np.where(heard, square, 1.0) for square in squares)
+    return np.where(heard, 10 * np.log10(old / new), np.nan)
 
 
 def _list(result: Result) -> str:
@@ -167,6 +188,19 @@ def write_json(found: Comparison, path: Path) -> Path:
     """Write `comparison_tree`."""
     with written(path) as scratch:
         scratch.write_text(json.dumps(comparison_tree(found), indent=1, allow_nan=False) + "\n", encoding="utf-8")
+    return Path(path)
+
+
+def write_losses(found: Comparison, path: Path) -> Path:
+    """Write the insertion loss line by line, one row per load case, place and frequency."""
+    with written(path) as scratch, scratch.open("w", newline="", encoding="utf-8") as stream:
+        for remark in (*found.remarks, "insertion loss: level before less level after [dB], positive is quieter"):
+            stream.write(f"# {plain(' '.join(remark.split()))}\n")
+        table = csv.writer(stream, lineterminator="\n")
+        table.writerow(("load_case", "receiver", "frequency_hz", "insertion_loss_db"))
+        for pair in found.pairs:
+            for f, loss in zip(found.before.frequencies, () if pair.loss is None else pair.loss, strict=False):
+                table.writerow((pair.load_case, pair.receiver, f"{f:.8g}", f"{loss:.3f}" if np.isfinite(loss) else ""))
     return Path(path)
 
 

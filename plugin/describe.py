@@ -28,10 +28,11 @@ def plain(text: str) -> str:
     return text.replace("  ", " ")
 
 
-def level_unit(weighting: str = "Z", density: bool = False) -> str:
-    """The unit of a level, with weighting, reference and (for a density) the bandwidth it holds in."""
+def level_unit(weighting: str = "Z", density: bool = False, power: bool = False) -> str:
+    """The unit of a level, of sound pressure or of sound power, with weighting, reference and (for a density) the bandwidth
+    it holds in."""
     unit = f"dB({weighting})" if weighting in ("A", "C") else "dB"
-    return f"{unit} re 20 µPa" + (" per Hz" if density else "")
+    return f"{unit} re {'1 pW' if power else '20 µPa'}" + (" per Hz" if density else "")
 
 
 def is_density(result: Result, load_case: str = "") -> bool:

@@ -8,6 +8,7 @@ import numpy as np
 import numpy.typing as npt
 
 from murmesh.solver.levels import Band, band_energy, level, overall_energy, third_octaves
+from murmesh.solver.radiation import is_power, mean_square, places
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
@@ -34,7 +35,8 @@ class Bars:
 
 @dataclass(frozen=True, eq=False)
 class Levels:
-    """Levels [dB re 20 uPa, rms] at one receiver for one load case; -inf where nothing falls into a band."""
+    """Levels [dB re 20 uPa, rms] at one receiver, or of a radiated power [dB re 1 pW], for one load case; -inf where nothing
+    falls into a band."""
 
     receiver: str
     load_case: str
@@ -49,13 +51,20 @@ class Levels:
     @property
     def unit(self) -> str:
         """The unit of the levels, with weighting and reference."""
-        return f"dB({self.weighting}) re 20 uPa" if self.weighting != "Z" else "dB re 20 uPa"
+        unit = f"dB({self.weighting})" if self.weighting != "Z" else "dB"
+        return f"{unit} re {'1 pW' if self.power else '20 uPa'}"
+
+    @property
+    def power(self) -> bool:
+        """Whether these are levels of a sound power."""
+        return is_power(self.receiver)
 
 
 def levels(result: Result, receiver: str, load_case: str = "", weighting: str = "A", other: Floats | None = None) -> Levels:
-    """Overall and third-octave levels at a receiver; or those of another mean square (nf,) there, which has no error bar."""
+    """Overall and third-octave levels at a receiver or of a radiated power; or those of another mean square (nf,) there, which
+    has no error bar."""
     held = result.load_case_of(load_case)
-    square = result.mean_square(receiver, load_case) if other is None else other
+    square = mean_square(result, receiver, load_case) if other is None else other
     f = result.frequencies
     # a tone belongs to the band it lies in, so the outermost bands need not be covered whole
     bands = third_octaves(float(f[0]), float(f[-1]))
@@ -66,8 +75,9 @@ def levels(result: Result, receiver: str, load_case: str = "", weighting: str = 
         return float(level(overall_energy(f, squares, held.spectrum, weighting))), np.asarray(level(energy))
 
     overall, found = read(square)
-    bar, corrected = result.mesh_bar(receiver, load_case), result.corrected(receiver, load_case)
-    bars = None
+    bar, corrected, bars = None, None, None
+    if not is_power(receiver):
+        bar, corrected = result.mesh_bar(receiver, load_case), result.corrected(receiver, load_case)
     if other is None and bar is not None and corrected is not None:
         high, high_bands = read(square * 10 ** (bar / 10))
         heard = np.isfinite(found)
@@ -77,9 +87,9 @@ def levels(result: Result, receiver: str, load_case: str = "", weighting: str = 
 
 
 def all_levels(result: Result, weighting: str = "A", load_case: str = "") -> list[Levels]:
-    """Levels of every receiver, for one load case or (without a name) for all."""
+    """Levels of every receiver and of what is radiated, for one load case or (without a name) for all."""
     names = [load_case] if load_case else [held.name for held in result.load_cases]
-    return [levels(result, receiver.name, name, weighting) for name in names for receiver in result.case.receivers]
+    return [levels(result, place, name, weighting) for name in names for place in places(result)]
 
 
 def shown(value: float, bar: float = float("nan")) -> str:

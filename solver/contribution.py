@@ -4,6 +4,8 @@
     own_i     = (1/2) G_ii |p_i|^2                     the panel alone
     removal_i = 10 lg( mean square without i / mean square )
 
+A place is a receiver or a radiated power (`radiation`), whose p_i conj(p_j) is the power's Hermitian form.
+
 For coherent loads share_i / total is the signed share Re(p_i conj p) / |p|^2. A ranking by these numbers tells what
 *quietening* a panel (lowering its velocity) is worth; it does not tell where an absorber helps.
 """
@@ -18,6 +20,7 @@ import numpy.typing as npt
 
 from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import Band, band_energy, level
+from murmesh.solver.radiation import is_power, mean_square, pair_squares
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
@@ -32,7 +35,7 @@ QUIETENING = (
 
 @dataclass(frozen=True, eq=False)
 class Participation:
-    """Mean squares at one receiver [Pa2, or Pa2/Hz for a density]: (nf, loads), and the total (nf,)."""
+    """Mean squares at one place [Pa2, or Pa2/Hz for a density]: (nf, loads), and the total (nf,)."""
 
     receiver: str
     load_case: str
@@ -85,11 +88,21 @@ class Ranking:
     load_case: str
     words: str = QUIETENING
 
+    @property
+    def power(self) -> bool:
+        """Whether it ranks shares of a sound power; levels are then re 1 pW."""
+        return is_power(self.receivers[0])
+
+    @property
+    def what(self) -> str:
+        """What the shares are of."""
+        return "power" if self.power else "mean square"
+
 
 def participation(result: Result, receiver: str, load_case: str = "") -> Participation:
-    """Participation of every load at one receiver."""
+    """Participation of every load at one receiver, or in a radiated power."""
     held = result.load_case(load_case)
-    pairs = result.pair_squares(receiver, load_case)
+    pairs = pair_squares(result, receiver, load_case)
     shares, own = pairs.sum(axis=2), np.einsum("fii->fi", pairs).copy()
     total = _total(result, receiver, load_case)
     without = total[:, None] - 2 * shares + own
@@ -98,6 +111,8 @@ def participation(result: Result, receiver: str, load_case: str = "") -> Partici
 
 def _total(result: Result, receiver: str, load_case: str) -> Floats:
     """The mean square from the summed pressure itself, so that the shares' closure is a real check."""
+    if is_power(receiver):
+        return mean_square(result, receiver, load_case)
     held, index = result.load_case(load_case), result.samples(receiver)
     case = result.load_case_of(load_case)
     mix = case.combination.factors(result.frequencies, len(held.loads))
@@ -113,11 +128,14 @@ def rank(
     weighting: str = "A",
     load_case: str = "",
 ) -> Ranking:
-    """Rank the loads of a load case by their share of the band energy, summed over `receivers` (empty: all of them).
+    """Rank the loads of a load case by their share of the band energy, summed over `receivers` (empty: all of them), or by
+    their share of a radiated power, which stands alone.
 
     `band` is (lower, upper) [Hz], the whole sweep if None; `weighting` is "A", "C" or "Z".
     """
     names = tuple(receivers) or tuple(receiver.name for receiver in result.case.receivers)
+    if any(map(is_power, names)) and len(names) > 1:
+        raise ResultError(f"a sound power and levels at receivers cannot be added: {', '.join(names)}; rank them one by one")
     if not names:
         raise ResultError("the case has no receiver, so nothing can be ranked; add a receiver and solve again")
     low, high = band or (float(result.frequencies[0]), float(result.frequencies[-1]))

@@ -162,7 +162,7 @@ class Result:
         if not held.mesh_error.size:
             return None
         square = 0.5 * self._weighted(receiver, self._pressures(held) + held.mesh_error)
-        return np.asarray(square / self._bandwidth(load_case))
+        return np.asarray(square / self.bandwidth(load_case))
 
     @property
     def mesh_error_db(self) -> float | None:
@@ -199,16 +199,17 @@ class Result:
         held, index = self.load_case(load_case), self.samples(receiver)
         p, g = held.contributions[:, index], self.combination(load_case)
         pairs = np.real(p * np.einsum("fij,fsj->fsi", g, p.conj()))
-        return np.asarray(0.5 * np.einsum("s,fsi->fi", self.sample_weight[index], pairs) / self._bandwidth(load_case))
+        return np.asarray(0.5 * np.einsum("s,fsi->fi", self.sample_weight[index], pairs) / self.bandwidth(load_case))
 
     def pair_squares(self, receiver: str, load_case: str = "") -> Floats:
         """Re of the terms (1/2) G_ij p_i conj(p_j), averaged over samples: (nf, loads, loads)."""
         held, index = self.load_case(load_case), self.samples(receiver)
         p, g = held.contributions[:, index], self.combination(load_case)
         mean = np.einsum("s,fsi,fsj->fij", self.sample_weight[index], p, p.conj())
-        return np.asarray(0.5 * np.real(g * mean) / self._bandwidth(load_case))
+        return np.asarray(0.5 * np.real(g * mean) / self.bandwidth(load_case))
 
-    def _bandwidth(self, load_case: str) -> float:
+    def bandwidth(self, load_case: str = "") -> float:
+        """What mean squares of a load case are divided by: the bandwidth [Hz] of a density, 1 for tones."""
         case = self.load_case_of(load_case)
         return case.bandwidth if case.spectrum == "density" else 1.0
 
@@ -276,12 +277,13 @@ class Result:
 
     def model_line(self, frequency: float) -> Line:
         """A line of the band, evaluated from the model without the solver; ResultError where there is no model."""
-        if self._engine is None:
+        if self.engine is None:
             raise ResultError("the result holds no reduced model, only solved lines; solve it with the method 'reduced'")
-        return self._engine.line(self._engine.system.values(np.array([frequency]))[0])
+        return self.engine.line(self.engine.system.values(np.array([frequency]))[0])
 
     @cached_property
-    def _engine(self) -> Engine | None:
+    def engine(self) -> Engine | None:
+        """The reduced model, ready for any line of the band; None where there is none."""
         if self.model is None:
             return None
         system = build_system(self.space, locate_receivers(self.case, self.space.geometry))

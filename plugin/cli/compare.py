@@ -6,7 +6,7 @@ import argparse
 from pathlib import Path
 
 from murmesh.plugin.cli.command import DONE, Command, answer, answer_json, register, table
-from murmesh.plugin.compare import Comparison, Pair, compare, comparison_tree, write_csv, write_json
+from murmesh.plugin.compare import Comparison, Pair, compare, comparison_tree, write_csv, write_json, write_losses
 from murmesh.plugin.describe import plain
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.summary import shown
@@ -16,7 +16,7 @@ from murmesh.solver.result import read_result
 def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("before", help="result file")
     parser.add_argument("after", help="result file")
-    parser.add_argument("folder", nargs="?", help="folder for comparison.png, .csv and .json (default: none are written)")
+    parser.add_argument("folder", nargs="?", help="folder for tables and pictures (default: none are written)")
     parser.add_argument("--weighting", choices=("A", "C", "Z"), default="A", help="frequency weighting (default A)")
     parser.add_argument("--json", action="store_true", help="print JSON")
 
@@ -37,6 +37,9 @@ def _write(found: Comparison, folder: Path) -> None:
     write_csv(found, folder / "comparison.csv")
     write_json(found, folder / "comparison.json")
     PICTURES["comparison"].make(found, folder / "comparison.png")
+    if any(pair.loss is not None for pair in found.pairs):
+        write_losses(found, folder / "insertion_loss.csv")
+        PICTURES["insertion_loss"].make(found, folder / "insertion_loss.png")
 
 
 def text(found: Comparison) -> str:
@@ -60,7 +63,7 @@ def _levels(pair: Pair) -> str:
 register(
     Command(
         "compare",
-        "Compare two results: what changed in the case, and by how many dB at every receiver.",
+        "Compare two results: what changed in the case, by how many dB at every receiver, and the insertion loss.",
         "  murmesh compare bare_result.h5 lined_result.h5 comparison",
         arguments,
         run,

@@ -25,11 +25,11 @@ def write(
 ) -> Path:
     """Write one row per panel, the largest share first."""
     ranking = rank(result, receivers, band, weighting, load_case)
-    unit = level_unit(weighting)
+    unit = level_unit(weighting, power=ranking.power)
     remarks = (
         f"receivers: {', '.join(ranking.receivers)}; band {band_words(ranking.band)}; load case '{ranking.load_case}'; "
         f"mean level {number(ranking.total_db)} {unit}",
-        f"share_percent: part of the mean square, adding up to 100 (closure {ranking.closure:.0e}); alone_db: {unit}; "
+        f"share_percent: part of the {ranking.what}, adding up to 100 (closure {ranking.closure:.0e}); alone_db: {unit}; "
         "if_silent_db: change of level if the panel were silent",
         ranking.words,
     )

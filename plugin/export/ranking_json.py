@@ -52,7 +52,7 @@ def ranking_tree(ranking: Ranking) -> dict[str, object]:
         "receivers": list(ranking.receivers),
         "load_case": ranking.load_case,
         "band_hz": list(ranking.band),
-        "unit": plain(level_unit(ranking.weighting)),
+        "unit": plain(level_unit(ranking.weighting, power=ranking.power)),
         "level_db": decibels(ranking.total_db),
         "closure": ranking.closure,
         "panels": rows,

@@ -65,7 +65,7 @@ def _levels(axes: Axes, pair: Pair, top: float, *, legend: bool) -> None:
     axes.grid(True, axis="y")
     axes.set_axisbelow(True)
     axes.set_xlabel("overall, and third octaves [Hz]")
-    axes.set_ylabel(f"level [{level_unit(pair.before.weighting)}]", fontsize=9.5)
+    axes.set_ylabel(f"level [{level_unit(pair.before.weighting, power=pair.before.power)}]", fontsize=9.5)
     axes.set_title(f"{pair.receiver}, {pair.load_case} ({pair.before.spectrum})", loc="left", fontweight="bold", fontsize=12)
     if legend:
         axes.legend(loc="upper right", ncols=2, bbox_to_anchor=(1.0, 1.17), borderaxespad=0.0)

@@ -58,13 +58,14 @@ def figure(
     """The figure, for further work."""
     ranking = rank(result, receivers, band, weighting, load_case)
     sheet = page(
-        "Which panel to quieten: shares of the mean square",
+        f"Which panel to quieten: shares of the {ranking.what}",
         ranking_facts(result, ranking),
         [*ranking_notes(ranking), _columns_note(ranking), f"Convention: {CONVENTION}. {origin(result)}."],
         len(ranking.rows) * _BAR + 1.2,
     )
     axes = sheet.axes(2.35, 0.75, sheet.width - 2.35 - 2.8, len(ranking.rows) * _BAR)
     _bars(axes, ranking)
+    axes.set_xlabel(f"share of the {ranking.what} [%]")
     _table(axes, ranking)
     handles = [Patch(label="raises the level", **_UP), Patch(label="lowers the level", **_DOWN)]  # type: ignore[arg-type]
     axes.legend(handles=handles, loc="lower left", bbox_to_anchor=(0.0, 1.0), ncols=2, borderaxespad=0.4)
@@ -77,7 +78,7 @@ def ranking_facts(result: Result, ranking: Ranking) -> list[str]:
     what = "mean over " if len(ranking.receivers) > 1 else ""
     return [
         f"{what}{names(ranking.receivers)} · {band_words(ranking.band)} · {WEIGHTING[ranking.weighting]} · "
-        f"{number(ranking.total_db)} {level_unit(ranking.weighting)}",
+        f"{number(ranking.total_db)} {level_unit(ranking.weighting, power=ranking.power)}",
         load_case_words(case),
     ]
 
@@ -87,15 +88,13 @@ def ranking_notes(ranking: Ranking) -> list[str]:
     total = 100 * sum(row.share for row in ranking.rows)
     return [
         ranking.words,
-        f"The shares add up to {total:.1f} % of the mean square (to within {max(ranking.closure, 1e-16):.0e}).",
+        f"The shares add up to {total:.1f} % of the {ranking.what} (to within {max(ranking.closure, 1e-16):.0e}).",
     ]
 
 
 def _columns_note(ranking: Ranking) -> str:
-    return (
-        f"“alone”: level of the panel by itself, {level_unit(ranking.weighting)}; “if silent”: change of the level if "
-        "the panel did not move."
-    )
+    unit = level_unit(ranking.weighting, power=ranking.power)
+    return f"“alone”: level of the panel by itself, {unit}; “if silent”: change of the level if the panel did not move."
 
 
 def _bars(axes: Axes, ranking: Ranking) -> None:
@@ -111,7 +110,6 @@ def _bars(axes: Axes, ranking: Ranking) -> None:
     axes.grid(True, axis="x")
     axes.set_axisbelow(True)
     axes.spines["left"].set_visible(False)
-    axes.set_xlabel("share of the mean square [%]")
 
 
 def _table(axes: Axes, ranking: Ranking) -> None:

@@ -141,7 +141,7 @@ def _narrow(
     axes.grid(True, axis="both")
     axes.set_axisbelow(True)
     axes.set_xlabel("frequency [Hz]")
-    axes.set_ylabel(f"level [{level_unit(item.weighting, density)}]", fontsize=9.5)
+    axes.set_ylabel(f"level [{level_unit(item.weighting, density, item.power)}]", fontsize=9.5)
     axes.set_title(item.receiver, loc="left", fontweight="bold", fontsize=12)
 
 
@@ -172,7 +172,7 @@ def _bands(sheet: Page, up: float, item: Levels, scale: tuple[float, float]) -> 
     axes.grid(True, axis="y")
     axes.set_axisbelow(True)
     axes.set_xlabel("third octave [Hz]")
-    axes.set_ylabel(f"band level [{level_unit(item.weighting)}]", fontsize=9.5)
+    axes.set_ylabel(f"band level [{level_unit(item.weighting, power=item.power)}]", fontsize=9.5)
     bar = item.bars.overall if item.bars else float("nan")
     overall = f"overall {shown(item.overall, bar)} {level_unit(item.weighting).split(' re ')[0]}, inside the sweep"
     axes.set_title(overall, loc="left", fontsize=11)

@@ -138,6 +138,8 @@ def test_the_command_prints_and_writes(tmp_path: Path, capsys: pytest.CaptureFix
     assert main(["compare", str(tmp_path / "a.h5"), str(tmp_path / "b.h5"), str(tmp_path / "out")]) == 0
     out = capsys.readouterr().out
     assert "Changed in the case:" in out and "-6.0" in out and "re 20 uPa" in out
-    assert {p.name for p in (tmp_path / "out").iterdir()} == {"comparison.png", "comparison.csv", "comparison.json"}
+    assert {p.name for p in (tmp_path / "out").iterdir()} == {
+        "comparison.png", "comparison.csv", "comparison.json", "insertion_loss.csv", "insertion_loss.png"
+    }  # fmt: skip
     assert main(["compare", str(tmp_path / "a.h5"), str(tmp_path / "b.h5"), "--json"]) == 0
     assert len(json.loads(capsys.readouterr().out)["receivers"]) == 4
