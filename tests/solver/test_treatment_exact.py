@@ -1,0 +1,438 @@
+"""Treatments through what-ifs and full solutions, against published values and one-dimensional fields in closed form.
+
+The panel under treatment is an end of a duct, bare in the baseline: every treatment of the catalogue is predicted from the
+tables of that one baseline and solved again as `treated_case`. Sources: headers of the files in tests/references.
+"""
+
+from __future__ import annotations
+
+import ast
+import re
+from collections.abc import Iterable, Mapping, Sequence
+from functools import reduce
+
+import numpy as np
+import numpy.typing as npt
+import pytest
+from scipy.linalg import expm
+
+from cases import AIR, case_of
+from meshes import box
+from murmesh.solver.case.boundary import Boundary, Port, Vibrating
+from murmesh.solver.case.catalogue import Treatment
+from murmesh.solver.case.load import IncomingWave, Load, SurfaceVelocity
+from murmesh.solver.case.medium import GivenFluid, LossFactor, NoDamping
+from murmesh.solver.case.motion import Uniform
+from murmesh.solver.case.porous import DelanyBazley, JohnsonChampouxAllard, Miki
+from murmesh.solver.case.spectrum import Table
+from murmesh.solver.case.wall import (
+    Absorption,
+    AirGap,
+    Given,
+    Layers,
+    LimpMass,
+    MassSpringDamper,
+    PerforatedFacing,
+    PorousLayer,
+    Resonator,
+    Screen,
+    WallLaw,
+)
+from murmesh.solver.levels import A_weighting
+from murmesh.solver.result import Result
+from murmesh.solver.sweep import solve
+from murmesh.solver.treatment import Goal, WhatIf, treated_case, verified
+from reading import FOLDER, read_csv_reference
+
+Complex = npt.NDArray[np.complex128]
+Floats = npt.NDArray[np.float64]
+End = tuple[complex | Complex, complex | Complex]
+"""Y and v_s of an end that takes in v_n = v_s + Y p, both along the outward normal."""
+
+SIDE = 0.05
+AIR_D = GivenFluid(density=1.205, speed=343.0)
+"""The air of the references D01, D04 and D06."""
+LINES = read_csv_reference("D04_mpp_maa_fig5.csv")["f"]
+
+
+# --- a duct, its what-ifs and its full solutions ---------------------------------------------------------------------
+
+
+def _duct(
+    length: float,
+    lines: Sequence[float] | Floats,
+    catalogue: Iterable[Treatment],
+    drives: Mapping[str, complex],
+    places: Sequence[float],
+    *,
+    kinds: Mapping[str, Boundary] | None = None,
+    loads: Sequence[Load] = (),
+    air: GivenFluid = AIR,
+    eta: float = 0.0,
+    order: int = 6,
+    method: str = "auto",
+) -> WhatIf:
+    """What-ifs of a duct along x whose driven ends move along their outward normals [m/s]; receivers on the axis."""
+    moving = [SurfaceVelocity(name, Uniform(complex(v), positive="out_of_fluid")) for name, v in drives.items()]
+    case = case_of(
+        box(max(4, round(2.5 * length * max(lines) / air.speed)), 1, 1, (length, SIDE, SIDE)),
+        {name: Vibrating() for name in drives} | dict(kinds or {}), [*moving, *loads], set(lines),
+        {str(i): (x, SIDE / 2, SIDE / 2) for i, x in enumerate(places)}, medium=air,
+        damping=LossFactor(eta) if eta else NoDamping(), order=order, error_bar=False, method=method,
+    )  # fmt: skip
+    return WhatIf.build(solve(case.with_(catalogue=tuple(catalogue))))
+
+
+def _on(panel: str, **walls: WallLaw) -> list[Treatment]:
+    """A catalogue of walls that may go on one end."""
+    return [Treatment(name, 1.0, 1.0, wall=wall, panels=(panel,)) for name, wall in walls.items()]
+
+
+def _numbers(whatif: WhatIf, *chosen: str) -> list[int]:
+    """Where the options of some treatments, each of which may go on one panel, stand."""
+    return [[option.treatment for option in whatif.options].index(name) for name in chosen]
+
+
+def _full(whatif: WhatIf, *chosen: str) -> Result:
+    return solve(treated_case(whatif.case, [whatif.options[i] for i in _numbers(whatif, *chosen)]))
+
+
+def _predicted(whatif: WhatIf, *chosen: str) -> Complex:
+    """p (nf, receivers) with some treatments in place, from the tables of the baseline."""
+    return whatif.pressures([whatif.changes[i] for i in _numbers(whatif, *chosen)])[:, :, 0]
+
+
+def _both_ways(whatif: WhatIf, *chosen: str) -> tuple[Complex, Complex]:
+    """p (nf, receivers) as predicted, and as solved again."""
+    solved = _full(whatif, *chosen).load_cases[0].contributions.sum(axis=2)
+    return _predicted(whatif, *chosen), np.asarray(solved)
+
+
+def _decibels(found: Complex, exact: Complex) -> float:
+    """The largest difference of level [dB]."""
+    return float(np.abs(20 * np.log10(np.abs(found / exact))).max())
+
+
+# --- one dimension in closed form ------------------------------------------------------------------------------------
+
+
+def _field(x: float, f: Floats, air: GivenFluid, length: float, left: End, right: End, eta: float = 0.0) -> Complex:
+    """p (nf,) at x: p'' + k^2 p = 0 and v = i p'/(w rho) between two ends, k^2 = (w/c)^2 (1 - i eta).
+
+    p = A cos kx + B sin kx; -v = v_0 + Y_0 p at 0 and v = v_1 + Y_1 p at the length are two equations for A and B.
+    """
+    (y0, v0), (y1, v1) = left, right
+    k = 2 * np.pi * f / air.speed * np.sqrt(1 - 1j * eta)
+    s = 1j * k / (2 * np.pi * f * air.density)
+    a, b = -s * np.sin(k * length) - y1 * np.cos(k * length), s * np.cos(k * length) - y1 * np.sin(k * length)
+    determinant = y0 * b - s * a
+    return np.asarray(((-v0 * b - s * v1) * np.cos(k * x) + (y0 * v1 + v0 * a) * np.sin(k * x)) / determinant)
+
+
+def _miki(f: Floats, sigma: float, air: GivenFluid) -> tuple[Complex, Complex]:
+    """rho_e and K_e (nf,) of Miki's law as printed in the header of D01: rho_e = Z_c k/w, K_e = Z_c w/k."""
+    y = f / sigma
+    impedance = air.density * air.speed * (1 + 0.070 * y**-0.632 - 0.107j * y**-0.632)
+    speed = air.speed / (1 + 0.109 * y**-0.618 - 0.160j * y**-0.618)
+    return impedance / speed, impedance * speed
+
+
+def _thick(f: Floats, density: complex | Complex, modulus: complex | Complex, depth: float, frame: float) -> Complex:
+    """(nf, 3, 3): the state [p, v, v_b] in front of a layer from that behind, by the exponential of its equations.
+
+    -p' = i w [rho_e (v - v_f) + rho_0 v_f],  -v' = i w p/K_e,  frame velocity v_f = v_b (`frame` = rho_0: rigid, moving with
+    the backing; Biot, J. Appl. Phys. 33 (1962) 1482) or v_f = 0 (`frame` = 0: at rest, or none).
+    """
+    rate = np.zeros((len(f), 3, 3), dtype=np.complex128)
+    rate[:, 0, 1] = density
+    rate[:, 0, 2] = (frame - np.asarray(density)) if frame else 0.0
+    rate[:, 1, 0] = 1 / np.asarray(modulus)
+    return np.asarray(expm(2j * np.pi * f[:, None, None] * depth * rate))
+
+
+def _thin(f: Floats, impedance: complex | Complex, frame: float) -> Complex:
+    """(nf, 3, 3): v passes, and p in front is higher than behind by Z (v - v_f)."""
+    out = np.tile(np.eye(3, dtype=np.complex128), (len(f), 1, 1))
+    out[:, 0, 1] = impedance
+    out[:, 0, 2] = -impedance if frame else 0.0
+    return out
+
+
+def _closed(layers: Sequence[Complex]) -> tuple[Complex, Complex]:
+    """Y and u (nf,) of layers, front to back, on a backing that moves with v = v_b: v = u v_b + Y p in front."""
+    whole = reduce(np.matmul, layers)
+    admittance = whole[:, 1, 0] / whole[:, 0, 0]
+    return admittance, whole[:, 1, 1] + whole[:, 1, 2] - admittance * (whole[:, 0, 1] + whole[:, 0, 2])
+
+
+def _foam(f: Floats, air: GivenFluid, sigma: float, depth: float, bonded: bool) -> Complex:
+    return _thick(f, *_miki(f, sigma, air), depth, air.density if bonded else 0.0)
+
+
+def _gap(f: Floats, air: GivenFluid, depth: float) -> Complex:
+    return _thick(f, air.density, air.density * air.speed**2, depth, 0.0)
+
+
+def _maa(f: Floats) -> Complex:
+    """Z of the micro-perforated plate of D04, on the lines of D04, from its table."""
+    table = read_csv_reference("D04_mpp_maa_fig5.csv")
+    assert np.array_equal(f, table["f"])
+    return np.asarray(AIR_D.density * AIR_D.speed * (table["r"] + 1j * table["x_plate"]))
+
+
+MAA = PerforatedFacing(0.2e-3, 0.2e-3, np.pi / 4 * (0.2 / 2.5) ** 2)
+STACKS = {
+    "porous": Layers((PorousLayer(Miki(12000.0), 0.05),)),
+    "porous_gap": Layers((PorousLayer(Miki(15000.0), 0.04), AirGap(0.06))),
+    "screen_gap": Layers((Screen(600.0), AirGap(0.08))),
+    "micro_perforated": Layers((MAA, AirGap(0.06))),
+    "faced": Layers((MAA, PorousLayer(Miki(9000.0), 0.03), AirGap(0.03))),
+    "foil": Layers((LimpMass(0.35), PorousLayer(Miki(15000.0), 0.05))),
+    "everything": Layers(
+        (MAA, AirGap(0.01), LimpMass(0.2), PorousLayer(Miki(20000.0), 0.02), Screen(250.0), PorousLayer(Miki(8000.0), 0.03))
+    ),
+}
+
+
+def _in_closed_form(name: str, bonded: bool) -> tuple[Complex, Complex]:
+    """Y and u (nf,) of the stacks above on the lines of D04."""
+    f, air = LINES, AIR_D
+    frame = air.density if bonded else 0.0
+
+    def foam(sigma: float, depth: float) -> Complex:
+        return _foam(f, air, sigma, depth, bonded)
+
+    layers = {
+        "porous": lambda: [foam(12000.0, 0.05)],
+        "porous_gap": lambda: [foam(15000.0, 0.04), _gap(f, air, 0.06)],
+        "screen_gap": lambda: [_thin(f, 600.0, frame), _gap(f, air, 0.08)],
+        "micro_perforated": lambda: [_thin(f, _maa(f), frame), _gap(f, air, 0.06)],
+        "faced": lambda: [_thin(f, _maa(f), frame), foam(9000.0, 0.03), _gap(f, air, 0.03)],
+        "foil": lambda: [_thin(f, 2j * np.pi * f * 0.35, 0.0), foam(15000.0, 0.05)],
+        "everything": lambda: [
+            _thin(f, _maa(f), frame), _gap(f, air, 0.01), _thin(f, 2j * np.pi * f * 0.2, 0.0), foam(20000.0, 0.02),
+            _thin(f, 250.0, frame), foam(8000.0, 0.03),
+        ],
+    }  # fmt: skip
+    return _closed(layers[name]())
+
+
+def test_the_closed_forms_are_the_published_ones() -> None:
+    """A07, K01, D01 (Miki) and A08b, by the equations above."""
+    table = read_csv_reference("A07_moving_treated_wall.csv")
+    for re_, im, f, x, p_re, p_im in zip(*table.values(), strict=True):
+        end = (1 / (AIR.density * AIR.speed * complex(re_, im)), 0.002 * np.exp(0.7j))
+        assert _field(x, np.array([f]), AIR, 1.2, (0, 0), end)[0] == pytest.approx(complex(p_re, p_im), rel=1e-9)
+    table = read_csv_reference("K01_frequency_sweep_miki_duct.csv")
+    foam = (_closed([_foam(table["f"], AIR, 9000.0, 0.06, False)])[0], 0)
+    found = _field(0.37, table["f"], AIR, 2.4, (0, -0.01), foam)
+    assert np.allclose(found, table["p_re"] + 1j * table["p_im"], rtol=1e-9)
+    table = read_csv_reference("D01_delany_bazley_miki_50mm.csv")
+    f, miki = table["f"], table["model"] == "miki"
+    zeta = 1 / (AIR_D.density * AIR_D.speed * _closed([_foam(f, AIR_D, 20000.0, 0.05, False)])[0])
+    assert np.allclose(zeta[miki], (table["zs_re"] + 1j * table["zs_im"])[miki], rtol=1e-9)
+    table = read_csv_reference("A08b_layer_frame_moves_with_wall.csv")
+    for bonded, column in ((True, "moving"), (False, "rest")):
+        y, u = _closed([_foam(table["f_Hz"], AIR, 20000.0, 0.05, bonded)])
+        exact = table[f"{column}_re"] + 1j * table[f"{column}_im"]
+        assert np.allclose(_field(0.0, table["f_Hz"], AIR, 1.15, (0, 0), (y, u * 0.002)), exact, rtol=1e-6)
+
+
+# --- published values ------------------------------------------------------------------------------------------------
+
+
+def test_a_face_on_a_moving_wall_a07() -> None:
+    """Locally reacting faces, at three places and three lines, one of them at a resonance of the bare duct."""
+    table = read_csv_reference("A07_moving_treated_wall.csv")
+    places, given = sorted(set(table["x_m"])), {"soft": 2.0 - 3.0j, "stiff": 0.8 - 6.0j}
+    faces = _on("x1", **{name: Given(zeta, unit="rho_c") for name, zeta in given.items()})
+    whatif = _duct(1.2, sorted(set(table["f_Hz"])), faces, {"x1": 0.002 * np.exp(0.7j)}, places)
+    for name, zeta in given.items():
+        rows = (table["zeta_re"] == zeta.real) & (table["zeta_im"] == zeta.imag)
+        exact = (table["p_re_Pa"] + 1j * table["p_im_Pa"])[rows].reshape(len(whatif.frequencies), len(places))
+        assert np.array_equal(table["f_Hz"][rows], np.repeat(whatif.frequencies, len(places)))
+        for found in _both_ways(whatif, name):
+            assert np.abs(found / exact - 1).max() < 1e-4
+
+
+FORMS = {"auto": "moving", "face": "face", "bonded": "moving", "at_rest": "rest"}
+
+
+def test_three_forms_of_a_layer_on_a_moving_wall_a08_a08b() -> None:
+    """Locally reacting face, bonded frame (the default of a layer), and frame at rest, which is the two-fluid field of A08."""
+    table = read_csv_reference("A08b_layer_frame_moves_with_wall.csv")
+    two_fluids = read_csv_reference("A08_bulk_layer_on_moving_wall.csv")
+    foam = Layers((PorousLayer(Miki(20000.0), 0.05),))
+    forms = [Treatment(frame, 1.0, 1.0, wall=foam, frame=frame, panels=("x1",)) for frame in FORMS]
+    whatif = _duct(1.15, table["f_Hz"], forms, {"x1": 0.002}, [0.0])
+    for frame, column in FORMS.items():
+        exact = table[f"{column}_re"] + 1j * table[f"{column}_im"]
+        for found in _both_ways(whatif, frame):
+            assert np.abs(found[:, 0] / exact - 1).max() < 1e-5, frame
+    exact = two_fluids["p_x0_re"] + 1j * two_fluids["p_x0_im"]
+    assert np.abs(_predicted(whatif, "at_rest")[:, 0] / exact - 1).max() < 1e-5
+
+
+def test_every_line_of_k01() -> None:
+    """881 lines of a layer whose impedance changes with frequency, from the reduced baseline of a lossless duct."""
+    table = read_csv_reference("K01_frequency_sweep_miki_duct.csv")
+    foam = Layers((PorousLayer(Miki(9000.0), 0.06),))
+    whatif = _duct(2.4, table["f"], _on("x1", foam=foam), {"x0": -0.01}, [0.37], method="reduced")
+    for found in _both_ways(whatif, "foam"):
+        levels = 10 * np.log10(0.5 * np.abs(found[:, 0]) ** 2 / 4e-10)
+        assert np.abs(levels - table["Lp_rms_dB"]).max() < 1e-3
+
+
+NEAR, FAR = 0.125, 0.16
+"""Two microphones in front of the sample [m], as in C05."""
+
+
+def _tube(lines: Floats, air: GivenFluid, **walls: WallLaw) -> WhatIf:
+    """An impedance tube: a piston, two microphones, and samples for its bare end."""
+    return _duct(0.31, lines, _on("x1", **walls), {"x0": -0.01}, [0.31 - FAR, 0.31 - NEAR], air=air, order=7)
+
+
+def _measured(p: Complex, f: Floats, air: GivenFluid) -> Complex:
+    """zeta (nf,) from two microphones (ISO 10534-2)."""
+    k, spacing = 2 * np.pi * f / air.speed, FAR - NEAR
+    transfer = p[:, 1] / p[:, 0]
+    reflection = (transfer - np.exp(-1j * k * spacing)) / (np.exp(1j * k * spacing) - transfer) * np.exp(2j * k * FAR)
+    return np.asarray((1 + reflection) / (1 - reflection))
+
+
+def _alpha(zeta: Complex) -> Floats:
+    return np.asarray(1 - np.abs((zeta - 1) / (zeta + 1)) ** 2)
+
+
+def test_absorption_of_one_parameter_laws_d01() -> None:
+    table = read_csv_reference("D01_delany_bazley_miki_50mm.csv")
+    laws = {"miki": Miki(20000.0), "delany_bazley": DelanyBazley(20000.0)}
+    whatif = _tube(np.unique(table["f"]), AIR_D, **{name: Layers((PorousLayer(law, 0.05),)) for name, law in laws.items()})
+    for name in laws:
+        rows = table["model"] == name
+        for found in _both_ways(whatif, name):
+            zeta = _measured(found, whatif.frequencies, AIR_D)
+            assert np.abs(zeta / (table["zs_re"] + 1j * table["zs_im"])[rows] - 1).max() < 1e-5
+            assert np.abs(_alpha(zeta) - table["alpha0"][rows]).max() < 1e-5
+
+
+def test_absorption_of_five_parameter_specimens_d03() -> None:
+    """The reference takes 101325 Pa and uses c = 343 m/s only to write zeta, so the tube holds air of that pressure."""
+    table = read_csv_reference("D03_jca_allard_specimens.csv")
+    header = (FOLDER / "D03_jca_allard_specimens.csv").read_text().splitlines()[0]
+    specimens = ast.literal_eval(re.search(r"\{.*?\}", header).group())  # type: ignore[union-attr]
+    air = GivenFluid(1.205, float(np.sqrt(1.4 * 101325.0 / 1.205)))
+    walls = {name: Layers((PorousLayer(JohnsonChampouxAllard(*law), d),)) for name, (*law, d) in specimens.items()}
+    whatif = _tube(np.unique(table["f"]), air, **walls)
+    for name in walls:
+        rows = table["specimen"] == name
+        for found in _both_ways(whatif, name):
+            zeta = _measured(found, whatif.frequencies, air) * air.speed / 343.0
+            assert np.abs(zeta / (table["zs_re"] + 1j * table["zs_im"])[rows] - 1).max() < 1e-5
+            assert np.abs(_alpha(zeta) - table["alpha0"][rows]).max() < 1e-5
+
+
+def test_absorption_of_a_micro_perforated_plate_d04() -> None:
+    whatif = _tube(LINES, AIR_D, plate=STACKS["micro_perforated"])
+    for found in _both_ways(whatif, "plate"):
+        alpha = _alpha(_measured(found, LINES, AIR_D))
+        assert np.abs(alpha - read_csv_reference("D04_mpp_maa_fig5.csv")["alpha"]).max() < 1e-6
+
+
+@pytest.mark.parametrize("mass", [2.7, 7.8, 10.0, 25.0])
+def test_transmission_of_a_limp_wall_d06(mass: float) -> None:
+    """A foil in front of what takes a plane wave completely: what the end absorbs of an incoming wave is what passes the foil.
+
+    `wall` has R = rho c behind a mass at every line; `foil_F` is a foil, a screen of rho c and a gap of a quarter wave at F.
+    Predicted: pressure behind the foil, p rho c/(rho c + i w m); solved again: power that the end absorbs.
+    """
+    table = read_csv_reference("D06_mass_law.csv")
+    rows, rho_c, wave = table["m"] == mass, AIR_D.density * AIR_D.speed, 2.0
+    f, loss = table["f"][rows], table["TL0"][rows]
+    foils = {f"foil_{x:g}": Layers((LimpMass(mass), Screen(rho_c), AirGap(AIR_D.speed / (4 * x)))) for x in f.tolist()}
+    whatif = _duct(
+        0.5, f, _on("x1", wall=Resonator(rho_c, mass, 0.0), **foils), {}, [0.5], kinds={"x0": Port()},
+        loads=[IncomingWave("x0", wave + 0j)], air=AIR_D,
+    )  # fmt: skip
+    passed, incident = rho_c / (rho_c + 2j * np.pi * f * mass), 0.5 * wave**2 / rho_c * SIDE**2
+    for name in ("wall", *foils):
+        at = slice(None) if name == "wall" else np.array([f"foil_{x:g}" == name for x in f.tolist()])
+        predicted = -20 * np.log10(np.abs(_predicted(whatif, name)[:, 0] * passed / wave))
+        assert np.abs(predicted - loss)[at].max() < 1e-4
+    full = _full(whatif, "wall")
+    power = full.load_cases[0].absorbed[:, full.power_labels.index("surface/x1")]
+    assert np.abs(-10 * np.log10(power / incident) - loss).max() < 1e-4
+
+
+# --- stacks and laws in closed form ----------------------------------------------------------------------------------
+
+LENGTH, PLACES = 0.61, (0.0, 0.22, 0.55)
+SOLVED_AGAIN = ("porous", "everything")
+
+
+def _exact(left: End, right: End, eta: float = 0.0) -> Complex:
+    """p (nf, places) on the lines of D04."""
+    return np.column_stack([_field(x, LINES, AIR_D, LENGTH, left, right, eta) for x in PLACES])
+
+
+def test_gains_of_stacks_on_a_rigid_end() -> None:
+    """Gains at every line and place of seven stacks; the baseline has no losses at all."""
+    whatif = _duct(LENGTH, LINES, _on("x1", **STACKS), {"x0": -0.01}, PLACES, air=AIR_D)
+    bare = _exact((0, -0.01), (0, 0))
+    for name in STACKS:
+        gain = bare / _exact((0, -0.01), (_in_closed_form(name, False)[0], 0))
+        ways = _both_ways(whatif, name) if name in SOLVED_AGAIN else (_predicted(whatif, name),)
+        for found in ways:
+            assert _decibels(_predicted(whatif) / found, gain) < 0.01, name
+        assert np.ptp(20 * np.log10(np.abs(gain))) > 10.0
+
+
+@pytest.mark.parametrize("frame", ["face", "bonded", "at_rest"])
+def test_stacks_on_a_moving_end(frame: str) -> None:
+    """Seven stacks that move with their panel in the three forms, and slow it down by 3 dB, while the other end drives too."""
+    treatments = [Treatment(n, 1.0, 1.0, wall=w, frame=frame, velocity_cut=3.0, panels=("x1",)) for n, w in STACKS.items()]
+    whatif = _duct(LENGTH, LINES, treatments, {"x1": 0.003j, "x0": 0.001}, PLACES, air=AIR_D, eta=0.02)
+    for name in STACKS:
+        y, u = _in_closed_form(name, frame == "bonded")
+        moves = (1.0 if frame == "face" else u) * 0.003j * 10 ** (-3 / 20)
+        exact = _exact((0, 0.001), (y, moves), 0.02)
+        for found in _both_ways(whatif, name) if name in SOLVED_AGAIN else (_predicted(whatif, name),):
+            assert np.abs(found / exact - 1).max() < 1e-4, name
+
+
+def test_laws_without_layers() -> None:
+    """Resonator, mass on a spring, absorption coefficient, table of an admittance; alone on the end that stands still."""
+    w, rho_c = 2 * np.pi * LINES, AIR_D.density * AIR_D.speed
+    table = Table(np.array([200.0, 2500.0]), np.array([0.5 + 0.2j, 0.9 - 0.3j]))
+    slope = (LINES - 200.0) / 2300.0
+    laws: dict[str, tuple[WallLaw, Complex]] = {
+        "resonator": (Resonator(300.0, 0.4, 4e6), 300.0 + 0.4j * w + 4e6 / (1j * w)),
+        "spring": (MassSpringDamper(2.0, 300.0, 0.1), 2j * w + 2.0 * (600 * np.pi) ** 2 * (1 + 0.1j) / (1j * w)),
+        "absorber": (Absorption(0.64), np.full(len(w), rho_c * (1 + 0.6) / (1 - 0.6), complex)),
+        "table": (Given(table, form="admittance"), rho_c / (0.5 + 0.2j + slope * (0.4 - 0.5j))),
+    }
+    whatif = _duct(LENGTH, LINES, _on("x1", **{n: law for n, (law, _) in laws.items()}), {"x0": -0.01}, PLACES, air=AIR_D)
+    bare = _exact((0, -0.01), (0, 0))
+    for name, (_, z) in laws.items():
+        gain = bare / _exact((0, -0.01), (1 / z, 0))
+        assert _decibels(_predicted(whatif) / _predicted(whatif, name), gain) < 0.01, name
+
+
+def test_treatments_of_both_ends_at_once() -> None:
+    """A bonded layer that slows its moving end by 4 dB, and everything on the other: lines, and band energies in dB(A)."""
+    both = [
+        Treatment("foam", 1.0, 1.0, wall=STACKS["porous"], velocity_cut=4.0, panels=("x0",)),
+        Treatment("stack", 1.0, 1.0, wall=STACKS["everything"], panels=("x1",)),
+    ]
+    whatif = _duct(LENGTH, LINES, both, {"x0": -0.01}, PLACES, air=AIR_D, eta=0.01)
+    (y0, u), (y1, _) = _in_closed_form("porous", True), _in_closed_form("everything", False)
+    exact = _exact((y0, -0.01 * 10 ** (-4 / 20) * u), (y1, 0), 0.01)
+    predicted, solved = _both_ways(whatif, "foam", "stack")
+    assert _decibels(predicted, exact) < 0.005 and _decibels(solved, exact) < 1e-4
+    weight = 10 ** (A_weighting(LINES) / 10) * ((LINES >= 315) & (LINES <= 1000))
+    energies = [float(weight @ (np.abs(p[:, 1:]) ** 2).sum(axis=1)) for p in (_exact((0, -0.01), (0, 0), 0.01), exact)]
+    goal, gain = Goal(("1", "2"), band=(315.0, 1000.0)), 10 * np.log10(energies[0] / energies[1])
+    chosen = _numbers(whatif, "foam", "stack")
+    assert gain > 3.0 and whatif.gain(chosen, goal) == pytest.approx(gain, abs=1e-3)
+    again = verified(solve(whatif.case), [whatif.options[i] for i in chosen], goal, whatif.gain(chosen, goal))
+    assert again.gain == pytest.approx(gain, abs=1e-3)
