@@ -41,7 +41,8 @@ from murmesh.solver.case.wall import (
 from murmesh.solver.levels import A_weighting
 from murmesh.solver.result import Result
 from murmesh.solver.sweep import solve
-from murmesh.solver.treatment import Goal, WhatIf, treated_case, verified
+from murmesh.solver.treatment import Goal, treated_case, verified
+from murmesh.solver.whatif import WhatIf
 from reading import FOLDER, read_csv_reference
 
 Complex = npt.NDArray[np.complex128]
