@@ -9,12 +9,10 @@ from __future__ import annotations
 import ast
 import re
 from collections.abc import Iterable, Mapping, Sequence
-from functools import reduce
 
 import numpy as np
-import numpy.typing as npt
 import pytest
-from scipy.linalg import expm
+from exact_duct import Complex, End, Floats, closed, field, foam, gap, thin
 
 from cases import AIR, case_of
 from meshes import box
@@ -44,11 +42,6 @@ from murmesh.solver.sweep import solve
 from murmesh.solver.treatment import Goal, treated_case, verified
 from murmesh.solver.whatif import WhatIf
 from reading import FOLDER, read_csv_reference
-
-Complex = npt.NDArray[np.complex128]
-Floats = npt.NDArray[np.float64]
-End = tuple[complex | Complex, complex | Complex]
-"""Y and v_s of an end that takes in v_n = v_s + Y p, both along the outward normal."""
 
 SIDE = 0.05
 AIR_D = GivenFluid(density=1.205, speed=343.0)
@@ -114,64 +107,7 @@ def _decibels(found: Complex, exact: Complex) -> float:
     return float(np.abs(20 * np.log10(np.abs(found / exact))).max())
 
 
-# --- one dimension in closed form ------------------------------------------------------------------------------------
-
-
-def _field(x: float, f: Floats, air: GivenFluid, length: float, left: End, right: End, eta: float = 0.0) -> Complex:
-    """p (nf,) at x: p'' + k^2 p = 0 and v = i p'/(w rho) between two ends, k^2 = (w/c)^2 (1 - i eta).
-
-    p = A cos kx + B sin kx; -v = v_0 + Y_0 p at 0 and v = v_1 + Y_1 p at the length are two equations for A and B.
-    """
-    (y0, v0), (y1, v1) = left, right
-    k = 2 * np.pi * f / air.speed * np.sqrt(1 - 1j * eta)
-    s = 1j * k / (2 * np.pi * f * air.density)
-    a, b = -s * np.sin(k * length) - y1 * np.cos(k * length), s * np.cos(k * length) - y1 * np.sin(k * length)
-    determinant = y0 * b - s * a
-    return np.asarray(((-v0 * b - s * v1) * np.cos(k * x) + (y0 * v1 + v0 * a) * np.sin(k * x)) / determinant)
-
-
-def _miki(f: Floats, sigma: float, air: GivenFluid) -> tuple[Complex, Complex]:
-    """rho_e and K_e (nf,) of Miki's law as printed in the header of D01: rho_e = Z_c k/w, K_e = Z_c w/k."""
-    y = f / sigma
-    impedance = air.density * air.speed * (1 + 0.070 * y**-0.632 - 0.107j * y**-0.632)
-    speed = air.speed / (1 + 0.109 * y**-0.618 - 0.160j * y**-0.618)
-    return impedance / speed, impedance * speed
-
-
-def _thick(f: Floats, density: complex | Complex, modulus: complex | Complex, depth: float, frame: float) -> Complex:
-    """(nf, 3, 3): the state [p, v, v_b] in front of a layer from that behind, by the exponential of its equations.
-
-    -p' = i w [rho_e (v - v_f) + rho_0 v_f],  -v' = i w p/K_e,  frame velocity v_f = v_b (`frame` = rho_0: rigid, moving with
-    the backing; Biot, J. Appl. Phys. 33 (1962) 1482) or v_f = 0 (`frame` = 0: at rest, or none).
-    """
-    rate = np.zeros((len(f), 3, 3), dtype=np.complex128)
-    rate[:, 0, 1] = density
-    rate[:, 0, 2] = (frame - np.asarray(density)) if frame else 0.0
-    rate[:, 1, 0] = 1 / np.asarray(modulus)
-    return np.asarray(expm(2j * np.pi * f[:, None, None] * depth * rate))
-
-
-def _thin(f: Floats, impedance: complex | Complex, frame: float) -> Complex:
-    """(nf, 3, 3): v passes, and p in front is higher than behind by Z (v - v_f)."""
-    out = np.tile(np.eye(3, dtype=np.complex128), (len(f), 1, 1))
-    out[:, 0, 1] = impedance
-    out[:, 0, 2] = -impedance if frame else 0.0
-    return out
-
-
-def _closed(layers: Sequence[Complex]) -> tuple[Complex, Complex]:
-    """Y and u (nf,) of layers, front to back, on a backing that moves with v = v_b: v = u v_b + Y p in front."""
-    whole = reduce(np.matmul, layers)
-    admittance = whole[:, 1, 0] / whole[:, 0, 0]
-    return admittance, whole[:, 1, 1] + whole[:, 1, 2] - admittance * (whole[:, 0, 1] + whole[:, 0, 2])
-
-
-def _foam(f: Floats, air: GivenFluid, sigma: float, depth: float, bonded: bool) -> Complex:
-    return _thick(f, *_miki(f, sigma, air), depth, air.density if bonded else 0.0)
-
-
-def _gap(f: Floats, air: GivenFluid, depth: float) -> Complex:
-    return _thick(f, air.density, air.density * air.speed**2, depth, 0.0)
+# --- published values by the closed forms of `exact_duct` --------------------------------------------------------------
 
 
 def _maa(f: Floats) -> Complex:
@@ -200,43 +136,43 @@ def _in_closed_form(name: str, bonded: bool) -> tuple[Complex, Complex]:
     f, air = LINES, AIR_D
     frame = air.density if bonded else 0.0
 
-    def foam(sigma: float, depth: float) -> Complex:
-        return _foam(f, air, sigma, depth, bonded)
+    def porous(sigma: float, depth: float) -> Complex:
+        return foam(f, air, sigma, depth, bonded)
 
     layers = {
-        "porous": lambda: [foam(12000.0, 0.05)],
-        "porous_gap": lambda: [foam(15000.0, 0.04), _gap(f, air, 0.06)],
-        "screen_gap": lambda: [_thin(f, 600.0, frame), _gap(f, air, 0.08)],
-        "micro_perforated": lambda: [_thin(f, _maa(f), frame), _gap(f, air, 0.06)],
-        "faced": lambda: [_thin(f, _maa(f), frame), foam(9000.0, 0.03), _gap(f, air, 0.03)],
-        "foil": lambda: [_thin(f, 2j * np.pi * f * 0.35, 0.0), foam(15000.0, 0.05)],
+        "porous": lambda: [porous(12000.0, 0.05)],
+        "porous_gap": lambda: [porous(15000.0, 0.04), gap(f, air, 0.06)],
+        "screen_gap": lambda: [thin(f, 600.0, frame), gap(f, air, 0.08)],
+        "micro_perforated": lambda: [thin(f, _maa(f), frame), gap(f, air, 0.06)],
+        "faced": lambda: [thin(f, _maa(f), frame), porous(9000.0, 0.03), gap(f, air, 0.03)],
+        "foil": lambda: [thin(f, 2j * np.pi * f * 0.35, 0.0), porous(15000.0, 0.05)],
         "everything": lambda: [
-            _thin(f, _maa(f), frame), _gap(f, air, 0.01), _thin(f, 2j * np.pi * f * 0.2, 0.0), foam(20000.0, 0.02),
-            _thin(f, 250.0, frame), foam(8000.0, 0.03),
+            thin(f, _maa(f), frame), gap(f, air, 0.01), thin(f, 2j * np.pi * f * 0.2, 0.0), porous(20000.0, 0.02),
+            thin(f, 250.0, frame), porous(8000.0, 0.03),
         ],
     }  # fmt: skip
-    return _closed(layers[name]())
+    return closed(layers[name]())
 
 
 def test_the_closed_forms_are_the_published_ones() -> None:
     """A07, K01, D01 (Miki) and A08b, by the equations above."""
     table = read_csv_reference("A07_moving_treated_wall.csv")
     for re_, im, f, x, p_re, p_im in zip(*table.values(), strict=True):
-        end = (1 / (AIR.density * AIR.speed * complex(re_, im)), 0.002 * np.exp(0.7j))
-        assert _field(x, np.array([f]), AIR, 1.2, (0, 0), end)[0] == pytest.approx(complex(p_re, p_im), rel=1e-9)
+        face = (1 / (AIR.density * AIR.speed * complex(re_, im)), 0.002 * np.exp(0.7j))
+        assert field(x, np.array([f]), AIR, 1.2, (0, 0), face)[0] == pytest.approx(complex(p_re, p_im), rel=1e-9)
     table = read_csv_reference("K01_frequency_sweep_miki_duct.csv")
-    foam = (_closed([_foam(table["f"], AIR, 9000.0, 0.06, False)])[0], 0)
-    found = _field(0.37, table["f"], AIR, 2.4, (0, -0.01), foam)
+    end = (closed([foam(table["f"], AIR, 9000.0, 0.06)])[0], 0)
+    found = field(0.37, table["f"], AIR, 2.4, (0, -0.01), end)
     assert np.allclose(found, table["p_re"] + 1j * table["p_im"], rtol=1e-9)
     table = read_csv_reference("D01_delany_bazley_miki_50mm.csv")
     f, miki = table["f"], table["model"] == "miki"
-    zeta = 1 / (AIR_D.density * AIR_D.speed * _closed([_foam(f, AIR_D, 20000.0, 0.05, False)])[0])
+    zeta = 1 / (AIR_D.density * AIR_D.speed * closed([foam(f, AIR_D, 20000.0, 0.05)])[0])
     assert np.allclose(zeta[miki], (table["zs_re"] + 1j * table["zs_im"])[miki], rtol=1e-9)
     table = read_csv_reference("A08b_layer_frame_moves_with_wall.csv")
     for bonded, column in ((True, "moving"), (False, "rest")):
-        y, u = _closed([_foam(table["f_Hz"], AIR, 20000.0, 0.05, bonded)])
+        y, u = closed([foam(table["f_Hz"], AIR, 20000.0, 0.05, bonded)])
         exact = table[f"{column}_re"] + 1j * table[f"{column}_im"]
-        assert np.allclose(_field(0.0, table["f_Hz"], AIR, 1.15, (0, 0), (y, u * 0.002)), exact, rtol=1e-6)
+        assert np.allclose(field(0.0, table["f_Hz"], AIR, 1.15, (0, 0), (y, u * 0.002)), exact, rtol=1e-6)
 
 
 # --- published values ------------------------------------------------------------------------------------------------
@@ -263,8 +199,8 @@ def test_three_forms_of_a_layer_on_a_moving_wall_a08_a08b() -> None:
     """Locally reacting face, bonded frame (the default of a layer), and frame at rest, which is the two-fluid field of A08."""
     table = read_csv_reference("A08b_layer_frame_moves_with_wall.csv")
     two_fluids = read_csv_reference("A08_bulk_layer_on_moving_wall.csv")
-    foam = Layers((PorousLayer(Miki(20000.0), 0.05),))
-    forms = [Treatment(frame, 1.0, 1.0, wall=foam, frame=frame, panels=("x1",)) for frame in FORMS]
+    layer = Layers((PorousLayer(Miki(20000.0), 0.05),))
+    forms = [Treatment(frame, 1.0, 1.0, wall=layer, frame=frame, panels=("x1",)) for frame in FORMS]
     whatif = _duct(1.15, table["f_Hz"], forms, {"x1": 0.002}, [0.0])
     for frame, column in FORMS.items():
         exact = table[f"{column}_re"] + 1j * table[f"{column}_im"]
@@ -277,8 +213,8 @@ def test_three_forms_of_a_layer_on_a_moving_wall_a08_a08b() -> None:
 def test_every_line_of_k01() -> None:
     """881 lines of a layer whose impedance changes with frequency, from the reduced baseline of a lossless duct."""
     table = read_csv_reference("K01_frequency_sweep_miki_duct.csv")
-    foam = Layers((PorousLayer(Miki(9000.0), 0.06),))
-    whatif = _duct(2.4, table["f"], _on("x1", foam=foam), {"x0": -0.01}, [0.37], method="reduced")
+    layer = Layers((PorousLayer(Miki(9000.0), 0.06),))
+    whatif = _duct(2.4, table["f"], _on("x1", foam=layer), {"x0": -0.01}, [0.37], method="reduced")
     for found in _both_ways(whatif, "foam"):
         levels = 10 * np.log10(0.5 * np.abs(found[:, 0]) ** 2 / 4e-10)
         assert np.abs(levels - table["Lp_rms_dB"]).max() < 1e-3
@@ -373,7 +309,7 @@ SOLVED_AGAIN = ("porous", "everything")
 
 def _exact(left: End, right: End, eta: float = 0.0) -> Complex:
     """p (nf, places) on the lines of D04."""
-    return np.column_stack([_field(x, LINES, AIR_D, LENGTH, left, right, eta) for x in PLACES])
+    return np.column_stack([field(x, LINES, AIR_D, LENGTH, left, right, eta) for x in PLACES])
 
 
 def test_gains_of_stacks_on_a_rigid_end() -> None:
