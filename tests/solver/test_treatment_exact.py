@@ -16,8 +16,9 @@ from exact_duct import Complex, End, Floats, closed, field, foam, gap, thin
 
 from cases import AIR, case_of
 from meshes import box
+from murmesh.solver import choice
 from murmesh.solver.case.boundary import Boundary, Port, Vibrating
-from murmesh.solver.case.catalogue import Treatment
+from murmesh.solver.case.catalogue import Limits, Treatment
 from murmesh.solver.case.load import IncomingWave, Load, SurfaceVelocity
 from murmesh.solver.case.medium import GivenFluid, LossFactor, NoDamping
 from murmesh.solver.case.motion import Uniform
@@ -36,6 +37,7 @@ from murmesh.solver.case.wall import (
     Screen,
     WallLaw,
 )
+from murmesh.solver.choice import choose
 from murmesh.solver.levels import A_weighting
 from murmesh.solver.result import Result
 from murmesh.solver.sweep import solve
@@ -373,3 +375,35 @@ def test_treatments_of_both_ends_at_once() -> None:
     assert gain > 3.0 and whatif.gain(chosen, goal) == pytest.approx(gain, abs=1e-3)
     again = verified(solve(whatif.case), [whatif.options[i] for i in chosen], goal, whatif.gain(chosen, goal))
     assert again.gain == pytest.approx(gain, abs=1e-3)
+
+
+@pytest.mark.parametrize("enumerated", [0, 400])
+def test_choices_within_budgets_are_those_of_the_closed_form(enumerated: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Five stacks for one end, four for the other: the best set within eight masses, by brute force over exact fields."""
+    monkeypatch.setattr(choice, "ENUMERATED", enumerated)
+    names = {"x0": tuple(STACKS)[:5], "x1": tuple(STACKS)[2:6]}
+    masses = {"porous": 1.1, "porous_gap": 1.7, "screen_gap": 0.9, "micro_perforated": 2.9, "faced": 3.6, "foil": 4.4}
+    catalogue = [
+        Treatment(f"{name} {panel}", masses[name], 10.0, wall=STACKS[name], panels=(panel,))
+        for panel, held in names.items()
+        for name in held
+    ]
+    whatif = _duct(LENGTH, LINES, catalogue, {"x0": -0.01}, PLACES, air=AIR_D, eta=0.01)
+    goal = Goal(("1", "2"), weighting="Z")
+
+    def energy(left: str, right: str) -> float:
+        y0, u0 = _in_closed_form(left, True) if left else (0, 1.0)
+        y1 = _in_closed_form(right, False)[0] if right else 0
+        return float((np.abs(_exact((y0, -0.01 * u0), (y1, 0), 0.01)[:, 1:]) ** 2).sum())
+
+    sets = {(a, b): energy(a, b) for a in ("", *names["x0"]) for b in ("", *names["x1"])}
+    weight = {pair: sum(masses[name] for name in pair if name) * SIDE**2 for pair in sets}
+    best_of = set()
+    for limit in np.linspace(0.8, 8.0, 8) * SIDE**2:
+        best = min((pair for pair in sets if weight[pair] <= limit), key=lambda pair: sets[pair])
+        found = choose(whatif.options, Limits(mass=limit), lambda c: whatif.energy(whatif.mean_squares(c), goal)).candidates[0]
+        chosen = {option.treatment for option in (whatif.options[i] for i in found.chosen)}
+        assert chosen == {f"{name} {panel}" for name, panel in zip(best, ("x0", "x1"), strict=True) if name}
+        assert found.gain == pytest.approx(10 * np.log10(sets["", ""] / sets[best]), abs=1e-3)
+        best_of.add(best)
+    assert len(best_of) > 3
