@@ -15,12 +15,13 @@ import pytest
 from exact_duct import Complex, End, Floats, closed, field, foam, gap, thin
 
 from cases import AIR, case_of
-from meshes import box
+from meshes import box, grid, shell
 from murmesh.solver import choice
-from murmesh.solver.case.boundary import Boundary, Port, Vibrating
+from murmesh.solver.case.boundary import Boundary, Port, Radiating, Vibrating, VibratingTreated
 from murmesh.solver.case.catalogue import Limits, Treatment
 from murmesh.solver.case.load import IncomingWave, Load, SurfaceVelocity
 from murmesh.solver.case.medium import GivenFluid, LossFactor, NoDamping
+from murmesh.solver.case.model import Region
 from murmesh.solver.case.motion import Uniform
 from murmesh.solver.case.porous import DelanyBazley, JohnsonChampouxAllard, Miki
 from murmesh.solver.case.spectrum import Table
@@ -38,6 +39,7 @@ from murmesh.solver.case.wall import (
     WallLaw,
 )
 from murmesh.solver.choice import choose
+from murmesh.solver.errors import CaseError
 from murmesh.solver.levels import A_weighting
 from murmesh.solver.result import Result
 from murmesh.solver.sweep import solve
@@ -409,3 +411,72 @@ def test_choices_within_budgets_are_those_of_the_closed_form(enumerated: int, mo
         assert found.gain == pytest.approx(10 * np.log10(sets["", ""] / sets[best]), abs=1e-3)
         best_of.add(best)
     assert len(best_of) > 3
+
+
+# --- what a panel may be: radiating cases, cuts of its own, what it carries already, several fluids -------------------
+
+
+def test_a_treated_pulsating_sphere_in_the_open() -> None:
+    """Insertion loss 20 lg|1 + z_r/Z| of a face on a pulsating sphere, z_r = i rho c ka/(1 + i ka) (Pierce, Acoustics, ch. 4).
+
+    On infinite elements, with receivers in the meshed air and outside it; the coarse geometry is worth 0.015 dB.
+    """
+    radius, f = 0.25, np.linspace(100.0, 500.0, 21)
+    case = case_of(
+        shell(2, (radius, 0.3)), {"inner": Vibrating(), "outer": Radiating()}, [SurfaceVelocity("inner", Uniform(0.01))], f,
+        {"near": (0.0, 0.0, 0.28), "far": (0.0, 0.6, 0.8)}, order=4, error_bar=False, method="reduced",
+    )  # fmt: skip
+    whatif = WhatIf.build(solve(case.with_(catalogue=tuple(_on("inner", face=Given(0.8 - 1.5j, unit="rho_c"))))))
+    ka = 2 * np.pi * f / AIR.speed * radius
+    exact = -20 * np.log10(np.abs(1 + 1j * ka / (1 + 1j * ka) / (0.8 - 1.5j)))
+    bare = _predicted(whatif)
+    for found in _both_ways(whatif, "face"):
+        change = 20 * np.log10(np.abs(found / bare))
+        assert np.abs(change - exact[:, None]).max() < 0.05
+    assert np.ptp(exact) > 2.0 and exact.max() > 0  # it makes some lines louder
+
+
+def test_a_treatment_replaces_what_the_panel_carries() -> None:
+    """The moving end carries dense wool, and its load a cut of 6 dB, in the baseline; either goes with the new treatment."""
+    f, wool = np.linspace(200.0, 900.0, 15), Layers((PorousLayer(Miki(40000.0), 0.1),))
+    mat = Treatment("mat", 1.0, 1.0, velocity_cut=2.0, panels=("x1",))
+    bare = _duct(
+        1.15, f, [*_on("x1", foam=Layers((PorousLayer(Miki(9000.0), 0.06),))), mat], {"x1": 0.002}, [0.37],
+        kinds={"x1": VibratingTreated(wool, "at_rest")},
+    )  # fmt: skip
+    [held] = bare.case.load_cases
+    loads = tuple(load.with_(cut=6.0) for load in held.loads)
+    whatif = WhatIf.build(solve(bare.case.with_(load_cases=(held.with_(loads=loads),))))
+    (y, u), (y_wool, u_wool) = closed([foam(f, AIR, 9000.0, 0.06, True)]), closed([foam(f, AIR, 40000.0, 0.1)])
+    for name, end in {"foam": (y, 0.002 * u), "mat": (y_wool, 0.002 * u_wool * 10 ** (-2 / 20))}.items():
+        for found in _both_ways(whatif, name):
+            assert np.abs(found[:, 0] / field(0.37, f, AIR, 1.15, (0, 0), end) - 1).max() < 1e-4, name
+
+
+def test_what_cannot_be_predicted_by_a_factor_is_refused() -> None:
+    """Nothing of the motion comes through three metres of wool at rest; a mat goes on it all the same."""
+    f, wool = np.linspace(700.0, 900.0, 5), Layers((PorousLayer(Miki(60000.0), 3.0),))
+    catalogue = [*_on("x1", foam=STACKS["porous"]), Treatment("mat", 1.0, 1.0, velocity_cut=2.0, panels=("x1",))]
+    whatif = _duct(1.15, f, catalogue, {"x1": 0.002}, [0.37], kinds={"x1": VibratingTreated(wool, "at_rest")})
+    with pytest.raises(CaseError, match="'foam' is to replace what 'x1' carries, but that lets nothing of its motion through"):
+        whatif.change(whatif.case.catalogue[0], "x1")
+    assert np.allclose(np.abs(whatif.change(whatif.case.catalogue[1], "x1").factors[0]), 10 ** (-2 / 20))
+
+
+def test_a_panel_over_two_fluids() -> None:
+    """A bonded layer moves differently in front of light and of heavy gas: refused with the cure. A face does not."""
+    mesh = grid(np.linspace(0, 1.2, 7), [0, 0.1], [0, 0.1])
+    layer = STACKS["porous"]
+    forms = tuple(Treatment(frame, 1.0, 1.0, wall=layer, frame=frame, panels=("z0",)) for frame in ("face", "bonded"))
+    case = case_of(
+        mesh, {"z0": Vibrating()}, [SurfaceVelocity("z0", Uniform(0.001))], np.linspace(100.0, 300.0, 9),
+        {"r": (0.3, 0.05, 0.05), "s": (0.9, 0.05, 0.05)}, order=4, error_bar=False,
+        regions=(Region("light", GivenFluid(1.2, 343.0)), Region("heavy", GivenFluid(6.0, 150.0))),
+        tet_region=(mesh.centroids[:, 0] > 0.6).astype(np.int64),
+    )  # fmt: skip
+    whatif = WhatIf.build(solve(case.with_(catalogue=forms)))
+    face = whatif.pressures([whatif.change(forms[0], "z0")])[:, :, 0]
+    full = solve(treated_case(whatif.case, [whatif.options[0]])).load_cases[0].contributions.sum(axis=2)
+    assert _decibels(face, full) < 0.05
+    with pytest.raises(CaseError, match="'z0' touches several fluids, and 'bonded' would move differently in them; give its"):
+        whatif.change(forms[1], "z0")
