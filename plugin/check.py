@@ -14,6 +14,7 @@ from murmesh.plugin.resolve import resolve
 from murmesh.solver.case.model import Case
 from murmesh.solver.errors import CaseError
 
+LAWS = (laws.ranges, laws.passivity, laws.validity, laws.time_signs)
 RULES: tuple[Callable[[Scene], Iterable[Finding]], ...] = (
     lambda scene: shape.size(scene.case.mesh.nodes),
     lambda scene: shape.elements(scene.case.mesh.nodes, scene.case.mesh.tets),
@@ -26,9 +27,7 @@ RULES: tuple[Callable[[Scene], Iterable[Finding]], ...] = (
     acoustics.resolution,
     acoustics.losses,
     acoustics.unloaded,
-    laws.ranges,
-    laws.passivity,
-    laws.validity,
+    *LAWS,
     acoustics.ports,
     acoustics.scans,
 )
@@ -54,6 +53,12 @@ def check_case(case: Case) -> tuple[Finding, ...]:
     return ordered(finding for rule in RULES for finding in rule(scene))
 
 
+def check_catalogue(case: Case) -> tuple[Finding, ...]:
+    """Findings about the laws of the catalogue, errors first: it may change after a case was checked and solved."""
+    scene, names = Scene(case), {treatment.name for treatment in case.catalogue}
+    return ordered(finding for rule in LAWS for finding in rule(scene) if finding.subject in names)
+
+
 def _loads(job: Job) -> list[Finding]:
     """Loads that cannot act together, such as autospectra combined coherently."""
     try:
@@ -69,4 +74,4 @@ def _refused(code: str, subject: str, problem: CaseError) -> Finding:
     return error(code, subject, text or cure, cure)
 
 
-__all__ = ["Finding", "as_json", "check", "check_case", "render"]
+__all__ = ["Finding", "as_json", "check", "check_case", "check_catalogue", "render"]

@@ -119,7 +119,11 @@ def _settle_motion(table: Tree, unit: str, measures: str, name: str) -> None:
 
 
 def _settle_unit(table: Tree, own: frozenset[str], column: Column, name: str) -> None:
-    """A law with a unit of its own takes it from the header, unless it says the same itself."""
+    """A law with a unit of its own takes it from the header or says it itself, never both in two ways."""
+    if "unit" in own and not column.unit and "unit" not in table:
+        raise FieldError(
+            f'\'{name}\': the unit is not said; write it behind the column, re [Pa.s/m], or as unit = "Pa.s/m" or "rho_c"'
+        )
     if "unit" in own and column.unit and table.setdefault("unit", column.unit) != column.unit:
         raise FieldError(f"'{name}' is in {column.unit}, but unit = '{table['unit']}' is stated; mend one of the two")
 

@@ -366,7 +366,7 @@ def build_system(space: Space, samples: Samples) -> System:
     """The sum of terms of `space.case`, with one output row per receiver sample."""
     case = space.case
     inside = [*_volume_terms(space), *_surface_terms(space), *_sheet_terms(space)]
-    terms = [*(replace(term, build=partial(_widened, term.build, space, 2)) for term in inside), *_outside_terms(space)]
+    terms = [*(replace(term, build=partial(widened, term.build, space, 2)) for term in inside), *_outside_terms(space)]
     sets = tuple(_load_set(space, index) for index in range(len(case.load_cases)))
     receivers, outputs = _outputs(space, samples)
     direct = _direct(space, samples, receivers, outputs) if outputs else None
@@ -403,7 +403,7 @@ def _outputs(space: Space, samples: Samples) -> tuple[Matrix, Coefficient | None
     """Rows of the samples inside, then those of each sample outside; with what makes outputs of them."""
     inside = samples.tet >= 0
     own = partial(evaluate, space.geometry, space.dofs, samples.tet[inside], samples.bary[inside])
-    rows = _widened(lambda: own().T, space, 1).T.tocsr()
+    rows = widened(lambda: own().T, space, 1).T.tocsr()
     beyond = [_listener(space, samples, int(sample)) for sample in np.flatnonzero(~inside)]
     if not beyond:
         return rows, None
@@ -442,7 +442,7 @@ def _wave_number(case: Case, region: int, f: Floats) -> Complex:
     return _k_rho(case, region, f)[0]
 
 
-def _widened(build: Callable[[], Matrix], space: Space, axes: int) -> Matrix:
+def widened(build: Callable[[], Matrix], space: Space, axes: int) -> Matrix:
     """A matrix on the unknowns of the mesh, with empty rows (and columns) for those of the outside."""
     matrix = build()
     if space.size == space.dofs.n_dofs:
@@ -577,7 +577,7 @@ def pressure_fixed(space: Space) -> npt.NDArray[np.bool_]:
 def _load_set(space: Space, index: int) -> LoadSet:
     load_case = space.case.load_cases[index]
     found = [term for load in load_case.loads for term in _load_terms(space, load)]
-    terms = [replace(term, build=partial(_widened, term.build, space, 1)) for term in found]
+    terms = [replace(term, build=partial(widened, term.build, space, 1)) for term in found]
     return LoadSet(load_case.name, tuple(load.name for load in load_case.loads), tuple(terms))
 
 

@@ -15,6 +15,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from itertools import pairwise
 from typing import Any, Literal
 
@@ -30,7 +31,7 @@ from murmesh.solver.receiver_points import Samples, locate_receivers
 from murmesh.solver.reduced import orthonormal, reduce
 from murmesh.solver.result import Result
 from murmesh.solver.space import Side, Space
-from murmesh.solver.system import Projected, System, Values, build_system
+from murmesh.solver.system import Projected, System, Values, build_system, widened
 from murmesh.solver.treatment import Option
 
 Floats = npt.NDArray[np.float64]
@@ -248,7 +249,7 @@ class _Builder:
             panel = case.surfaces[side.surface].name
             if panel not in panels:
                 continue
-            mass = surface_mass(space.geometry, space.dofs, side.tet, side.face)
+            mass = widened(partial(surface_mass, space.geometry, space.dofs, side.tet, side.face), space, 2).tocsr()
             patches.append(Patch(side, panel, mass))
             traces.append(self._trace(mass, snapshots))
         return patches, traces

@@ -21,6 +21,7 @@ import numpy as np
 import numpy.typing as npt
 
 from murmesh.solver.case.catalogue import Treatment
+from murmesh.solver.case.load import SurfaceVelocity
 from murmesh.solver.case.model import Case
 from murmesh.solver.case.spectrum import as_spectrum
 from murmesh.solver.errors import CaseError
@@ -33,6 +34,8 @@ from murmesh.solver.treatment import Goal, Option, goal_band, goal_rows, options
 
 Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
+HIDDEN = 1e-30
+"""Part of a panel's motion that is nothing: single precision ends at 1e-38."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -92,19 +95,18 @@ class WhatIf:
 
     def change(self, treatment: Treatment, panel: str) -> Change:
         """What a treatment does on a panel; laws are asked, nothing is solved."""
-        f = self.frequencies
-        index = [surface.name for surface in self.case.surfaces].index(panel)
-        walls = []
+        f, walls = self.frequencies, []
         for number, patch in enumerate(self.tables.patches):
             if patch.panel == panel and treatment.wall is not None:
                 added = 2j * np.pi * f * self._added(patch.side, treatment)
                 walls.append(Wall(number, tuple(band.response(number, added) for band in self.tables.bands)))
-        [side] = self.tables.space.sides_of(index)[:1]
-        drive = self._drive(side, treatment) * 10 ** (-as_spectrum(treatment.velocity_cut).at(f).real / 20)
+        drive = self._drive(panel, treatment) * 10 ** (-as_spectrum(treatment.velocity_cut).at(f).real / 20)
         factors = []
         for held in self.case.load_cases:
             factor = np.ones((len(f), len(held.loads)), dtype=np.complex128)
-            factor[:, [i for i, load in enumerate(held.loads) if load.acts_on == panel]] = drive[:, None]
+            for i, load in enumerate(held.loads):
+                if isinstance(load, SurfaceVelocity) and load.surface == panel:
+                    factor[:, i] = drive / load.cut_factor(f)  # a cut replaces the load's own, as in the treated case
             factors.append(factor)
         return Change(tuple(walls), tuple(factors))
 
@@ -118,11 +120,26 @@ class WhatIf:
         moves = self.case.surfaces[side.surface].name in self.case.panels
         return replace(side, boundary=treated_boundary(side.boundary, treatment, moves))
 
-    def _drive(self, side: Side, treatment: Treatment) -> Complex:
-        """Treated drive over bare drive, (nf,)."""
-        near = adjacent(self.case, side.region, self.frequencies)
-        new, old = (s.boundary.drive(self.frequencies, near) for s in (self._treated(side, treatment), side))
-        return np.asarray(new / old)
+    def _drive(self, panel: str, treatment: Treatment) -> Complex:
+        """Treated drive over bare drive, (nf,); one for every fluid that the panel touches.
+
+        Raises: CaseError where the fluids differ in it, or nothing of the bare panel's motion comes through what it carries.
+        """
+        if treatment.wall is None:
+            return np.ones(len(self.frequencies), dtype=np.complex128)
+        index = [surface.name for surface in self.case.surfaces].index(panel)
+        ratios = []
+        for side in self.tables.space.sides_of(index):
+            near = adjacent(self.case, side.region, self.frequencies)
+            new, old = (s.boundary.drive(self.frequencies, near) for s in (self._treated(side, treatment), side))
+            if np.abs(old).min() < HIDDEN:
+                words = "but that lets nothing of its motion through; take the untreated case as the baseline"
+                raise CaseError(f"'{treatment.name}' is to replace what '{panel}' carries, {words}")
+            ratios.append(new / old)
+        if not np.allclose(ratios, ratios[0], rtol=1e-9):
+            words = "move differently in them; give its part in every fluid a surface of its own"
+            raise CaseError(f"'{panel}' touches several fluids, and '{treatment.name}' would {words}")
+        return np.asarray(ratios[0])
 
     # -- answers
 

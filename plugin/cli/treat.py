@@ -9,6 +9,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+from murmesh.plugin.check import check_catalogue, render
 from murmesh.plugin.cli.command import (
     CANNOT,
     DONE,
@@ -61,6 +62,8 @@ def arguments(parser: argparse.ArgumentParser) -> None:
 
 def run(args: argparse.Namespace) -> int:
     result = result_of(Path(args.result))
+    if not _sound(result.case):
+        return CANNOT
     goal = Goal(tuple(args.receiver), args.load_case, args.band, args.weighting)
     given = {
         key: value
@@ -79,6 +82,17 @@ def run(args: argparse.Namespace) -> int:
         return DONE
     with redirect_stdout(sys.stderr if args.json else sys.stdout):  # JSON stands alone
         return products(found, Path(args.folder))
+
+
+def _sound(case: Case) -> bool:
+    """Whether the laws of the catalogue can be believed; what is doubtful is said."""
+    findings = check_catalogue(case)
+    if findings:
+        say(render(findings))
+    refused = any(finding.severity == "error" for finding in findings)
+    if refused:
+        say("murmesh: nothing computed; cure the errors of the catalogue above")
+    return not refused
 
 
 def result_of(path: Path) -> Result:

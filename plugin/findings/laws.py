@@ -13,13 +13,17 @@ from murmesh.plugin.findings.finding import Finding, error, warning
 from murmesh.plugin.findings.scene import Scene
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.load import LoadCase, SurfaceVelocity
-from murmesh.solver.case.spectrum import as_spectrum
+from murmesh.solver.case.porous import Fluid
+from murmesh.solver.case.spectrum import Table, as_spectrum
+from murmesh.solver.case.wall import Given
 from murmesh.solver.errors import CaseError, RangeError
 
 Floats = npt.NDArray[np.float64]
 Evaluation = Callable[[], Any]
 ACTIVE = 1e-9
 """Re Y below -ACTIVE |Y| is not rounding."""
+HALF_OCTAVE = 2**0.5
+"""From the lowest line so far upwards, a wall shows whether it is a spring or a mass."""
 
 
 def ranges(scene: Scene) -> Iterator[Finding]:
@@ -66,6 +70,38 @@ def validity(scene: Scene) -> Iterator[Finding]:
     cure = "use another law there, a measured table, or take the figures as a guess"
     for subject, text in sorted(said):
         yield warning("law_out_of_range", subject, text, cure)
+
+
+def time_signs(scene: Scene) -> Iterator[Finding]:
+    """Measured walls whose reactance at the lowest lines is that of a spring with the wrong sign: Im Z = K/w.
+
+    A sample on a hard backing is a spring there, Im Z = -K/w in e^{+iwt}, and a mass rises with frequency; only data that
+    were taken for e^{-iwt} are positive and fall.
+    """
+    f = scene.frequencies
+    above = int(np.searchsorted(f, f[0] * HALF_OCTAVE))
+    for subject, wall, fluid in _measured_walls(scene):
+        y = _value(partial(wall.admittance, f, fluid))
+        if above == len(f) or not len(y) or not y[[0, above]].all():
+            continue
+        reactance = (1 / y[[0, above]]).imag
+        if reactance[0] > reactance[1] and reactance[0] > 0:
+            text = (
+                f"Im Z is {reactance[0]:.3g} Pa.s/m at {f[0]:g} Hz and falls to {reactance[1]:.3g} at {f[above]:g} Hz; in "
+                "e^(+iwt) a sample on a hard backing has Im Z < 0 at low frequencies, and a heavy wall has Im Z that rises"
+            )
+            other = "+" if wall.time_sign == "-" else "-"
+            cure = f"if the data are for e^({other}iwt), say time_sign = '{other}' beside them; a deep cavity may be meant so"
+            yield warning("time_sign_doubtful", subject, text, cure)
+
+
+def _measured_walls(scene: Scene) -> Iterator[tuple[str, Given, Fluid]]:
+    """Every table of an impedance: of surfaces, their sides, and the catalogue."""
+    walls = [(s.name, getattr(side, "wall", None), near.fluid) for s, _, near in scene.touching() for side in s.boundary.sides]
+    walls += [(t.name, t.wall, scene.case.regions[0].medium.reference) for t in scene.case.catalogue]
+    for subject, wall, fluid in walls:
+        if isinstance(wall, Given) and isinstance(wall.value, Table):
+            yield subject, wall, fluid
 
 
 def _value(compute: Evaluation) -> npt.NDArray[np.complex128]:

@@ -26,6 +26,11 @@ class Treatment(Declared):
     def validate(self) -> None:
         if self.wall is None and not isinstance(self.velocity_cut, Spectrum) and self.velocity_cut == 0.0:
             raise FieldError(f"treatment '{self.name}' changes nothing; give it a wall law, a velocity_cut, or both")
+        if self.frame in ("bonded", "at_rest") and self.wall is not None and not isinstance(self.wall, Layers):
+            raise FieldError(
+                f"treatment '{self.name}': the frame '{self.frame}' needs a stack of layers, but its wall is of kind "
+                f"'{self.wall.kind_name}'; use 'face', or describe it as layers"
+            )
 
     @classmethod
     def example(cls) -> Treatment:

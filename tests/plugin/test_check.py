@@ -38,7 +38,7 @@ from murmesh.solver.case.model import Region
 from murmesh.solver.case.motion import Autospectrum, Scan, Uniform
 from murmesh.solver.case.porous import Miki
 from murmesh.solver.case.spectrum import Table
-from murmesh.solver.case.wall import Absorption, Given, Layers, PerforatedPlate, PorousLayer
+from murmesh.solver.case.wall import Absorption, Given, Layers, PerforatedPlate, PorousLayer, Resonator
 from tagged import BOX, job, tagged
 
 
@@ -466,6 +466,21 @@ def test_walls_that_create_sound() -> None:
     says(only("active_wall", job().treatment(Treatment("foam", 1, 1, wall=Given(table)))), "error", "foam", words)
     closed, mesh = with_wall(Sheet(Impedance(Given(1.0)), Impedance(Given(table))))
     says(only("active_wall", closed, mesh), "error", "wall (back)", words)
+
+
+def test_measured_walls_of_the_other_time_sign() -> None:
+    """A spring that is positive and falls is doubtful; a spring, a mass, a number and a law are not."""
+    f = np.array([50.0, 100.0, 150.0, 200.0])
+    spring, mass = Table(f, 400 - 4e5j / f), Table(f, 400 + 4j * f)
+    words = r"Im Z is 8e\+03 Pa\.s/m at 50 Hz and falls to 4e\+03 at 100 Hz; .* -> if .*, say time_sign = "
+    wrong = Given(spring, "Pa.s/m", time_sign="-")
+    says(only("time_sign_doubtful", job(x0=Impedance(wrong))), "warning", "x0", rf"{words}'\+'")
+    conjugated = Given(Table(f, spring.values.conj()), "Pa.s/m")
+    says(
+        only("time_sign_doubtful", job().treatment(Treatment("foam", 1, 1, wall=conjugated))), "warning", "foam", f"{words}'-'"
+    )
+    fine = (Given(spring, "Pa.s/m"), Given(mass, "Pa.s/m"), Given(2 + 1j), Resonator.example())
+    assert not [finding for wall in fine for finding in found("time_sign_doubtful", job(x0=Impedance(wall)))]
 
 
 class Growing(GivenFluid):

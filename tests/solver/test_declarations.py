@@ -128,6 +128,7 @@ def test_near_misses_are_named() -> None:
         (lambda: Sheet(Impedance(Given(1 + 0j)), Rigid(), Given(1 + 0j)), "has hard sides, not 'impedance'"),
         (lambda: Sheet(front_region="a", front_direction=(0.0, 0.0, 1.0)), "front is said twice"),
         (lambda: Treatment("nothing", 1.0, 1.0), "changes nothing"),
+        (lambda: Treatment("face", 1.0, 1.0, wall=Given(2.0), frame="bonded"), "'bonded' needs a stack .* 'given'"),
         (lambda: LoadCase("idle", ()), "has no load"),
         (lambda: from_tree(Air, {"temperature": "warm"}), "expected float, got 'warm'"),
         (lambda: from_tree(Boundary, 3), "expected a table of Boundary fields"),
