@@ -84,7 +84,7 @@ def allowed_panels(case: Case, treatment: Treatment) -> tuple[str, ...]:
 
 
 def _can_carry(boundary: Boundary, treatment: Treatment, moves: bool) -> bool:
-    if isinstance(boundary, Sheet) or boundary.fixes_pressure or boundary.takes_wave:
+    if isinstance(boundary, Sheet) or boundary.fixes_pressure or boundary.takes_wave or boundary.radiates:
         return False
     return treatment.wall is not None or moves
 

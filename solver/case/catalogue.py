@@ -10,7 +10,7 @@ from murmesh.solver.errors import FieldError
 
 @record
 class Treatment(Declared):
-    """A treatment changes a panel's impedance, its velocity, or both."""
+    """A treatment changes a panel's impedance, its velocity, or both; what the panel carried before, wall or cut, goes."""
 
     name: str = quantity(help="name of the treatment")
     mass_per_area: float = quantity(help="mass per area", unit="kg/m2", low=0.0)
