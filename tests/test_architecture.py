@@ -56,6 +56,7 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("solver.__main__", "sample_geometry"),
     ("plugin.probe", "plugin.files", "plugin.products", "plugin.manual", "plugin.summary"),
     ("plugin.gmsh_session", "plugin.tables"),
+    ("plugin.wrapping",),
     ("plugin.mesh_source",),
     ("plugin.job_files", "plugin.job", "plugin.job_text"),
     ("plugin.skin", "plugin.findings.finding"),
