@@ -194,3 +194,13 @@ def test_sources_from_outside_are_declared_and_lie_outside() -> None:
         solve(case_of(mesh, kinds, [Monopole("s", (0.0, 0.0, 0.5), 1e-3)], [200.0], place, order=2))
     with pytest.raises(CaseError, match=r"needs one surface of kind 'radiating'.* has 0"):
         solve(case_of(mesh, {}, [WAVES[0]], [200.0], place, order=2))
+
+
+def test_direct_lines_of_a_wide_band_keep_the_unknowns_outside() -> None:
+    """Orders by the rule would give the low lines a sub-band of their own; the unknowns outside are no selection of a map."""
+    f = np.array([20.0, 40.0, 80.0, 700.0])
+    case = pulsating(f, order=0, accuracy=1.0, error_bar=False, field_frequencies=np.array([20.0]))
+    result = solve(case, method="direct")
+    p = result.load_cases[0].contributions[:, 0, 0]
+    assert np.abs(20 * np.log10(np.abs(p / exact(f, 0.28)))).max() < 0.3
+    assert result.field(20.0).shape[0] == result.space.dofs.n_dofs
