@@ -101,9 +101,15 @@ class Exterior:
         free = ~env.held
         projected = np.zeros((len(env.trace), len(x)), dtype=np.complex128)
         projected[free] = self._project(traces[:, free].T @ (g * weights).T)
-        rows = np.asarray((self.operator(k).T[:, env.trace] @ projected).T, dtype=np.complex128)
+        stiffness, wave, mass = (part @ projected for part in self._to_trace)
+        rows = np.asarray((stiffness + 1j * k * wave - k * k * mass).T, dtype=np.complex128)
         rows[:, env.trace] += double
         return rows
+
+    @cached_property
+    def _to_trace(self) -> tuple[sp.csr_matrix, ...]:
+        """K^T, C^T, M^T (size, T): what the surface's own rows of the operator take from all unknowns."""
+        return tuple(matrix[self.envelope.trace].T.tocsr() for matrix in self.matrices)
 
     def _project(self, moments: npt.NDArray[np.complexfloating[Any, Any]]) -> Complex:
         real, imag = (self._mass_factor.solve(np.ascontiguousarray(part)) for part in (moments.real, moments.imag))
