@@ -66,6 +66,7 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("plugin.check",),
     ("plugin.load", "plugin.describe", "plugin.declared", "plugin.fields", "plugin.sampling"),
     ("plugin.study", "plugin.compare", "plugin.balance", "plugin.audio", "plugin.transmission"),
+    ("plugin.variants",),
     ("plugin.pictures", "plugin.export"),
     ("plugin.gmsh_views", "plugin.report"),
     ("plugin.script",),

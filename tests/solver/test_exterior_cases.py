@@ -204,3 +204,15 @@ def test_direct_lines_of_a_wide_band_keep_the_unknowns_outside() -> None:
     p = result.load_cases[0].contributions[:, 0, 0]
     assert np.abs(20 * np.log10(np.abs(p / exact(f, 0.28)))).max() < 0.3
     assert result.field(20.0).shape[0] == result.space.dofs.n_dofs
+
+
+def test_fields_of_many_points_are_those_of_the_rows(reduced: Result) -> None:
+    """Near and far from the surface, in single precision and some points at a time; which points lie outside is told alike."""
+    outer = reduced.outside(400.0)[0]
+    u = np.random.default_rng(7).normal(size=(400, 3))
+    points = u / np.linalg.norm(u, axis=1, keepdims=True) * np.geomspace(0.2, 3.0, 400)[:, None]
+    beyond = outer.exterior.beyond(points)
+    assert not beyond[:45].any() and beyond[np.linalg.norm(points, axis=1) > 0.301].all()
+    far = points[np.linalg.norm(points, axis=1) > 0.32]
+    rows = outer.exterior.pressure_rows(far, outer.k) @ outer.field
+    assert np.abs(outer.pressure(far) / rows - 1.0).max() < 1e-4
