@@ -68,6 +68,12 @@ def _inside(gmsh: Any) -> Iterator[None]:
         gmsh.option.setString("Geometry.OCCTargetUnit", target)
 
 
+def group_name(gmsh: Any, dim: int, tag: int) -> str:
+    """The name of a physical group; one made of its dimension and tag where it has none."""
+    name = str(gmsh.model.getPhysicalName(dim, tag)).strip()
+    return name or f"{('point', 'curve', 'surface', 'volume')[dim]}_{tag}"
+
+
 def open_model(path: Path, size: float | None, unit: str | None, units: Mapping[str, float]) -> float:
     """Load `path` into gmsh as the current model; returns the factor that brings its coordinates to metres."""
     gmsh = current_gmsh()

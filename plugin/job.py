@@ -22,6 +22,7 @@ import numpy as np
 
 from murmesh.plugin.gmsh_session import CAD
 from murmesh.plugin.mesh_source import UNITS, TaggedMesh, element_size, read_mesh
+from murmesh.plugin.wrapping import Wrap
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.catalogue import Limits, Ranges, Treatment
 from murmesh.solver.case.fields import Declared, quantity, record
@@ -131,6 +132,7 @@ class Job(Declared):
 
     title: str = quantity(help="title of the job", default="")
     mesh: MeshFile | None = quantity(help="the mesh", default=None)
+    wrap: Wrap | None = quantity(help="air to put around the geometry before it is meshed", default=None)
     regions: tuple[RegionEntry, ...] = quantity(help="volumes", default=())
     surfaces: tuple[SurfaceEntry, ...] = quantity(help="surfaces", default=())
     default_boundary: str = quantity(
@@ -157,6 +159,10 @@ class Job(Declared):
     def with_mesh(self, file: str, **options: Any) -> Job:
         """The mesh or geometry file; options of `MeshFile`."""
         return self.with_(mesh=MeshFile(file, **options))
+
+    def with_wrap(self, gap: float, **options: Any) -> Job:
+        """Air around the geometry; options of `Wrap`."""
+        return self.with_(wrap=Wrap(gap, **options))
 
     def region(self, name: str, medium: Medium, damping: Damping | None = None, where: Rule | None = None) -> Job:
         """Fill the volume group `name` with a medium."""
@@ -262,7 +268,8 @@ class Job(Declared):
         if self.mesh is None:
             raise CaseError("the job names no mesh; give file = ... under [mesh]")
         path = Path(folder) / self.mesh.file
-        return read_mesh(path, size=self.size_for(path), unit=self.mesh.unit, order=self.mesh.geometry_order)
+        size, unit, order = self.size_for(path), self.mesh.unit, self.mesh.geometry_order
+        return read_mesh(path, size=size, unit=unit, order=order, wrap=self.wrap)
 
     def size_for(self, path: Path) -> float | None:
         """The element size [m] to mesh `path` with; None leaves it to the file."""

@@ -1,4 +1,4 @@
-"""The tables of kinds and of the case file, derived from the declarations.
+"""The tables of kinds, of the case file and of tables that only a job has, derived from the declarations.
 
 `murmesh kinds` prints the first; the second stands in DEVELOPERS.md, where a test keeps it true:
 
@@ -21,6 +21,7 @@ from typing import Any, Union, cast
 
 import numpy as np
 
+from murmesh.plugin.wrapping import Wrap
 from murmesh.solver.case import boundary, catalogue, load, medium, model, motion, porous, spectrum, wall
 from murmesh.solver.case.fields import Declared
 from murmesh.solver.errors import CaseError
@@ -50,6 +51,8 @@ RECORDS: dict[str, type[Declared]] = {
     "/limits": catalogue.Limits,
     "/ranges": catalogue.Ranges,
 }
+JOB_TABLES: dict[str, type[Declared]] = {"[wrap]": Wrap}
+"""Tables of a job file that are used up when the mesh is made, so that no case holds them."""
 SCALARS: dict[type, str] = {str: "text", bool: "true or false", int: "whole number", float: "number", complex: "complex"}
 _WIDTH = 118
 _LEGEND = """\
@@ -189,7 +192,8 @@ def table_of_kinds(family: str = "") -> str:
     if family and family not in FAMILIES:
         raise CaseError(f"no family is called '{family}'; expected one of {', '.join(FAMILIES)}")
     chosen = [_family(name, cls) for name, cls in FAMILIES.items() if family in ("", name)]
-    return "\n\n".join([*chosen, _LEGEND])
+    tables = [f"OF A JOB FILE\n\n{_kind(name, cls)}" for name, cls in JOB_TABLES.items() if not family]
+    return "\n\n".join([*chosen, *tables, _LEGEND])
 
 
 def _family(name: str, cls: type[Declared]) -> str:
@@ -237,6 +241,7 @@ def case_layout() -> str:
     """The groups of the case file and the kinds of every family, as Markdown."""
     parts = [_record_section(path, cls) for path, cls in RECORDS.items()]
     parts += [_family_section(family, cls) for family, cls in FAMILIES.items()]
+    parts += [_job_section(name, cls) for name, cls in JOB_TABLES.items()]
     return "\n\n".join(parts)
 
 
@@ -250,6 +255,12 @@ def _family_section(family: str, cls: type[Declared]) -> str:
     return "\n".join(
         [f"#### {family[0].upper()}{family[1:]}", "", f"Stand in {places}.", "", *_HEAD, *_kind_rows(cls.registry.items())]
     )
+
+
+def _job_section(name: str, cls: type[Declared]) -> str:
+    about = " ".join(inspect.cleandoc(cls.__doc__ or "").split())
+    head = [f"#### `{name}`, of a job file only", "", about, "", _HEAD[0].replace("stored as", "takes"), _HEAD[1]]
+    return "\n".join([*head, *(_row(dataclasses.replace(entry, stored=entry.takes)) for entry in entries(cls))])
 
 
 def _kind_rows(members: Iterable[tuple[str, type[Declared]]]) -> Iterator[str]:

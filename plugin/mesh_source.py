@@ -19,8 +19,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.plugin.gmsh_session import CAD, current_gmsh, generate, gmsh_session, open_model
+from murmesh.plugin.gmsh_session import CAD, current_gmsh, generate, gmsh_session, group_name, open_model
 from murmesh.plugin.probe import gmsh_missing
+from murmesh.plugin.wrapping import Wrap, wrap_model
 from murmesh.solver.errors import CaseError, FormatError, MeshError, nearest
 
 Floats = npt.NDArray[np.float64]
@@ -148,12 +149,6 @@ def _gmsh_blocks(gmsh: Any, dim: int, known: Mapping[int, int], tags: Any, order
     return blocks
 
 
-def group_name(gmsh: Any, dim: int, tag: int) -> str:
-    """The name of a physical group; one made of its dimension and tag where it has none."""
-    name = str(gmsh.model.getPhysicalName(dim, tag)).strip()
-    return name or f"{('point', 'curve', 'surface', 'volume')[dim]}_{tag}"
-
-
 def _cell_name(gmsh: Any, kind: int) -> str:
     name, _, order, _, _, _ = gmsh.model.mesh.getElementProperties(kind)
     plain = str(name).split()[0].lower()
@@ -164,11 +159,14 @@ def _cell_name(gmsh: Any, kind: int) -> str:
 # files
 
 
-def read_mesh(path: str | Path, *, size: float | None = None, unit: str | None = None, order: int = 0) -> TaggedMesh:
+def read_mesh(
+    path: str | Path, *, size: float | None = None, unit: str | None = None, order: int = 0, wrap: Wrap | None = None
+) -> TaggedMesh:
     """The tagged mesh in `path`; geometry (.py, .geo, .step, .brep) is meshed with elements of at most `size` [m].
 
     `unit` says what one unit of the file's coordinates is; None takes them as metres (a STEP file states its own unit).
-    `order` 1 or 2 is that of the geometry where it is meshed here; 0 takes 2 if a surface is curved.
+    `order` 1 or 2 is that of the geometry where it is meshed here; 0 takes 2 if a surface is curved. `wrap` puts air around
+    geometry before it is meshed.
     Raises FormatError for what cannot be read, CaseError where the size shows that the unit must be stated.
     """
     path = Path(path)
@@ -178,7 +176,9 @@ def read_mesh(path: str | Path, *, size: float | None = None, unit: str | None =
         raise CaseError(f"unit '{unit}' is not known; {nearest(unit, UNITS)}")
     suffix = path.suffix.lower()
     if suffix in BY_GMSH and not (suffix == ".msh" and gmsh_missing()):
-        mesh = _by_gmsh(path, size, unit, order)
+        mesh = _by_gmsh(path, size, unit, order, wrap)
+    elif wrap is not None:
+        raise CaseError(f"'{path}' is a mesh, which cannot be wrapped; give its geometry, a gmsh script, .geo, STEP or BREP")
     else:
         mesh = _by_meshio(path).scaled(UNITS[unit or "m"])
     if unit is None:
@@ -186,13 +186,15 @@ def read_mesh(path: str | Path, *, size: float | None = None, unit: str | None =
     return mesh
 
 
-def _by_gmsh(path: Path, size: float | None, unit: str | None, order: int) -> TaggedMesh:
+def _by_gmsh(path: Path, size: float | None, unit: str | None, order: int, wrap: Wrap | None) -> TaggedMesh:
     cad = path.suffix.lower() in CAD
     with gmsh_session() as gmsh:
         factor = open_model(path, size, unit, UNITS)
         if unit is None and cad:
             box = np.reshape(gmsh.model.getBoundingBox(-1, -1), (2, 3))
             _require_plausible(factor * float(np.ptp(box, axis=0).max()), path, cad=True)
+        if wrap is not None:
+            wrap_model(wrap, factor)
         generate(path, None if size is None else size / factor, order)
         return from_gmsh(str(path)).scaled(factor)
 

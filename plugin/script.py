@@ -1,6 +1,7 @@
 """murmesh from a gmsh script, without a window:
 
     from murmesh.plugin import script
+    script.wrap(gap=0.2, ground=0.0)                # before the model is meshed: air around it, up to a dome
     result = script.solved("booth.toml")            # a Job, or a job file, on the current gmsh model
     script.show(result, 120.0, receiver="ear")      # the views of `murmesh window` in the current gmsh session
 
@@ -15,10 +16,13 @@ from murmesh.plugin.gmsh_views import Views
 from murmesh.plugin.job import Job
 from murmesh.plugin.mesh_source import from_gmsh
 from murmesh.plugin.model import build_case, store_job
+from murmesh.plugin.wrapping import wrap
 from murmesh.solver.case.hdf5 import write_case
 from murmesh.solver.case.model import Case
 from murmesh.solver.result import Result, read_result
 from murmesh.solver.sweep import solve
+
+__all__ = ["case_of", "show", "solved", "wrap", "write"]
 
 
 def case_of(job: Job | str | Path, scale: float = 1.0) -> Case:

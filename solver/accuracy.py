@@ -48,6 +48,23 @@ def next_order(space: Space) -> Space:
 
 
 @dataclass(frozen=True, eq=False)
+class Block:
+    """Those rows of a matrix that are not empty: most terms know a part of the added functions only."""
+
+    rows: Ints
+    values: Matrix
+
+    @classmethod
+    def of(cls, matrix: Matrix) -> Block:
+        rows = np.flatnonzero(np.diff(matrix.indptr))
+        return cls(rows, matrix[rows])
+
+    def on(self, basis: npt.NDArray[np.floating[Any]]) -> Block:
+        """Columns in the coordinates of a reduced basis (n, K), dense, in single precision."""
+        return Block(self.rows, np.asarray(self.values @ basis, dtype=np.float32))
+
+
+@dataclass(frozen=True, eq=False)
 class MeshError:
     """Residuals on the functions that the next order adds to a space.
 
@@ -61,8 +78,8 @@ class MeshError:
     finer: System
     old: Ints
     new: Ints
-    right: tuple[Matrix, ...]
-    left: tuple[Matrix, ...]
+    right: tuple[Block, ...]
+    left: tuple[Block, ...]
     diagonal: Floats
     load_sets: tuple[LoadSet, ...]
     receivers: Floats
@@ -73,27 +90,27 @@ class MeshError:
         finer = build_system(next_order(system.space), samples)
         old = _places(system, finer)
         new = np.setdiff1d(np.flatnonzero(~finer.fixed), old)
-        right = tuple(term.matrix[new][:, old] for term in finer.terms)
-        left = right if finer.symmetric else tuple(term.matrix.T.tocsr()[new][:, old] for term in finer.terms)
+        right = tuple(Block.of(term.matrix[new][:, old]) for term in finer.terms)
+        left = right if finer.symmetric else tuple(Block.of(term.matrix.T.tocsr()[new][:, old]) for term in finer.terms)
         diagonal = np.stack([np.abs(term.matrix.diagonal()[new]) for term in finer.terms])
         receivers = finer.receivers.T.tocsr()[new].toarray()
         return cls(finer, old, new, right, left, diagonal, _rows(finer, new), receivers)
 
     def on(self, basis: npt.NDArray[np.floating[Any]]) -> MeshError:
         """The same for lines in the coordinates of a reduced basis (n, K), in single precision: a bar needs no more."""
-        right = tuple(np.asarray(block @ basis, dtype=np.float32) for block in self.right)
-        same = self.left is self.right
-        left = right if same else tuple(np.asarray(block @ basis, dtype=np.float32) for block in self.left)
+        right = tuple(block.on(basis) for block in self.right)
+        left = right if self.left is self.right else tuple(block.on(basis) for block in self.left)
         return replace(self, right=right, left=left)
 
     def judged(self, values: Values, line: Line) -> Line:
         """The line with the sum of the docstring (kappa left out) as the `mesh_error` of its responses."""
         weight = 1.0 / np.maximum(np.abs(values.phi) @ self.diagonal, 1e-300)
-        z = (values.heard(self.receivers.T).T - _combined(self.left, values.phi, line.adjoints)) * weight[:, None]
+        size = len(self.new)
+        z = (values.heard(self.receivers.T).T - _combined(self.left, values.phi, line.adjoints, size)) * weight[:, None]
         responses = []
         for number, response in enumerate(line.responses):
             forces = self.load_sets[number].vectors(values.psi[number])[0] @ values.mix[number]
-            residual = forces - _combined(self.right, values.phi, response.field)
+            residual = forces - _combined(self.right, values.phi, response.field, size)
             responses.append(replace(response, mesh_error=z.T @ residual))
         return replace(line, responses=tuple(responses))
 
@@ -120,16 +137,16 @@ def _taken(vectors: Matrix, rows: Ints) -> Matrix:
     return vectors[rows]
 
 
-def _combined(blocks: tuple[Matrix, ...], phi: Complex, x: Complex) -> Complex:
-    """sum_j phi_j A_j x, real and imaginary part of x apart: the blocks are real."""
+def _combined(blocks: tuple[Block, ...], phi: Complex, x: Complex, size: int) -> Complex:
+    """sum_j phi_j A_j x (size, m), real and imaginary part of x apart: the blocks are real."""
     columns = np.hstack([x.real, x.imag])
-    if isinstance(blocks[0], np.ndarray):
+    if isinstance(blocks[0].values, np.ndarray):
         columns = columns.astype(np.float32)
     half = x.shape[1]
-    total = np.zeros((blocks[0].shape[0], half), dtype=np.complex128)
+    total = np.zeros((size, half), dtype=np.complex128)
     for coefficient, block in zip(phi, blocks, strict=True):
-        product = block @ columns
-        total += coefficient * (product[:, :half] + 1j * product[:, half:])
+        product = block.values @ columns
+        total[block.rows] += coefficient * (product[:, :half] + 1j * product[:, half:])
     return total
 
 

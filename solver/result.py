@@ -300,7 +300,8 @@ class Result:
         values = np.full((len(points), field.shape[1]), complex(np.nan, np.nan))
         values[inside] = evaluate(self.space.geometry, self.space.dofs, tet[inside], bary[inside]) @ field
         for outer in self.outside(frequency, load_case) if self.radiates else ():
-            beyond = ~inside & outer.exterior.beyond(points)
+            beyond = np.flatnonzero(~inside)
+            beyond = beyond[outer.exterior.beyond(points[beyond])]
             values[beyond] = outer.pressure(points[beyond])
         return values
 

@@ -121,8 +121,8 @@ def _below(folder: Path | None, name: str) -> Path | None:
 
 def _solve(space: Space, journal: Path | None, how: _How) -> Result:
     """A sweep whose orders are the rule's: direct lines in sub-bands where these pay. A reduced sweep has one band: a
-    second model would cost as many factorisations again."""
-    bands = plan_bands(space) if how.method == "direct" else ()
+    second model would cost as many factorisations again. One that radiates, too: its further unknowns are no selection."""
+    bands = plan_bands(space) if how.method == "direct" and not space.envelopes else ()
     if len(bands) < 2:
         return _Sweep.of(space, journal, how).run()
     lines: list[Line] = []

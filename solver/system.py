@@ -326,9 +326,8 @@ class Pattern:
         n = len(free)
         keys = [_keys(matrix) for matrix in matrices]
         union = keys[0]
-        for key in keys[1:]:
-            if not np.isin(key, union, assume_unique=True).all():
-                union = np.union1d(union, key)
+        if any(not _within(key, union) for key in keys[1:]):
+            union = _keys(sum((_ones(matrix) for matrix in matrices[1:]), _ones(matrices[0])).tocsr())
         rows, columns = union // n, union % n
         indptr = np.searchsorted(rows, np.arange(n + 1))
         core, slots = _core(rows, columns, free, symmetric)
@@ -350,6 +349,17 @@ def _core(rows: Ints, columns: Ints, free: npt.NDArray[np.bool_], symmetric: boo
 def _slots(union: Ints, key: Ints) -> Ints | None:
     """Where a term's entries go; None where it fills the whole pattern, as the volume's do."""
     return None if len(key) == len(union) else np.searchsorted(union, key)
+
+
+def _within(key: Ints, union: Ints) -> bool:
+    """Whether sorted numbers are all among other sorted ones."""
+    places = np.minimum(np.searchsorted(union, key), len(union) - 1)
+    return bool(np.array_equal(union[places], key))
+
+
+def _ones(matrix: sp.csr_matrix) -> sp.csr_matrix:
+    """Where a matrix has entries: adding such up merges patterns, and nothing cancels."""
+    return sp.csr_matrix((np.ones(matrix.nnz), matrix.indices, matrix.indptr), shape=matrix.shape)
 
 
 def _keys(matrix: sp.csr_matrix) -> Ints:
@@ -404,7 +414,8 @@ def _outputs(space: Space, samples: Samples) -> tuple[Matrix, Coefficient | None
     inside = samples.tet >= 0
     own = partial(evaluate, space.geometry, space.dofs, samples.tet[inside], samples.bary[inside])
     rows = widened(lambda: own().T, space, 1).T.tocsr()
-    beyond = [_listener(space, samples, int(sample)) for sample in np.flatnonzero(~inside)]
+    outer = [(radiator.region, Exterior(radiator.envelope, space.size)) for radiator in space.envelopes]
+    beyond = [_listener(space, outer, samples, int(sample)) for sample in np.flatnonzero(~inside)]
     if not beyond:
         return rows, None
 
@@ -422,14 +433,13 @@ def _outputs(space: Space, samples: Samples) -> tuple[Matrix, Coefficient | None
     return sp.vstack([rows, *(listener.rows for _, listener in beyond)]).tocsr(), chi
 
 
-def _listener(space: Space, samples: Samples, sample: int) -> tuple[int, Listener]:
+def _listener(space: Space, outer: list[tuple[int, Exterior]], samples: Samples, sample: int) -> tuple[int, Listener]:
     """The nearest surface that radiates past a sample, as its region and what is heard from it."""
     point = samples.points[sample]
     found = []
-    for outer in space.envelopes:
-        exterior = Exterior(outer.envelope, space.size)
+    for region, exterior in outer:
         if exterior.beyond(point[None])[0]:
-            found.append((float(np.linalg.norm(point - outer.envelope.centre)), outer.region, exterior))
+            found.append((float(np.linalg.norm(point - exterior.envelope.centre)), region, exterior))
     if not found:
         raise not_in_fluid(space.case.receivers[samples.receiver[sample]], point, space.geometry)
     _, region, exterior = min(found, key=lambda each: each[0])

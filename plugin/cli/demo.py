@@ -1,4 +1,4 @@
-"""murmesh demo: the demonstration cab, from geometry to pictures."""
+"""murmesh demo: the demonstration cab, from geometry to pictures; or the pump set, whose enclosure radiates."""
 
 from __future__ import annotations
 
@@ -9,6 +9,7 @@ from importlib.resources import as_file, files
 from pathlib import Path
 
 from murmesh.plugin.check import check_case, render
+from murmesh.plugin.cli import demo_pump_set
 from murmesh.plugin.cli import levels as levels_command
 from murmesh.plugin.cli import rank as rank_command
 from murmesh.plugin.cli import treat as treat_command
@@ -40,12 +41,23 @@ SOURCES = ("cab.py", "cab.toml", "cab_broadband.csv", "cab_tones.csv")
 
 def arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("folder", help="folder for everything the demonstration makes; made if it is missing")
+    parser.add_argument(
+        "--model",
+        choices=("cab", "pump_set"),
+        default="cab",
+        help="cab: panels and treatments inside (default); pump_set: an enclosure that radiates through a bend",
+    )
 
 
 def run(args: argparse.Namespace) -> int:
     started = time.monotonic()
     folder = Path(args.folder)
     _make(folder)
+    if args.model == "pump_set":
+        _copy(folder, demo_pump_set.SOURCES)
+        demo_pump_set.run(folder)
+        say(f"finished in {time.monotonic() - started:.0f} s; everything is in {folder}")
+        return DONE
     case, left_out = _case(folder)
     result = _solve(case, folder)
     _answers(result)
@@ -82,11 +94,15 @@ def _case(folder: Path) -> tuple[Case, list[str]]:
 
 
 def _copy_job(folder: Path) -> Path:
-    """The job and its files, so that the user can change them and run it again."""
-    for name in SOURCES:
+    _copy(folder, SOURCES)
+    return folder / "cab.toml"
+
+
+def _copy(folder: Path, names: tuple[str, ...]) -> None:
+    """A job and its files, so that the user can change them and run it again."""
+    for name in names:
         with as_file(files("murmesh.sample_geometry") / name) as source:
             shutil.copyfile(source, folder / name)
-    return folder / "cab.toml"
 
 
 def _solve(case: Case, folder: Path) -> Result:
@@ -136,8 +152,8 @@ def _treatment(result: Result, folder: Path) -> list[str]:
 register(
     Command(
         "demo",
-        "Run the demonstration: an invented cab with 14 panels, from geometry to a verified choice of treatments.",
-        "  murmesh demo cab_demo",
+        "Run a demonstration: an invented cab, from geometry to a verified choice of treatments; or an enclosure outside.",
+        "  murmesh demo cab_demo\n  murmesh demo --model pump_set pump_set_demo",
         arguments,
         run,
     )

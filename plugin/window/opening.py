@@ -9,12 +9,13 @@ from pathlib import Path
 from typing import Any
 
 from murmesh.plugin.cli.start import job_text as started
-from murmesh.plugin.gmsh_session import CAD, current_gmsh, generate, open_model
+from murmesh.plugin.gmsh_session import CAD, current_gmsh, generate, group_name, open_model
 from murmesh.plugin.job import Job, MeshFile
 from murmesh.plugin.job_text import toml_text
-from murmesh.plugin.mesh_source import BY_GMSH, UNITS, TaggedMesh, from_gmsh, group_name
+from murmesh.plugin.mesh_source import BY_GMSH, UNITS, TaggedMesh, from_gmsh
 from murmesh.plugin.window.document import Document
 from murmesh.plugin.window.state import State
+from murmesh.plugin.wrapping import wrap_model
 from murmesh.solver.errors import CaseError, FormatError
 
 
@@ -81,12 +82,14 @@ def _naming(document: Document, model: Path) -> Document:
 def _opened(path: Path, document: Document | None, job_file: Path, unit: str | None) -> Opened:
     if path.suffix.lower() not in BY_GMSH:
         raise FormatError(f"gmsh does not open '{path.name}'; expected one of {', '.join(sorted(BY_GMSH))}, or a job (.toml)")
-    mesh_file, size = MeshFile(path.name, unit=unit), None
+    mesh_file, size, around = MeshFile(path.name, unit=unit), None, None
     if document is not None and document.value(("mesh",)):
         job = document.job
-        mesh_file, size = job.mesh or mesh_file, job.size_for(path)
+        mesh_file, size, around = job.mesh or mesh_file, job.size_for(path), job.wrap
     factor = open_model(path, size, mesh_file.unit, UNITS)
     gmsh = current_gmsh()
+    if around is not None:
+        wrap_model(around, factor)
     regrouped = not gmsh.model.getPhysicalGroups(2) and bool(gmsh.model.getEntities(2))
     if regrouped:
         _group(gmsh)

@@ -194,3 +194,25 @@ def test_sources_from_outside_are_declared_and_lie_outside() -> None:
         solve(case_of(mesh, kinds, [Monopole("s", (0.0, 0.0, 0.5), 1e-3)], [200.0], place, order=2))
     with pytest.raises(CaseError, match=r"needs one surface of kind 'radiating'.* has 0"):
         solve(case_of(mesh, {}, [WAVES[0]], [200.0], place, order=2))
+
+
+def test_direct_lines_of_a_wide_band_keep_the_unknowns_outside() -> None:
+    """Orders by the rule would give the low lines a sub-band of their own; the unknowns outside are no selection of a map."""
+    f = np.array([20.0, 40.0, 80.0, 700.0])
+    case = pulsating(f, order=0, accuracy=1.0, error_bar=False, field_frequencies=np.array([20.0]))
+    result = solve(case, method="direct")
+    p = result.load_cases[0].contributions[:, 0, 0]
+    assert np.abs(20 * np.log10(np.abs(p / exact(f, 0.28)))).max() < 0.3
+    assert result.field(20.0).shape[0] == result.space.dofs.n_dofs
+
+
+def test_fields_of_many_points_are_those_of_the_rows(reduced: Result) -> None:
+    """Near and far from the surface, in single precision and some points at a time; which points lie outside is told alike."""
+    outer = reduced.outside(400.0)[0]
+    u = np.random.default_rng(7).normal(size=(400, 3))
+    points = u / np.linalg.norm(u, axis=1, keepdims=True) * np.geomspace(0.2, 3.0, 400)[:, None]
+    beyond = outer.exterior.beyond(points)
+    assert not beyond[:45].any() and beyond[np.linalg.norm(points, axis=1) > 0.301].all()
+    far = points[np.linalg.norm(points, axis=1) > 0.32]
+    rows = outer.exterior.pressure_rows(far, outer.k) @ outer.field
+    assert np.abs(outer.pressure(far) / rows - 1.0).max() < 1e-4
