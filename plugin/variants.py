@@ -73,10 +73,10 @@ class Variants:
 
     def loss(self, variant: Variant, receiver: str) -> Loss:
         """What a variant brings at a receiver."""
-        return insertion_loss(self.reference.result, variant.result, receiver)
+        return loss_between(self.reference.result, variant.result, receiver)
 
 
-def insertion_loss(reference: Result, result: Result, receiver: str) -> Loss:
+def loss_between(reference: Result, result: Result, receiver: str) -> Loss:
     """Level of `reference` minus level of `result` at `receiver`, over the sweep (A-weighted) and per third octave."""
     before, after = levels(reference, receiver), levels(result, receiver)
     whole = np.minimum(before.coverage, after.coverage) > PARTIAL

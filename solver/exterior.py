@@ -34,7 +34,7 @@ Kernel = Callable[[Floats, Floats], tuple[Complex, Complex]]
 
 _DEGREE, _NEAR_DEGREE = 10, 30
 """Added degree of the rule; degree where a point lies nearer to the surface than the largest face is long."""
-_TIERS = (0.2, 0.5)
+_TIERS = (0.3, 0.6)
 """Distances to the surface over its longest edge at which a coarser rule is enough for the field."""
 _PAIRS, _FEW = 2_000_000, 50
 """Pairs of a point and a point of the surface, and points at the finest rule, that are looked at together."""

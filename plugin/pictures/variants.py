@@ -44,7 +44,7 @@ def losses(found: Variants) -> Figure:
         f"level without ({found.reference.name}) minus level with · third octaves wholly in the sweep · positive: quieter",
         f"in brackets: the same for the {WEIGHTING['A']} level over {band_words(_band(found))}",
     ]
-    notes = [f"Convention: {CONVENTION}. {origin(found.reference.result)}.", _CAUTION]
+    notes = [f"Convention: {CONVENTION}.", f"{origin(found.reference.result)}.", _CAUTION]
     sheet = page("Insertion loss", facts, notes, len(found.receivers) * (_ROW + _GAP))
     for i, receiver in enumerate(found.receivers):
         up = (len(found.receivers) - 1 - i) * (_ROW + _GAP) + 0.55
@@ -88,7 +88,8 @@ def powers(found: Variants) -> Figure:
     facts = [f"parts of the power that the vibrating surfaces put in, over {band_words(_band(found))}"]
     notes = [
         f"Below {100 * _LEAST:.0f} % in every variant: 'others'. Hard walls take power by their residual absorption.",
-        f"Convention: {CONVENTION}. {origin(found.reference.result)}.",
+        f"Convention: {CONVENTION}.",
+        f"{origin(found.reference.result)}.",
     ]
     height = 0.62 * len(found.all) + 1.1
     sheet = page("Where the power goes", facts, notes, height + 0.45)

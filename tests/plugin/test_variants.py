@@ -15,7 +15,7 @@ from murmesh.plugin.cli import demo_pump_set, main
 from murmesh.plugin.pictures import variants
 from murmesh.plugin.pictures.style import texts
 from murmesh.plugin.pictures.variants import draw_maps, losses, powers
-from murmesh.plugin.variants import Variant, Variants, insertion_loss, split, summary_rows, write_losses, write_powers
+from murmesh.plugin.variants import Variant, Variants, loss_between, split, summary_rows, write_losses, write_powers
 from murmesh.solver.case.boundary import Impedance, Radiating, Vibrating
 from murmesh.solver.case.load import SurfaceVelocity
 from murmesh.solver.case.model import Case
@@ -50,14 +50,14 @@ def found() -> Variants:
 
 
 def test_half_the_velocity_is_six_decibels_in_every_band(found: Variants) -> None:
-    loss = insertion_loss(found.reference.result, found.others[0].result, "near")
+    loss = loss_between(found.reference.result, found.others[0].result, "near")
     assert loss.overall == pytest.approx(20 * np.log10(2), abs=1e-6)
     assert [band.nominal for band in loss.bands] == ["125", "160", "200", "250", "315"]
     assert loss.values == pytest.approx(np.full(5, 20 * np.log10(2)), abs=1e-6)
 
 
 def test_the_loss_of_the_whole_is_that_of_weighted_energies(found: Variants) -> None:
-    loss = insertion_loss(found.reference.result, found.others[1].result, "near")
+    loss = loss_between(found.reference.result, found.others[1].result, "near")
     energies = [
         (variant.result.mean_square("near") * 10 ** (A_weighting(F) / 10)).sum()  # tones
         for variant in (found.reference, found.others[1])
