@@ -22,11 +22,13 @@ def hankel(n: int, x: float) -> tuple[complex, complex]:
 class Shell:
     """A thin shell of air around a body, on infinite elements; solved with SciPy alone."""
 
-    def __init__(self, mesh: meshes.TestMesh, order: int, radial: int = 8, ground: Ground | None = None) -> None:
+    def __init__(
+        self, mesh: meshes.TestMesh, order: int, radial: int = 8, ground: Ground | None = None, centre: object = None
+    ) -> None:
         self.mesh, self.geometry = mesh, Geometry(mesh.nodes, mesh.tets)
         self.topology = Topology.build(mesh.tets)
         self.dofs = DofMap.build(self.topology, order)
-        self.envelope = envelope(self.geometry, self.dofs, self.side("outer"), radial=radial, ground=ground)
+        self.envelope = envelope(self.geometry, self.dofs, self.side("outer"), radial=radial, ground=ground, centre=centre)  # type: ignore[arg-type]
         self.size = self.dofs.n_dofs + self.envelope.extra
         self.outside = Exterior(self.envelope, self.size)
 

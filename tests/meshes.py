@@ -185,7 +185,24 @@ def shell(n: int, radii: Sequence[float], stretch: Sequence[float] = (1.0, 1.0, 
 
     `half` keeps z > 0; the rim faces are then the surface "rim".
     """
-    points, triangles = _octasphere(n)
+    return _layered(*_octasphere(n), radii, stretch, half)
+
+
+def ringed_shell(n: int, radii: Sequence[float]) -> TestMesh:
+    """A shell whose edges run along n latitudes per quarter, 90/n degrees apart, so that a cap can end on them."""
+    mesh = _layered(*_octasphere(n, rings=True), radii, (1.0, 1.0, 1.0), half=False)
+    nodes, ends, middle = mesh.nodes.copy(), mesh.tets[:, TET_EDGES].reshape(-1, 2), mesh.tets[:, 4:].ravel()
+    height = nodes[ends][..., 2] / np.linalg.norm(nodes[ends], axis=2)
+    ring = np.abs(height[:, 0] - height[:, 1]) < 1e-9
+    at, z = middle[ring], height[ring, 0]
+    radius = np.linalg.norm(nodes[at], axis=1)
+    flat = np.hypot(*nodes[at, :2].T)
+    nodes[at, :2] *= (radius * np.sqrt(1.0 - z**2) / np.maximum(flat, 1e-300))[:, None]
+    nodes[at, 2] = radius * z
+    return replace(mesh, nodes=nodes)
+
+
+def _layered(points: Floats, triangles: Ints, radii: Sequence[float], stretch: Sequence[float], half: bool) -> TestMesh:
     if half:
         triangles = triangles[np.all(points[triangles][..., 2] > -1e-12, axis=1)]
         used, flat = np.unique(triangles, return_inverse=True)
@@ -240,8 +257,9 @@ def _rounded(mesh: TestMesh, bare: TestMesh) -> TestMesh:
     return replace(mesh, nodes=nodes)
 
 
-def _octasphere(n: int) -> tuple[Floats, Ints]:
-    """8 n^2 triangles on the unit sphere, no edge across the planes x, y, z = 0; equal angles along the edges."""
+def _octasphere(n: int, *, rings: bool = False) -> tuple[Floats, Ints]:
+    """8 n^2 triangles on the unit sphere, no edge across the planes x, y, z = 0; equal angles along the edges, or points on
+    latitudes 90/n degrees apart."""
     ij = np.array([(i, j) for i in range(n + 1) for j in range(n + 1 - i)])
     number = {(i, j): m for m, (i, j) in enumerate(map(tuple, ij.tolist()))}
     up = [[number[i, j], number[i + 1, j], number[i, j + 1]] for i in range(n) for j in range(n - i)]
@@ -249,6 +267,11 @@ def _octasphere(n: int) -> tuple[Floats, Ints]:
     bary = np.column_stack([ij, n - ij.sum(axis=1)]) / n
     x = np.sin(0.5 * np.pi * bary)
     x /= np.linalg.norm(x, axis=1, keepdims=True)
+    if rings:
+        s = ij.sum(axis=1)
+        polar, azimuth = 0.5 * np.pi * s / n, 0.5 * np.pi * ij[:, 1] / np.maximum(s, 1)
+        x = np.stack([np.sin(polar) * np.cos(azimuth), np.sin(polar) * np.sin(azimuth), np.cos(polar)], axis=1)
+        x[np.abs(x) < 1e-15] = 0.0
     parts = [(x * np.array(signs), np.array(up + down)) for signs in itertools.product((1.0, -1.0), repeat=3)]
     points = np.concatenate([p for p, _ in parts])
     triangles = np.concatenate([t + len(x) * k for k, (_, t) in enumerate(parts)])
