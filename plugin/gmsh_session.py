@@ -16,6 +16,8 @@ from murmesh.solver.errors import CaseError, FormatError, MeshError
 
 _KEPT_OPTIONS = ("Mesh.MeshSizeMax", "General.Terminal")
 CAD = {".step", ".stp", ".brep"}
+_FLATTEST = 0.05
+"""Signed inverse condition number of a curved element, 1 for the best and below 0 where it folds over, that is let pass."""
 _STEP_UNITS = {"": 1.0, "MILLI": 1e-3, "CENTI": 1e-2, "DECI": 0.1, "MICRO": 1e-6, "KILO": 1e3}
 
 
@@ -163,10 +165,20 @@ def generate(path: Path, size: float | None, order: int) -> None:
         gmsh.model.mesh.generate(3)
         if order == 2 or (order == 0 and _curved(gmsh)):
             gmsh.model.mesh.setOrder(2)
+            _unfold(gmsh)
     except Exception as error:
         raise MeshError(
             f"gmsh cannot mesh the volumes of '{path}': {error}; heal the geometry or choose another element size"
         ) from None
+
+
+def _unfold(gmsh: Any) -> None:
+    """Curved elements between two curved surfaces may fold over where the gap is narrow: move their mid-edge nodes."""
+    tags = [tag for found in gmsh.model.mesh.getElements(3)[1] for tag in found]
+    for method in ("HighOrder", "HighOrderElastic"):
+        if min(gmsh.model.mesh.getElementQualities(tags, "minSICN")) > _FLATTEST:
+            return
+        gmsh.model.mesh.optimize(method)
 
 
 def _curved(gmsh: Any) -> bool:

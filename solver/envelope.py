@@ -103,13 +103,6 @@ class Envelope:
             np.linalg.norm(self.geometry.nodes[_face_nodes(self.geometry, self.tet, self.face)] - self.centre, axis=1).max()
         )
 
-    @cached_property
-    def smallest_radius(self) -> float:
-        """A length [m] within which every point about the centre lies inside: n . R over the faces, less what curves."""
-        at = face_points(self.geometry, self.tet, self.face, 4)
-        arms = at.points - self.centre
-        return 0.9 * float(np.einsum("mqd,mqd->mq", arms, at.normals).min())
-
     def matrices(self, size: int) -> tuple[sp.csr_matrix, sp.csr_matrix, sp.csr_matrix]:
         """K, C, M (size, size), real, K [m], C [m2], M [m3]; K and C are not symmetric."""
         s, t = self._forms, radial_matrices(self.radial)

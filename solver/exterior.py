@@ -36,6 +36,8 @@ _DEGREE, _NEAR_DEGREE = 10, 30
 """Added degree of the rule; degree where a point lies nearer to the surface than the largest face is long."""
 _TIERS = (0.3, 0.6)
 """Distances to the surface over its longest edge at which a coarser rule is enough for the field."""
+_SURE = 0.07
+"""Height over the longest edge above which a plane that touches the surface tells on which side of it a point lies."""
 _PAIRS, _FEW = 2_000_000, 50
 """Pairs of a point and a point of the surface, and points at the finest rule, that are looked at together."""
 
@@ -200,27 +202,30 @@ class Exterior:
         return {}
 
     def beyond(self, points: Floats) -> npt.NDArray[np.bool_]:
-        """Which points (m, 3) lie outside: the surface (with its image) covers no solid angle as seen from there."""
+        """Which points (m, 3) lie outside: above the surface where their ray from the centre leaves it; near it, where that
+        is not sharp enough, those from which it (with its image) covers no solid angle."""
         env, x = self.envelope, np.atleast_2d(points)
-        away = np.linalg.norm(x - env.centre, axis=1)
-        unsure = (away <= env.largest_radius) & (away >= env.smallest_radius)
-        outside = away > env.largest_radius
-        for some in np.array_split(np.flatnonzero(unsure), len(x) // _FEW + 1):
-            outside[some] = self._uncovered(x[some])
+        height = self._height(x)
+        outside = height > 0
+        close = np.flatnonzero(np.abs(height) < _SURE * self._longest)
+        for some in np.array_split(close, len(close) // _FEW + 1):
+            outside[some] = self._open(x[some])
         if env.ground is None:
             return np.asarray(outside)
         return np.asarray(outside & ((x - env.centre) @ np.asarray(env.ground.normal) >= -1e-9 * env.largest_radius))
 
-    def _uncovered(self, x: Floats) -> npt.NDArray[np.bool_]:
-        """Whether points see the surface from outside; near it a fine rule is needed to tell."""
-        close = self._clearance(x) < 0.25 * self._longest
-        out = np.empty(len(x), dtype=bool)
-        out[close], out[~close] = (self._open(x[some], degree) for some, degree in ((close, _NEAR_DEGREE), (~close, _DEGREE)))
-        return out
+    def _height(self, x: Floats) -> Floats:
+        """Heights (m,) [m] above the planes that touch the surface nearest to the rays from its centre: it is star-shaped."""
+        at, _ = self._quadrature(_NEAR_DEGREE)
+        y, n = at.points.reshape(-1, 3), at.normals.reshape(-1, 3)
+        arms, rays = x - self.envelope.centre, y - self.envelope.centre
+        tree = cKDTree(rays / np.linalg.norm(rays, axis=1, keepdims=True))
+        place = tree.query(arms / np.maximum(np.linalg.norm(arms, axis=1, keepdims=True), 1e-300))[1]
+        return np.asarray(np.einsum("md,md->m", x - y[place], n[place]))
 
-    def _open(self, x: Floats, degree: int) -> npt.NDArray[np.bool_]:
+    def _open(self, x: Floats) -> npt.NDArray[np.bool_]:
         env = self.envelope
-        at, _ = self._quadrature(degree)
+        at, _ = self._quadrature(_NEAR_DEGREE)
         y, flux = at.points.reshape(-1, 3), (at.normals * at.weights[..., None]).reshape(-1, 3)
 
         def covered(x: Floats) -> Floats:

@@ -254,6 +254,15 @@ def test_a_geometry_is_opened_with_a_job_to_begin_with(gmsh_model: None, tmp_pat
     assert not [f for f in state.findings(opened.mesh) if f.severity == "error"]
 
 
+def test_a_wrapped_geometry_is_opened_with_its_air(gmsh_model: None, tmp_path: Path) -> None:
+    (tmp_path / "box.geo").write_text('SetFactory("OpenCASCADE");\nBox(1) = {0, 0, 0, 1, 0.8, 0.6};\n')
+    wrapped = '[mesh]\nfile = "box.geo"\nsize = 0.5\n[wrap]\ngap = 0.2\nground = 0.0\n'
+    (tmp_path / "box.toml").write_text(wrapped)
+    opened, state = open_files(tmp_path / "box.toml")
+    assert set(opened.entities) == {"outside", "ground"} and set(opened.mesh.tet_groups) == {"outside_air"}
+    assert state.document.job.wrap is not None
+
+
 def test_a_mesh_brings_its_job_and_takes_it_back(gmsh_model: None, tmp_path: Path) -> None:
     import gmsh
 

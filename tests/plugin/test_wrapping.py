@@ -217,7 +217,7 @@ def _job(outside: Radiating) -> Job:
 SCRIPT = """
 import gmsh
 gmsh.initialize()
-ball = gmsh.model.occ.addSphere(0, 0, 0, {radius})
+ball = gmsh.model.occ.addSphere(0, 0, 0, 250, -1, {lowest})
 gmsh.model.occ.synchronize()
 gmsh.model.addPhysicalGroup(2, [tag for _, tag in gmsh.model.getBoundary([(3, ball)], oriented=False)], name="ball")
 """
@@ -240,17 +240,22 @@ kind = "radiating"
 frequencies = [109.0, 218.0]
 order = 3
 """
+DOME = TOML.replace("gap = 0.08", "gap = 0.08\nground = 0.0").replace('"radiating"', '"radiating"\nground = "rigid"')
 
 
-def test_a_wrapped_pulsating_sphere_radiates_what_theory_says(gmsh_library: None, tmp_path: Path) -> None:
-    """From a job: W = S |U|^2/2 rho c (ka)^2/(1 + (ka)^2), as p = rho c U i ka/(1 + i ka) on it (Pierce, Acoustics, ch. 4)."""
-    (tmp_path / "ball.py").write_text(SCRIPT.format(radius=250.0))
-    (tmp_path / "ball.toml").write_text(TOML)
+@pytest.mark.parametrize("half", [False, True])
+def test_a_wrapped_pulsating_sphere_radiates_what_theory_says(gmsh_library: None, tmp_path: Path, half: bool) -> None:
+    """From a job: W = S |U|^2/2 rho c (ka)^2/(1 + (ka)^2), as p = rho c U i ka/(1 + i ka) on it (Pierce, Acoustics, ch. 4).
+
+    Half a sphere on a rigid ground radiates half of it, for its image is the other half.
+    """
+    (tmp_path / "ball.py").write_text(SCRIPT.format(lowest=0.0 if half else -1.5707963267948966))
+    (tmp_path / "ball.toml").write_text(DOME if half else TOML)
     job = Job.from_toml(tmp_path / "ball.toml")
     assert job.wrap is not None and job.wrap.gap == 0.08
     result = solve(build_case(job, job.read_mesh(tmp_path)))
     ka = 2 * np.pi * result.frequencies / C * 0.25
-    exact = 4 * np.pi * 0.25**2 * 0.01**2 / 2 * RHO * C * ka**2 / (1 + ka**2)
+    exact = (2 if half else 4) * np.pi * 0.25**2 * 0.01**2 / 2 * RHO * C * ka**2 / (1 + ka**2)
     radiated = result.load_cases[0].absorbed[:, result.power_labels.index("radiated/outside")]
     assert radiated == pytest.approx(exact, rel=0.01)
     assert np.abs(result.imbalance()).max() < 1e-9
