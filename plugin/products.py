@@ -15,7 +15,10 @@ from pathlib import Path
 from typing import TypeVar
 
 from murmesh.solver.errors import ResultError, nearest
+from murmesh.solver.result import Result
 
+OUTSIDE = "outside"
+"""Source of members that take a result in which something radiates."""
 Maker = TypeVar("Maker", bound=Callable[..., Path])
 
 
@@ -75,6 +78,10 @@ class Products:
         if name not in known:
             raise ResultError(f"there is no '{name}' to make; {nearest(name, known)}")
         return known[name]
+
+    def of(self, result: Result) -> list[Product]:
+        """The members that this result can be given to: those of the outside only where something radiates."""
+        return [p for p in self if p.source == "result" or (p.source == OUTSIDE and result.radiates)]
 
     def __iter__(self) -> Iterator[Product]:
         return iter(self.all().values())

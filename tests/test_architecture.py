@@ -65,7 +65,7 @@ ROWS: tuple[tuple[str, ...], ...] = (
     ("plugin.model", "plugin.findings"),
     ("plugin.check",),
     ("plugin.load", "plugin.describe", "plugin.declared", "plugin.fields", "plugin.sampling"),
-    ("plugin.study", "plugin.compare", "plugin.balance", "plugin.audio", "plugin.transmission"),
+    ("plugin.study", "plugin.compare", "plugin.balance", "plugin.audio", "plugin.transmission", "plugin.directivity"),
     ("plugin.variants",),
     ("plugin.pictures", "plugin.export"),
     ("plugin.gmsh_views", "plugin.report"),

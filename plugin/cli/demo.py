@@ -128,9 +128,9 @@ def _answers(result: Result) -> None:
 
 def _files(result: Result, folder: Path) -> list[str]:
     say("4/6  tables and VTK files")
-    export(result, folder / "files", [product for product in EXPORTS if product.source == "result"])
+    export(result, folder / "files", EXPORTS.of(result))
     say("5/6  pictures")
-    pictures = [picture for picture in PICTURES if picture.source == "result"]
+    pictures = PICTURES.of(result)
     first, *others = [held.name for held in result.load_cases]
     left_out = draw(result, folder / "pictures", pictures, load_case=first)
     for name in others:

@@ -8,20 +8,20 @@ from pathlib import Path
 from murmesh.plugin.cli.command import CANNOT, DONE, Command, answer, product_arguments, product_options, register, say
 from murmesh.plugin.pictures import PICTURES
 from murmesh.plugin.probe import rendering_missing
-from murmesh.plugin.products import Product
+from murmesh.plugin.products import OUTSIDE, Product
 from murmesh.solver.result import Result, read_result
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:
-    known = ", ".join(product.name for product in PICTURES if product.source == "result")
+    known = ", ".join(product.name for product in PICTURES if product.source in ("result", OUTSIDE))
     product_arguments(parser, "folder for the PNG files")
     parser.add_argument("--picture", action="append", default=[], help=f"one of: {known}; repeat for several (default: all)")
 
 
 def run(args: argparse.Namespace) -> int:
     result = read_result(args.result)
-    names = args.picture or [product.name for product in PICTURES if product.source == "result"]
-    left_out = draw(result, Path(args.folder), [PICTURES[name] for name in names], **product_options(args))
+    pictures = [PICTURES[name] for name in args.picture] or PICTURES.of(result)
+    left_out = draw(result, Path(args.folder), pictures, **product_options(args))
     return CANNOT if left_out else DONE
 
 

@@ -7,19 +7,19 @@ from pathlib import Path
 
 from murmesh.plugin.cli.command import DONE, Command, answer, product_arguments, product_options, register
 from murmesh.plugin.export import EXPORTS
-from murmesh.plugin.products import Product
+from murmesh.plugin.products import OUTSIDE, Product
 from murmesh.solver.result import Result, read_result
 
 
 def arguments(parser: argparse.ArgumentParser) -> None:
-    known = ", ".join(product.name for product in EXPORTS if product.source == "result")
+    known = ", ".join(product.name for product in EXPORTS if product.source in ("result", OUTSIDE))
     product_arguments(parser, "folder for the files")
     parser.add_argument("--format", action="append", default=[], help=f"one of: {known}; repeat for several (default: all)")
 
 
 def run(args: argparse.Namespace) -> int:
     result = read_result(args.result)
-    formats = [EXPORTS[name] for name in args.format] or [product for product in EXPORTS if product.source == "result"]
+    formats = [EXPORTS[name] for name in args.format] or EXPORTS.of(result)
     export(result, Path(args.folder), formats, **product_options(args))
     return DONE
 

@@ -20,6 +20,11 @@ Floats = npt.NDArray[np.float64]
 def point_arrays(result: Result, cloud: Cloud, frequency: float, load_case: str = "") -> dict[str, Floats]:
     """Named point arrays (k,) of the field kept at `frequency`."""
     pressure = np.asarray(values_on(result.space, cloud, result.field(frequency, load_case)), dtype=np.complex128)
+    return named_arrays(result, pressure, load_case)
+
+
+def named_arrays(result: Result, pressure: npt.NDArray[np.complex128], load_case: str = "") -> dict[str, Floats]:
+    """Named point arrays (k,) of pressures (k, r)."""
     columns = pressure.shape[1]
     arrays: dict[str, Floats] = {}
     for r in range(columns):

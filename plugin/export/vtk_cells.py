@@ -8,12 +8,15 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from functools import cache
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
+from murmesh.plugin.files import written
 from murmesh.plugin.sampling import Cloud, lattice, sample_volume
+from murmesh.solver.errors import ResultError
 from murmesh.solver.space import Space
 
 if TYPE_CHECKING:
@@ -84,14 +87,48 @@ def unstructured_grid(cells: Cells, arrays: dict[str, Floats], words: dict[str, 
     return _dressed(grid, arrays, words)
 
 
-def surface_mesh(points: Floats, triangles: Ints, arrays: dict[str, Floats], words: dict[str, str]) -> vtkDataSet:
-    """A vtkPolyData of triangles with point arrays and texts as field data."""
+def surface_mesh(
+    points: Floats, triangles: Ints, arrays: dict[str, Floats], words: dict[str, str], cells: dict[str, Floats] | None = None
+) -> vtkDataSet:
+    """A vtkPolyData of triangles with point arrays, cell arrays and texts as field data."""
     from vtkmodules.vtkCommonDataModel import vtkPolyData
 
     mesh = vtkPolyData()
     mesh.SetPoints(_points(points))
     mesh.SetPolys(_cell_array(triangles))
+    for name, values in (cells or {}).items():
+        array = _vtk_array(values)
+        array.SetName(name)
+        mesh.GetCellData().AddArray(array)
     return _dressed(mesh, arrays, words)
+
+
+def uniform_grid(origin: Floats, step: float, counts: Ints, arrays: dict[str, Floats], words: dict[str, str]) -> vtkDataSet:
+    """A vtkImageData with point arrays, x running fastest, and texts as field data."""
+    from vtkmodules.vtkCommonDataModel import vtkImageData
+
+    grid = vtkImageData()
+    grid.SetOrigin(*origin)
+    grid.SetSpacing(step, step, step)
+    grid.SetDimensions(*(int(n) for n in counts))
+    return _dressed(grid, arrays, words)
+
+
+def write_xml(data: vtkDataObject, path: Path) -> Path:
+    """Write VTK's XML file of a dataset or of blocks, whole or not at all.
+
+    Raises: ResultError where it could not be written.
+    """
+    from vtkmodules import vtkIOXML
+
+    kind = data.GetClassName().removeprefix("vtk").removesuffix("Set")  # blocks are written by vtkXMLMultiBlockDataWriter
+    with written(path) as scratch:
+        writer: Any = getattr(vtkIOXML, f"vtkXML{kind}Writer")()
+        writer.SetFileName(str(scratch))
+        writer.SetInputData(data)
+        if not writer.Write():
+            raise ResultError(f"'{path}' could not be written; check the space left in its folder")
+    return Path(path)
 
 
 def _vtk_array(values: npt.NDArray[np.generic]) -> Any:

@@ -6,12 +6,10 @@ from pathlib import Path
 
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.export.arrays import header, point_arrays
-from murmesh.plugin.export.vtk_cells import add_words, surface_mesh
+from murmesh.plugin.export.vtk_cells import add_words, surface_mesh, write_xml
 from murmesh.plugin.fields import kept_line
-from murmesh.plugin.files import written
 from murmesh.plugin.sampling import UNNAMED, Skin, sample_skin
 from murmesh.solver.case.model import Case
-from murmesh.solver.errors import ResultError
 from murmesh.solver.result import Result
 
 REST = "unnamed"
@@ -24,7 +22,6 @@ def write(result: Result, path: Path, *, frequency: float | None = None, load_ca
     The parts lie in a folder named after the file, which goes with it. Raises ResultError if no field is kept there.
     """
     from vtkmodules.vtkCommonDataModel import vtkCompositeDataSet, vtkMultiBlockDataSet
-    from vtkmodules.vtkIOXML import vtkXMLMultiBlockDataWriter
 
     line = kept_line(result, frequency, load_case)
     skin = sample_skin(result.space)
@@ -36,13 +33,7 @@ def write(result: Result, path: Path, *, frequency: float | None = None, load_ca
         own = {key: values[used] for key, values in arrays.items()}
         blocks.SetBlock(number, surface_mesh(skin.cloud.points[used], triangles, own, words))
         blocks.GetMetaData(number).Set(vtkCompositeDataSet.NAME(), name)
-    with written(path) as scratch:
-        writer = vtkXMLMultiBlockDataWriter()
-        writer.SetFileName(str(scratch))
-        writer.SetInputData(blocks)
-        if not writer.Write():
-            raise ResultError(f"'{path}' could not be written; check the space left in its folder")
-    return Path(path)
+    return write_xml(blocks, path)
 
 
 def block_names(case: Case, skin: Skin) -> list[tuple[str, int, int]]:

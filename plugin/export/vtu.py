@@ -6,10 +6,8 @@ from pathlib import Path
 
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.export.arrays import header, point_arrays
-from murmesh.plugin.export.vtk_cells import unstructured_grid, volume_cells
+from murmesh.plugin.export.vtk_cells import unstructured_grid, volume_cells, write_xml
 from murmesh.plugin.fields import kept_line
-from murmesh.plugin.files import written
-from murmesh.solver.errors import ResultError
 from murmesh.solver.result import Result
 
 
@@ -20,15 +18,7 @@ def write(result: Result, path: Path, *, frequency: float | None = None, load_ca
     Cells are Lagrange tetrahedra of the solution's own order, exact between their points; `flat` writes linear ones
     instead, p^3 per element, for readers without high-order cells. Raises ResultError if no field is kept there.
     """
-    from vtkmodules.vtkIOXML import vtkXMLUnstructuredGridWriter
-
     line = kept_line(result, frequency, load_case)
     cells = volume_cells(result.space, flat)
     grid = unstructured_grid(cells, point_arrays(result, cells.cloud, line, load_case), header(result, load_case, line))
-    with written(path) as scratch:
-        writer = vtkXMLUnstructuredGridWriter()
-        writer.SetFileName(str(scratch))
-        writer.SetInputData(grid)
-        if not writer.Write():
-            raise ResultError(f"'{path}' could not be written; check the space left in its folder")
-    return Path(path)
+    return write_xml(grid, path)

@@ -77,10 +77,15 @@ class Page:
     right: float
     top: float
 
-    def axes(self, left: float, bottom: float, width: float, height: float) -> Axes:
-        """Axes at a place in inches from the lower left corner of the free part."""
+    def axes(self, left: float, bottom: float, width: float, height: float, **kind: Any) -> Axes:
+        """Axes at a place in inches from the lower left corner of the free part; `kind` as matplotlib's `add_axes`."""
         w, h = self.figure.get_size_inches()
-        return self.figure.add_axes(((self.left + left) / w, (self.bottom + bottom) / h, width / w, height / h))
+        return self.figure.add_axes(((self.left + left) / w, (self.bottom + bottom) / h, width / w, height / h), **kind)
+
+    def write(self, text: str, left: float, bottom: float, **style: Any) -> None:
+        """Words at a place in inches from the lower left corner of the free part."""
+        w, h = self.figure.get_size_inches()
+        self.figure.text((self.left + left) / w, (self.bottom + bottom) / h, text, **style)
 
     def narrowed(self, inches: float) -> Page:
         """The same page with less free width, from the right."""
