@@ -328,7 +328,7 @@ def _unseen(lines: int, seen: list[int]) -> Ints:
 def _new_columns(full: Engine, model: Reduction, line: Line, factor: Factor, frequencies: Floats) -> Floats:
     """Exact solutions at the line and their Krylov vectors, real, orthonormal and orthogonal to the basis."""
     free = full.free
-    fields = np.hstack([response.field for response in line.responses]) if line.responses else line.adjoints[:, :0]
+    fields = np.hstack([_carried(response) for response in line.responses]) if line.responses else line.adjoints[:, :0]
     adjoints = line.adjoints
     start = _start(adjoints, model.samples)
     slope = full.inner(full.system.matrix(_slope(full.system, line.frequency, frequencies)))
@@ -341,6 +341,11 @@ def _new_columns(full: Engine, model: Reduction, line: Line, factor: Factor, fre
     columns = np.zeros((full.system.size, 2 * sum(block.shape[1] for block in blocks)))
     columns[free] = np.hstack([part for block in blocks for part in (block.real, block.imag)])
     return orthonormal(model.basis[:, ~model.projected.fixed], columns)
+
+
+def _carried(response: Response) -> Complex:
+    """The fields that the basis must carry: of every load by itself where its radiated power is asked for."""
+    return response.alone if response.alone.size else response.field
 
 
 def _start(adjoints: Complex, samples: Samples) -> Complex:
@@ -403,6 +408,7 @@ def _check(model: Reduction, values: Values, exact: Line) -> Check:
         deviation(model.samples, a.contributions, b.contributions, mix) for (a, b), mix in zip(pairs, values.mix, strict=True)
     ]
     level = max(heard, default=0.0) if len(model.samples.receiver) else field
+    level = max([level, *(power_deviation(a.radiated, b.radiated) for a, b in pairs)])
     return Check(exact.frequency, level, field, estimate, False)
 
 
@@ -415,6 +421,14 @@ def deviation(samples: Samples, found: Complex, exact: Complex, mix: Complex) ->
     levels = [_mean_square(samples, p @ mix) for p in (found, exact)]
     change = np.abs(10 * np.log10(np.maximum(levels[0], 1e-300) / np.maximum(levels[1], 1e-300)))
     return float(max(np.max(DB * np.log1p(parts), initial=0.0), np.max(change, initial=0.0)))
+
+
+def power_deviation(found: Complex, exact: Complex) -> float:
+    """Largest difference [dB] of forms (surfaces, loads, loads) of radiated power, against the largest entry of a surface."""
+    if not exact.size:
+        return 0.0
+    largest = np.maximum(np.abs(exact).max(axis=(1, 2)), 1e-300)
+    return float(np.max(0.5 * DB * np.log1p(np.abs(found - exact).max(axis=(1, 2)) / largest)))
 
 
 def _mean_square(samples: Samples, pressure: Complex) -> Floats:
@@ -450,7 +464,7 @@ def _estimated(model: Reduction, engine: Engine, values: Values) -> tuple[Line, 
     adjoint = model.sketch.adjoint_residual(values, line.adjoints)
     out = [0.0]
     for number, response in enumerate(line.responses):
-        alone = _fields_alone(engine, factor, matrix, values, number)
+        alone = response.alone if response.alone.size else _fields_alone(engine, factor, matrix, values, number)
         residuals = model.sketch.forward_residuals(number, values, alone)
         out.append(_raw_estimate(model, values, response, adjoint, residuals, values.mix[number]))
     return line, max(out)
