@@ -9,6 +9,7 @@ import numpy as np
 
 from murmesh.plugin.cli.command import DONE, Command, answer, answer_json, register, table
 from murmesh.plugin.pictures import PICTURES
+from murmesh.plugin.summary import CAUTIONS
 from murmesh.plugin.transmission import REMARK, Transmission, write_csv
 from murmesh.solver.result import read_result
 
@@ -44,7 +45,7 @@ def text(found: Transmission) -> str:
         for f, loss in zip(found.result.frequencies, found.loss, strict=True)
     ]
     head = f"Transmission loss from {found.inlet} to {found.outlet}"
-    return f"{head}\n{table(('frequency [Hz]', 'loss [dB]'), rows)}\n{REMARK}"
+    return f"{head}\n{table(('frequency [Hz]', 'loss [dB]'), rows)}\n{REMARK}\n{CAUTIONS}"
 
 
 register(
