@@ -31,10 +31,12 @@ def is_power(place: str) -> bool:
     return place == RADIATED or place.startswith(THROUGH)
 
 
-def places(result: Result) -> tuple[str, ...]:
-    """The receivers, then what is radiated: in all, and through each surface where there are several."""
+def places(result: Result, load_case: str = "") -> tuple[str, ...]:
+    """The receivers, then what is radiated: in all, and through each surface where there are several; nothing is radiated
+    that can be told apart where a load comes from outside."""
     receivers = tuple(receiver.name for receiver in result.case.receivers)
-    surfaces = [label.removeprefix(RADIATED_LABEL) for label in radiated_labels(result.power_labels)]
+    labels = () if _from_outside(result, load_case) else radiated_labels(result.power_labels)
+    surfaces = [label.removeprefix(RADIATED_LABEL) for label in labels]
     each = tuple(THROUGH + name for name in surfaces) if len(surfaces) > 1 else ()
     return (*receivers, *((RADIATED, *each) if surfaces else ()))
 
@@ -42,12 +44,12 @@ def places(result: Result) -> tuple[str, ...]:
 def mean_square(result: Result, place: str, load_case: str = "") -> Floats:
     """The mean square (nf,) [Pa2, per hertz for a density] at a receiver, or `PER_WATT` times a radiated power.
 
-    Raises: ResultError for an unknown place.
+    Raises: ResultError for an unknown place, or a radiated power where a load comes from outside.
     """
     if not is_power(place):
         return result.mean_square(place, load_case)
-    held = result.load_case(load_case)
-    columns = [result.power_labels.index(label) for label in _labels(result, place)]
+    held, labels = result.load_case(load_case), _labels(result, place, load_case)
+    columns = [result.power_labels.index(label) for label in labels]
     return np.asarray(PER_WATT * held.absorbed[:, columns].sum(axis=1) / result.bandwidth(load_case))
 
 
@@ -59,9 +61,7 @@ def pair_squares(result: Result, place: str, load_case: str = "") -> Floats:
     """
     if not is_power(place):
         return result.pair_squares(place, load_case)
-    labels, held = _labels(result, place), result.load_case(load_case)
-    if any(isinstance(load, IncidentField) for load in result.load_case_of(load_case).loads):
-        raise ResultError("the load case holds a sound field from outside: its power cannot be given to single loads")
+    labels, held = _labels(result, place, load_case), result.load_case(load_case)
     if not held.radiated.size:
         raise ResultError("the result does not hold what single loads radiate; solve the case again")
     form = held.radiated[:, [radiated_labels(result.power_labels).index(label) for label in labels]].sum(axis=1)
@@ -69,10 +69,21 @@ def pair_squares(result: Result, place: str, load_case: str = "") -> Floats:
     return np.asarray(PER_WATT * pairs / result.bandwidth(load_case))
 
 
-def _labels(result: Result, place: str) -> tuple[str, ...]:
+def _from_outside(result: Result, load_case: str) -> str:
+    """The name of a load that comes from outside; none where there is none."""
+    loads = result.load_case_of(load_case).loads
+    return next((load.name for load in loads if isinstance(load, IncidentField)), "")
+
+
+def _labels(result: Result, place: str, load_case: str) -> tuple[str, ...]:
     labels = radiated_labels(result.power_labels)
     if not labels:
         raise ResultError(f"nothing radiates in this case, so there is no '{place}'; give a surface the kind 'radiating'")
+    if wave := _from_outside(result, load_case):
+        raise ResultError(
+            f"'{wave}' is a sound field from outside, so what passes the surface is not what the model radiates; ask for "
+            "a load case without such loads"
+        )
     if place == RADIATED:
         return labels
     name = place.removeprefix(THROUGH)

@@ -88,7 +88,7 @@ def product_arguments(parser: argparse.ArgumentParser, folder: str) -> None:
     parser.add_argument(
         "--receiver",
         action="append",
-        help="receiver, or for rankings 'radiated' or 'radiated/SURFACE'; repeat for several (default: all receivers)",
+        help="receiver, or in rankings 'radiated power' or 'radiated power through SURFACE'; repeat for several (all)",
     )
     parser.add_argument("--weighting", choices=("A", "C", "Z"), help="frequency weighting (default A)")
     parser.add_argument("--load-case", help="load case (default: the first; tables: all)")

@@ -61,6 +61,16 @@ def test_insertion_losses_need_the_same_lines() -> None:
     one, other = solved_box.result(), _radiating(0.01)
     with pytest.raises(ResultError, match="two sweeps differ"):
         insertion_loss(one, other, "axis")
+    held = _radiating(0.01)
+    noise = solve(held.case.with_(load_cases=(held.case.load_cases[0].with_(spectrum="density"),)))
+    with pytest.raises(ResultError, match="holds tones in one result and density in the other"):
+        insertion_loss(held, noise, "axis")
+    moved = solve(held.case.with_(receivers=(held.case.receivers[0].with_(position=(0.0, 0.0, 0.41)),)))
+    with pytest.raises(ResultError, match=r"'axis' is at \(0.0, 0.0, 0.4\) m .*give it one place in both"):
+        insertion_loss(held, moved, "axis")
+    found = compare(held, moved)
+    assert [pair.loss is None for pair in found.pairs] == [True, False]
+    assert any("'axis' is at" in text for text in found.remarks)
     found = compare(_radiating(0.01), _radiating(0.005))
     assert "axis, test (tones): +6.0 dB over all" in texts(insertion_picture.figure(found))
 
@@ -79,6 +89,10 @@ def test_levels_and_ranking_of_the_radiated_power(tmp_path: Path, capsys: pytest
     assert held["unit"] == "dB(A) re 1 pW" and sum(row["share"] for row in held["panels"]) == pytest.approx(1.0)
     assert main(["levels", str(tmp_path / "r.h5")]) == 0
     assert "radiated power [re 1 pW]" in capsys.readouterr().out
+    folder, wanted = str(tmp_path / "files"), ["--receiver", RADIATED]
+    assert main(["export", str(tmp_path / "r.h5"), folder, *wanted, "--format", "ranking_csv"]) == 0
+    assert "dB(A) re 1 pW" in (tmp_path / "files" / "ranking.csv").read_text("utf-8")
+    assert main(["draw", str(tmp_path / "r.h5"), folder, *wanted, "--picture", "contribution_bars"]) == 0
     words = " ".join(texts(contribution_bars.figure(result, [RADIATED])))
     assert "share of the power [%]" in words and "re 1 pW" in words
 
