@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import json
+from dataclasses import replace
 from functools import cache
 from pathlib import Path
 
@@ -113,6 +114,10 @@ def test_the_transmission_loss_of_a_duct_as_command_table_and_picture(
     assert main(["transmission", str(tmp_path / "duct.h5"), "--outlet", "z1", "--json"]) == 0
     held = json.loads(capsys.readouterr().out)
     assert (held["inlet"], held["outlet"]) == ("z0", "z1") and len(held["transmission_loss_db"]) == len(LINES)
-    assert "from z0 to z1" in " ".join(texts(transmission_loss.figure(Transmission.of(result))))
+    found = Transmission.of(result)
+    assert found.cut_on == pytest.approx(343.0 / (2 * 0.1), rel=0.01)
+    assert "from z0 to z1 · 200–600 Hz · first cut-on of the ports at 17" in " ".join(texts(transmission_loss.figure(found)))
+    words = " ".join(texts(transmission_loss.figure(replace(found, cut_on=400.0))))
+    assert "Hatched: above the first cut-on, a guess." in words
     assert main(["transmission", str(tmp_path / "duct.h5"), "--outlet", "q"]) == 2
     assert "no port to leave through is called 'q'" in capsys.readouterr().err
