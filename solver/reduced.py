@@ -326,13 +326,17 @@ def _unseen(lines: int, seen: list[int]) -> Ints:
 
 
 def _new_columns(full: Engine, model: Reduction, line: Line, factor: Factor, frequencies: Floats) -> Floats:
-    """Exact solutions at the line and their Krylov vectors, real, orthonormal and orthogonal to the basis."""
+    """Exact solutions at the line and their Krylov vectors, real, orthonormal and orthogonal to the basis.
+
+    The fields of single loads, which their radiated power needs, enter without followers: these cost more than they save.
+    """
     free = full.free
-    fields = np.hstack([_carried(response) for response in line.responses]) if line.responses else line.adjoints[:, :0]
+    fields = np.hstack([response.field for response in line.responses]) if line.responses else line.adjoints[:, :0]
+    alone = [response.alone[free] for response in line.responses if response.alone.size]
     adjoints = line.adjoints
     start = _start(adjoints, model.samples)
     slope = full.inner(full.system.matrix(_slope(full.system, line.frequency, frequencies)))
-    blocks = [adjoints[free], fields[free]]
+    blocks = [adjoints[free], fields[free], *alone]
     if full.system.symmetric:
         blocks.append(_krylov(factor.solve, slope, np.hstack([start, fields])[free]))
     else:
@@ -341,11 +345,6 @@ def _new_columns(full: Engine, model: Reduction, line: Line, factor: Factor, fre
     columns = np.zeros((full.system.size, 2 * sum(block.shape[1] for block in blocks)))
     columns[free] = np.hstack([part for block in blocks for part in (block.real, block.imag)])
     return orthonormal(model.basis[:, ~model.projected.fixed], columns)
-
-
-def _carried(response: Response) -> Complex:
-    """The fields that the basis must carry: of every load by itself where its radiated power is asked for."""
-    return response.alone if response.alone.size else response.field
 
 
 def _start(adjoints: Complex, samples: Samples) -> Complex:
