@@ -21,10 +21,12 @@ from murmesh.plugin.summary import Levels, levels
 from murmesh.solver.errors import ResultError
 from murmesh.solver.levels import Band
 from murmesh.solver.orders import orders_text
-from murmesh.solver.radiation import mean_square, places
+from murmesh.solver.radiation import is_power, mean_square, places
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
+SAME_PLACE = 1e-6
+"""Distance [m] below which a receiver has not moved."""
 COLUMNS = ("load_case", "receiver", "band", "before_db", "after_db", "change_db")
 BARS = (
     "Changes are of computed levels. Each level also has an error bar of its own (`murmesh levels`), and what both runs "
@@ -107,7 +109,8 @@ def compare(before: Result, after: Result, weighting: str = "A") -> Comparison:
                 f"receiver '{receiver}' in load case '{name}' is not in the result '{missing[0]}': no change shown"
             )
             continue
-        loss = insertion_loss(before, after, receiver, name) if _same_lines(before, after) else None
+        loss, why = _loss(before, after, receiver, name)
+        left_out += [why] if why and _same_lines(before, after) else []
         pair = Pair(levels(before, receiver, name, weighting), levels(after, receiver, name, weighting), loss)
         if pair.before.spectrum != pair.after.spectrum:
             left_out.append(f"load case '{name}' holds tones in one result and a density in the other: no change shown")
@@ -126,7 +129,7 @@ def compare(before: Result, after: Result, weighting: str = "A") -> Comparison:
 
 
 def _places(result: Result) -> dict[tuple[str, str], None]:
-    return {(held.name, place): None for held in result.load_cases for place in places(result)}
+    return {(held.name, place): None for held in result.load_cases for place in places(result, held.name)}
 
 
 def _same_lines(before: Result, after: Result) -> bool:
@@ -136,14 +139,39 @@ def _same_lines(before: Result, after: Result) -> bool:
 def insertion_loss(without: Result, with_: Result, place: str, load_case: str = "") -> Floats:
     """Level without less level with a measure (nf,) [dB], at a receiver or of a radiated power; nan where either is silent.
 
-    Raises: ResultError where the sweeps differ, or the place is not in both.
+    Raises: ResultError where the sweeps or the kinds of spectrum differ, the place is not in both, or the receiver has moved.
     """
     if not _same_lines(without, with_):
         raise ResultError("the two sweeps differ, so there is no insertion loss line by line; solve both on the same lines")
+    cases = [result.load_case_of(load_case) for result in (without, with_)]
+    if cases[0].spectrum != cases[1].spectrum:
+        raise ResultError(
+            f"load case '{cases[0].name}' holds {cases[0].spectrum} in one result and {cases[1].spectrum} in the other, so "
+            "there is no insertion loss; give both the same spectrum"
+        )
+    if not is_power(place):
+        _check_place(without, with_, place)
     squares = [mean_square(result, place, load_case) for result in (without, with_)]
     heard = (squares[0] > 0) & (squares[1] > 0)
     old, new = (np.where(heard, square, 1.0) for square in squares)
     return np.where(heard, 10 * np.log10(old / new), np.nan)
+
+
+def _check_place(without: Result, with_: Result, name: str) -> None:
+    a, b = (result.case.receivers[result.receiver(name)] for result in (without, with_))
+    if not np.allclose(a.position, b.position, atol=SAME_PLACE) or a.radius != b.radius:
+        raise ResultError(
+            f"receiver '{name}' is at {a.position} m (radius {a.radius:g} m) in one result and at {b.position} m (radius "
+            f"{b.radius:g} m) in the other, so there is no insertion loss; give it one place in both"
+        )
+
+
+def _loss(before: Result, after: Result, place: str, load_case: str) -> tuple[Floats | None, str]:
+    """The insertion loss, or none and why."""
+    try:
+        return insertion_loss(before, after, place, load_case), ""
+    except ResultError as problem:
+        return None, str(problem)
 
 
 def _list(result: Result) -> str:

@@ -89,7 +89,7 @@ def levels(result: Result, receiver: str, load_case: str = "", weighting: str = 
 def all_levels(result: Result, weighting: str = "A", load_case: str = "") -> list[Levels]:
     """Levels of every receiver and of what is radiated, for one load case or (without a name) for all."""
     names = [load_case] if load_case else [held.name for held in result.load_cases]
-    return [levels(result, place, name, weighting) for name in names for place in places(result)]
+    return [levels(result, place, name, weighting) for name in names for place in places(result, name)]
 
 
 def shown(value: float, bar: float = float("nan")) -> str:

@@ -17,13 +17,15 @@ import numpy.typing as npt
 import scipy.linalg
 
 from murmesh.solver.linalg import Analysis, Factor, analyse, solve_refined
-from murmesh.solver.power import absorbed_power, input_power, power_labels
+from murmesh.solver.power import absorbed_power, input_power, power_labels, radiated_forms, radiated_labels
 from murmesh.solver.system import LoadSet, Pattern, System, Values, dense
 
 Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 EMPTY: Complex = np.zeros((0, 0), dtype=np.complex128)
 EMPTY.setflags(write=False)
+NO_FORM: Complex = np.zeros((0, 0, 0), dtype=np.complex128)
+NO_FORM.setflags(write=False)
 
 
 @dataclass(frozen=True, eq=False)
@@ -32,7 +34,8 @@ class Response:
 
     contributions (samples, loads) [Pa]; supplied (loads,) and absorbed (labels,) [W]; closure: the field against the sum
     of the contributions at the receivers; field (n, r): r solutions whose mean squares add; mesh_error (samples, r) [Pa]:
-    what the next order would add (see `accuracy`), empty where it was not asked for.
+    what the next order would add (see `accuracy`), empty where it was not asked for; radiated (surfaces, loads, loads) [W]:
+    the form of the radiated power (see `power`), alone (n, loads): the fields behind it; both empty where nothing radiates.
     """
 
     contributions: Complex
@@ -41,6 +44,8 @@ class Response:
     closure: float
     field: Complex
     mesh_error: Complex
+    radiated: Complex
+    alone: Complex
 
 
 @dataclass(frozen=True, eq=False)
@@ -55,20 +60,26 @@ class Line:
 
 @dataclass(frozen=True, eq=False)
 class Engine:
-    """What every line needs, computed once.  `analysis` is None for the dense matrices of a reduced model."""
+    """What every line needs, computed once.  `analysis` is None for the dense matrices of a reduced model.
+
+    apart: the load cases whose loads are solved one by one, because they radiate: each one's own power needs its field.
+    """
 
     system: System
     analysis: Analysis | None
     free: npt.NDArray[np.bool_]
     outputs: Complex
     labels: tuple[str, ...]
+    apart: tuple[bool, ...]
 
     @classmethod
     def of(cls, system: System, solver: str = "default") -> Engine:
         form = system.form
         analysis = analyse(form.core, solver, symmetric=system.symmetric) if isinstance(form, Pattern) else None
         outputs = np.asarray(dense(system.receivers).T[~system.fixed], dtype=np.complex128)
-        return cls(system, analysis, ~system.fixed, outputs, power_labels(system))
+        labels = power_labels(system)
+        apart = tuple(bool(radiated_labels(labels)) and not held.from_outside for held in system.load_sets)
+        return cls(system, analysis, ~system.fixed, outputs, labels, apart)
 
     @property
     def solver(self) -> str:
@@ -111,8 +122,12 @@ class Engine:
     def _solve(
         self, factor: Factor, inner: Any, drives: list[Drive], outputs: Complex
     ) -> tuple[Complex, list[Complex], float]:
-        """Adjoints, the field of each load case, and the worst residual: one block of right-hand sides if A = A^T."""
-        forward = [drive.inside[self.free] @ drive.mix for drive in drives]
+        """Adjoints, the field of each load case (or of its loads), and the worst residual: one block of right-hand sides if
+        A = A^T."""
+        forward = [
+            drive.inside[self.free] if apart else drive.inside[self.free] @ drive.mix
+            for drive, apart in zip(drives, self.apart, strict=True)
+        ]
         if self.system.symmetric:
             solved, residual = solve_refined(factor, inner, np.hstack([outputs, *forward]))
             adjoint, *fields = _split(solved, [outputs, *forward])
@@ -128,8 +143,15 @@ class Engine:
     ) -> Response:
         system, free = self.system, self.free
         contributions = adjoint.T @ drive.inside[free] + values.heard(system.receivers @ drive.given)
-        field = drive.given @ drive.mix
-        field[free] += solution
+        alone, form = EMPTY, NO_FORM
+        if self.apart[number]:
+            alone = np.array(drive.given, dtype=np.complex128)
+            alone[free] += solution
+            field = alone @ drive.mix
+            form = radiated_forms(system, values.phi, values.frequency, alone)
+        else:
+            field = drive.given @ drive.mix
+            field[free] += solution
         closure = _relative(values.heard(system.receivers @ field), contributions @ drive.mix)
         if values.direct:
             contributions = contributions + values.direct[number]
@@ -137,7 +159,7 @@ class Engine:
         f = values.frequency
         supplied = input_power(f, drive.forces, drive.given, reaction, field, drive.mix)
         absorbed = absorbed_power(system, values.phi, f, field, self.labels)
-        return Response(contributions, supplied, absorbed, closure, field, EMPTY)
+        return Response(contributions, supplied, absorbed, closure, field, EMPTY, form, alone)
 
 
 @dataclass(frozen=True, eq=False)

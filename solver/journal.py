@@ -17,7 +17,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from murmesh.solver.engine import EMPTY, Line, Response
+from murmesh.solver.engine import EMPTY, NO_FORM, Line, Response
 from murmesh.solver.errors import ResultError
 from murmesh.solver.reduced import Check, Step
 
@@ -107,7 +107,7 @@ def _line_arrays(line: Line) -> Arrays:
     arrays: Arrays = {"head": np.array([line.frequency, line.residual])}
     for i, r in enumerate(line.responses):
         arrays |= {f"{i}c": r.contributions, f"{i}s": r.supplied, f"{i}a": r.absorbed, f"{i}r": np.array([r.closure])}
-        arrays |= {f"{i}{key}": part for key, part in (("f", r.field), ("m", r.mesh_error)) if part.size}
+        arrays |= {f"{i}{key}": part for key, part in (("f", r.field), ("m", r.mesh_error), ("w", r.radiated)) if part.size}
     return arrays
 
 
@@ -116,12 +116,14 @@ def _line(arrays: dict[str, Any]) -> Line:
     responses = []
     for i in range(count):
         head = arrays[f"{i}c"], arrays[f"{i}s"], arrays[f"{i}a"], float(arrays[f"{i}r"][0])
-        responses.append(Response(*head, arrays.get(f"{i}f", EMPTY), arrays.get(f"{i}m", EMPTY)))
+        responses.append(
+            Response(*head, arrays.get(f"{i}f", EMPTY), arrays.get(f"{i}m", EMPTY), arrays.get(f"{i}w", NO_FORM), EMPTY)
+        )
     f, worst = (float(v) for v in arrays["head"])
     return Line(f, tuple(responses), worst, EMPTY)
 
 
 def light(line: Line, *, keep_field: bool) -> Line:
     """The line without its adjoints and, unless it is to be kept, without its fields."""
-    responses = line.responses if keep_field else tuple(replace(r, field=EMPTY) for r in line.responses)
+    responses = tuple(replace(r, field=r.field if keep_field else EMPTY, alone=EMPTY) for r in line.responses)
     return replace(line, responses=responses, adjoints=EMPTY)

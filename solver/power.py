@@ -5,8 +5,13 @@
     sum_l W_l = sum_j W_j
 
 Both follow from (i/(2w)) p^T conj(A p - f) = 0 with real A_j; p^H A_j p is real where A_j is symmetric. The terms of infinite
-elements together take what is radiated. A wave that enters through a port counts as
-input, what leaves through it as taken; their difference is the net power through the port.
+elements together take what is radiated:
+
+    W = Re sum_ij conj(G_ij) P_ij,   P = (S - S^H) / (4 i w),   S_ij = sum_j phi_j p_i^H A_j p_j
+
+with the fields p_i of the loads by themselves and G that of their combination; P (loads, loads) is Hermitian.
+A wave that enters through a port counts as input, what leaves through it as taken; their difference is the net power through
+the port.
 """
 
 from __future__ import annotations
@@ -18,11 +23,28 @@ from murmesh.solver.system import System
 
 Complex = npt.NDArray[np.complex128]
 Floats = npt.NDArray[np.float64]
+RADIATED_LABEL = "radiated/"
+"""How the label of a surface that radiates begins."""
 
 
 def power_labels(system: System) -> tuple[str, ...]:
     """Whom the taken power belongs to, in a fixed order: volumes, then surfaces."""
     return tuple(dict.fromkeys(term.label for term in system.terms))
+
+
+def radiated_labels(labels: tuple[str, ...]) -> tuple[str, ...]:
+    """Those labels that belong to surfaces of kind `radiating`, "radiated/NAME"."""
+    return tuple(label for label in labels if label.startswith(RADIATED_LABEL))
+
+
+def radiated_forms(system: System, phi: Complex, f: float, alone: Complex) -> Complex:
+    """P (surfaces, loads, loads) [W] from the fields (n, loads) of every load by itself, a surface after the other."""
+    labels = radiated_labels(power_labels(system))
+    forms = np.zeros((len(labels), alone.shape[1], alone.shape[1]), dtype=np.complex128)
+    for coefficient, term in zip(phi, system.terms, strict=True):
+        if term.label in labels:
+            forms[labels.index(term.label)] += coefficient * (alone.conj().T @ (term.matrix @ alone))
+    return np.asarray((forms - forms.conj().transpose(0, 2, 1)) / (8j * np.pi * f))
 
 
 def absorbed_power(system: System, phi: Complex, f: float, field: Complex, labels: tuple[str, ...]) -> Floats:

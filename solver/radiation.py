@@ -1,37 +1,29 @@
 """Sound power that leaves through surfaces that radiate: in all, and the part of every load.
 
-The infinite elements' terms of the sum take what is radiated, so with u_i the field of load i alone and real A_j
+    W = Re sum_ij conj(G_ij) P_ij
 
-    W = sum_ij G_ij u_j^H R u_i,   R = (1/2w) sum_j [ phi_j A_j - conj(phi_j) A_j^T ] / 2i   (Hermitian)
-
-with G of the load case's combination, as for mean squares. A power is handed on as the mean square whose level re 20 uPa is
-the level of the power re 1 pW (`PER_WATT`), so that rankings, bands and comparisons take it like a receiver: *a place*.
+with G of the load case's combination, as for mean squares, and P the Hermitian form of the fields of the loads by themselves,
+which the sweep works out on every line (`power.radiated_forms`). A power is handed on as the mean square whose level re 20 uPa
+is the level of the power re 1 pW (`PER_WATT`), so that rankings, bands and comparisons take it like a receiver: *a place*.
 """
 
 from __future__ import annotations
-
-from collections.abc import Iterator
-from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
 from murmesh.solver.case.load import IncidentField
-from murmesh.solver.engine import Drive, Engine
 from murmesh.solver.errors import ResultError, nearest
 from murmesh.solver.levels import P0, W0
-from murmesh.solver.receiver_points import locate_receivers
+from murmesh.solver.power import RADIATED_LABEL, radiated_labels
 from murmesh.solver.result import Result
-from murmesh.solver.system import build_system
 
 Floats = npt.NDArray[np.float64]
-Complex = npt.NDArray[np.complex128]
 
 RADIATED, THROUGH = "radiated power", "radiated power through "
 """Names of places: all that is radiated, and that through one surface (its name follows)."""
 PER_WATT = P0**2 / W0
 """Pa2 per watt."""
-_LABEL = "radiated/"
 
 
 def is_power(place: str) -> bool:
@@ -39,10 +31,12 @@ def is_power(place: str) -> bool:
     return place == RADIATED or place.startswith(THROUGH)
 
 
-def places(result: Result) -> tuple[str, ...]:
-    """The receivers, then what is radiated: in all, and through each surface where there are several."""
+def places(result: Result, load_case: str = "") -> tuple[str, ...]:
+    """The receivers, then what is radiated: in all, and through each surface where there are several; nothing is radiated
+    that can be told apart where a load comes from outside."""
     receivers = tuple(receiver.name for receiver in result.case.receivers)
-    surfaces = [label.removeprefix(_LABEL) for label in result.power_labels if label.startswith(_LABEL)]
+    labels = () if _from_outside(result, load_case) else radiated_labels(result.power_labels)
+    surfaces = [label.removeprefix(RADIATED_LABEL) for label in labels]
     each = tuple(THROUGH + name for name in surfaces) if len(surfaces) > 1 else ()
     return (*receivers, *((RADIATED, *each) if surfaces else ()))
 
@@ -50,65 +44,50 @@ def places(result: Result) -> tuple[str, ...]:
 def mean_square(result: Result, place: str, load_case: str = "") -> Floats:
     """The mean square (nf,) [Pa2, per hertz for a density] at a receiver, or `PER_WATT` times a radiated power.
 
-    Raises: ResultError for an unknown place.
+    Raises: ResultError for an unknown place, or a radiated power where a load comes from outside.
     """
     if not is_power(place):
         return result.mean_square(place, load_case)
-    held = result.load_case(load_case)
-    columns = [result.power_labels.index(label) for label in _labels(result, place)]
+    held, labels = result.load_case(load_case), _labels(result, place, load_case)
+    columns = [result.power_labels.index(label) for label in labels]
     return np.asarray(PER_WATT * held.absorbed[:, columns].sum(axis=1) / result.bandwidth(load_case))
 
 
 def pair_squares(result: Result, place: str, load_case: str = "") -> Floats:
     """Re of the terms of the double sum over loads, (nf, loads, loads), at a receiver or of a radiated power.
 
-    The fields of single loads come from the reduced model, or else from a new solution of every line.
-
-    Raises: ResultError for an unknown place, or loads that come from outside (what they bring cannot be told from the rest).
+    Raises: ResultError for an unknown place, loads that come from outside (what they bring cannot be told from the rest), or a
+    result from before the form was kept.
     """
     if not is_power(place):
         return result.pair_squares(place, load_case)
-    number = [held.name for held in result.load_cases].index(result.load_case(load_case).name)
-    if any(isinstance(load, IncidentField) for load in result.case.load_cases[number].loads):
-        raise ResultError("the load case holds a sound field from outside: its power cannot be given to single loads")
-    mixed = result.combination(load_case)
-    labels, engine = _labels(result, place), _engine(result)
-    found = [np.real(g * form) for g, form in zip(mixed, _forms(engine, result, number, labels), strict=True)]
-    return np.asarray(PER_WATT * np.stack(found) / result.bandwidth(load_case))
+    labels, held = _labels(result, place, load_case), result.load_case(load_case)
+    if not held.radiated.size:
+        raise ResultError("the result does not hold what single loads radiate; solve the case again")
+    form = held.radiated[:, [radiated_labels(result.power_labels).index(label) for label in labels]].sum(axis=1)
+    pairs = np.real(result.combination(load_case).conj() * form)
+    return np.asarray(PER_WATT * pairs / result.bandwidth(load_case))
 
 
-def _labels(result: Result, place: str) -> tuple[str, ...]:
-    labels = tuple(label for label in result.power_labels if label.startswith(_LABEL))
+def _from_outside(result: Result, load_case: str) -> str:
+    """The name of a load that comes from outside; none where there is none."""
+    loads = result.load_case_of(load_case).loads
+    return next((load.name for load in loads if isinstance(load, IncidentField)), "")
+
+
+def _labels(result: Result, place: str, load_case: str) -> tuple[str, ...]:
+    labels = radiated_labels(result.power_labels)
     if not labels:
         raise ResultError(f"nothing radiates in this case, so there is no '{place}'; give a surface the kind 'radiating'")
+    if wave := _from_outside(result, load_case):
+        raise ResultError(
+            f"'{wave}' is a sound field from outside, so what passes the surface is not what the model radiates; ask for "
+            "a load case without such loads"
+        )
     if place == RADIATED:
         return labels
     name = place.removeprefix(THROUGH)
-    if _LABEL + name not in labels:
-        names = [label.removeprefix(_LABEL) for label in labels]
+    if RADIATED_LABEL + name not in labels:
+        names = [label.removeprefix(RADIATED_LABEL) for label in labels]
         raise ResultError(f"no surface that radiates is called '{name}'; {nearest(name, names)}")
-    return (_LABEL + name,)
-
-
-def _engine(result: Result) -> Engine:
-    if result.engine is not None:
-        return result.engine
-    return Engine.of(build_system(result.space, locate_receivers(result.case, result.space.geometry)))
-
-
-def _forms(engine: Engine, result: Result, number: int, labels: tuple[str, ...]) -> Iterator[Complex]:
-    """u_j^H R u_i, (loads, loads), of every line."""
-    system = engine.system
-    terms = [(k, term.matrix) for k, term in enumerate(system.terms) if term.label in labels]
-    for f, values in zip(result.frequencies, system.values(result.frequencies), strict=True):
-        matrix = system.matrix(values.phi)
-        drive = Drive.of(system.load_sets[number], matrix, values.psi[number], values.mix[number])
-        fields = drive.given.copy()
-        fields[engine.free] += engine.factor(matrix).solve(np.ascontiguousarray(drive.inside[engine.free]))
-        taken = sum((values.phi[k] * _product(a, fields) for k, a in terms), np.zeros_like(fields))
-        form = fields.conj().T @ taken  # u_j^H A u_i at [j, i]
-        yield ((form - form.conj().T) / (2j * 4 * np.pi * f)).T
-
-
-def _product(matrix: Any, fields: Complex) -> Complex:
-    return np.asarray(matrix @ fields.real + 1j * (matrix @ fields.imag))
+    return (RADIATED_LABEL + name,)

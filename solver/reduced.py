@@ -326,13 +326,17 @@ def _unseen(lines: int, seen: list[int]) -> Ints:
 
 
 def _new_columns(full: Engine, model: Reduction, line: Line, factor: Factor, frequencies: Floats) -> Floats:
-    """Exact solutions at the line and their Krylov vectors, real, orthonormal and orthogonal to the basis."""
+    """Exact solutions at the line and their Krylov vectors, real, orthonormal and orthogonal to the basis.
+
+    The fields of single loads, which their radiated power needs, enter without followers: these cost more than they save.
+    """
     free = full.free
     fields = np.hstack([response.field for response in line.responses]) if line.responses else line.adjoints[:, :0]
+    alone = [response.alone[free] for response in line.responses if response.alone.size]
     adjoints = line.adjoints
     start = _start(adjoints, model.samples)
     slope = full.inner(full.system.matrix(_slope(full.system, line.frequency, frequencies)))
-    blocks = [adjoints[free], fields[free]]
+    blocks = [adjoints[free], fields[free], *alone]
     if full.system.symmetric:
         blocks.append(_krylov(factor.solve, slope, np.hstack([start, fields])[free]))
     else:
@@ -403,6 +407,7 @@ def _check(model: Reduction, values: Values, exact: Line) -> Check:
         deviation(model.samples, a.contributions, b.contributions, mix) for (a, b), mix in zip(pairs, values.mix, strict=True)
     ]
     level = max(heard, default=0.0) if len(model.samples.receiver) else field
+    level = max([level, *(power_deviation(a.radiated, b.radiated) for a, b in pairs)])
     return Check(exact.frequency, level, field, estimate, False)
 
 
@@ -415,6 +420,14 @@ def deviation(samples: Samples, found: Complex, exact: Complex, mix: Complex) ->
     levels = [_mean_square(samples, p @ mix) for p in (found, exact)]
     change = np.abs(10 * np.log10(np.maximum(levels[0], 1e-300) / np.maximum(levels[1], 1e-300)))
     return float(max(np.max(DB * np.log1p(parts), initial=0.0), np.max(change, initial=0.0)))
+
+
+def power_deviation(found: Complex, exact: Complex) -> float:
+    """Largest difference [dB] of forms (surfaces, loads, loads) of radiated power, against the largest entry of a surface."""
+    if not exact.size:
+        return 0.0
+    largest = np.maximum(np.abs(exact).max(axis=(1, 2)), 1e-300)
+    return float(np.max(0.5 * DB * np.log1p(np.abs(found - exact).max(axis=(1, 2)) / largest)))
 
 
 def _mean_square(samples: Samples, pressure: Complex) -> Floats:
@@ -450,7 +463,7 @@ def _estimated(model: Reduction, engine: Engine, values: Values) -> tuple[Line, 
     adjoint = model.sketch.adjoint_residual(values, line.adjoints)
     out = [0.0]
     for number, response in enumerate(line.responses):
-        alone = _fields_alone(engine, factor, matrix, values, number)
+        alone = response.alone if response.alone.size else _fields_alone(engine, factor, matrix, values, number)
         residuals = model.sketch.forward_residuals(number, values, alone)
         out.append(_raw_estimate(model, values, response, adjoint, residuals, values.mix[number]))
     return line, max(out)

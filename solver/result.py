@@ -25,6 +25,7 @@ from murmesh.solver.case.model import HIGHEST_ORDER, Case
 from murmesh.solver.engine import Engine, Line
 from murmesh.solver.errors import FormatError, MurmeshError, ResultError, nearest
 from murmesh.solver.exterior import Exterior, Outside
+from murmesh.solver.power import radiated_labels
 from murmesh.solver.receiver_points import Samples, locate_receivers
 from murmesh.solver.reduced import Certificate, Check
 from murmesh.solver.space import Space, discretise
@@ -34,6 +35,7 @@ Floats = npt.NDArray[np.float64]
 Complex = npt.NDArray[np.complex128]
 Ints = npt.NDArray[np.int64]
 NOTHING: Complex = np.empty((0, 0, 0), dtype=np.complex128)
+NO_FORMS: Complex = np.empty((0, 0, 0, 0), dtype=np.complex128)
 FORMAT = "murmesh result"
 VERSION = 2
 
@@ -53,7 +55,9 @@ class LoadCaseResult:
     contributions (nf, samples, loads) [Pa]; supplied (nf, loads) and absorbed (nf, labels) [W per line]; residual (nf,),
     nan on lines of a reduced model; closure (nf,); fields (k, unknowns, r) at the field frequencies: r solutions whose
     mean squares add (none where the result holds a model, which gives the field of any line); mesh_error (nf, samples, r)
-    [Pa]: what elements of the next order would add to the r pressures, (0, 0, 0) where it was not asked for.
+    [Pa]: what elements of the next order would add to the r pressures, (0, 0, 0) where it was not asked for; radiated
+    (nf, surfaces, loads, loads) [W per line]: the form of the power through every surface that radiates, in the order of
+    their labels, (0, 0, 0, 0) where there is none or a load comes from outside.
     """
 
     name: str
@@ -65,6 +69,7 @@ class LoadCaseResult:
     closure: Floats
     fields: Complex
     mesh_error: Complex
+    radiated: Complex
 
 
 @dataclass(frozen=True, eq=False)
@@ -109,6 +114,7 @@ class Result:
                     np.array([row.closure for row in rows]),
                     np.stack(fields) if fields else NOTHING,
                     np.stack([row.mesh_error for row in rows]) if all(row.mesh_error.size for row in rows) else NOTHING,
+                    np.stack([row.radiated for row in rows]) if all(row.radiated.size for row in rows) else NO_FORMS,
                 )
             )
         frequencies = np.array([line.frequency for line in lines])
@@ -350,6 +356,7 @@ def _write(result: Result, file: h5py.File) -> None:
         group.attrs["name"], group.attrs["loads"] = held.name, json.dumps(held.loads)
         for name in _ARRAYS:
             group.create_dataset(name, data=getattr(held, name))
+        group.create_dataset("radiated", data=held.radiated)
     if result.model is not None:
         _write_model(result.model, file.create_group("model"))
     if result.certificate is not None:
@@ -397,6 +404,7 @@ def _read(file: h5py.File) -> Result:
     for key in sorted(file["load_cases"]) if "load_cases" in file else ():
         group = file["load_cases"][key]
         arrays = [group[name][()] for name in _ARRAYS]
+        arrays.append(group["radiated"][()] if "radiated" in group else NO_FORMS)  # files of before have none
         held.append(LoadCaseResult(str(group.attrs["name"]), text(group.attrs["loads"]), *arrays))
     result = Result(
         case,
@@ -442,6 +450,12 @@ def _check(result: Result) -> None:
                     f"load_cases/{index:04d}/{name} has shape {np.shape(getattr(held, name))}, expected {shape}; "
                     "solve the case again"
                 )
+        surfaces = len(radiated_labels(result.power_labels))
+        if held.radiated.size and held.radiated.shape != (lines, surfaces, loads, loads):
+            raise FormatError(
+                f"load_cases/{index:04d}/radiated has shape {held.radiated.shape}, expected "
+                f"{(lines, surfaces, loads, loads)}; solve the case again"
+            )
         kept = 0 if result.model is not None else len(result.field_frequencies)
         if held.fields.ndim != 3 or len(held.fields) != kept:
             raise FormatError(

@@ -96,11 +96,12 @@ class LoadTerm:
 
 @dataclass(frozen=True, eq=False)
 class LoadSet:
-    """The loads of one load case, in its order."""
+    """The loads of one load case, in its order; `from_outside`: one of them is a field from outside."""
 
     name: str
     loads: tuple[str, ...]
     terms: tuple[LoadTerm, ...]
+    from_outside: bool = False
 
     def vectors(self, psi: tuple[Complex, ...]) -> tuple[Complex, Complex]:
         """Right-hand sides and prescribed pressures, both (n, loads), for one row of coefficients per term."""
@@ -588,7 +589,8 @@ def _load_set(space: Space, index: int) -> LoadSet:
     load_case = space.case.load_cases[index]
     found = [term for load in load_case.loads for term in _load_terms(space, load)]
     terms = [replace(term, build=partial(widened, term.build, space, 1)) for term in found]
-    return LoadSet(load_case.name, tuple(load.name for load in load_case.loads), tuple(terms))
+    from_outside = any(isinstance(load, IncidentField) for load in load_case.loads)
+    return LoadSet(load_case.name, tuple(load.name for load in load_case.loads), tuple(terms), from_outside)
 
 
 def _load_terms(space: Space, load: Load) -> list[LoadTerm]:

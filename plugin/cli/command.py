@@ -85,13 +85,24 @@ def product_arguments(parser: argparse.ArgumentParser, folder: str) -> None:
     parser.add_argument("folder", help=folder)
     parser.add_argument("--frequency", type=float, help="frequency [Hz] of maps and fields (default: the loudest kept line)")
     parser.add_argument("--band", type=band_argument, help="LOWER:UPPER in Hz for rankings (default: the whole sweep)")
+    parser.add_argument(
+        "--receiver",
+        action="append",
+        help="receiver, or in rankings 'radiated power' or 'radiated power through SURFACE'; repeat for several (all)",
+    )
     parser.add_argument("--weighting", choices=("A", "C", "Z"), help="frequency weighting (default A)")
     parser.add_argument("--load-case", help="load case (default: the first; tables: all)")
 
 
 def product_options(args: argparse.Namespace) -> dict[str, Any]:
     """The keyword options that `product_arguments` stands for."""
-    return {"frequency": args.frequency, "band": args.band, "weighting": args.weighting, "load_case": args.load_case}
+    return {
+        "frequency": args.frequency,
+        "band": args.band,
+        "receivers": tuple(args.receiver) if args.receiver else None,
+        "weighting": args.weighting,
+        "load_case": args.load_case,
+    }
 
 
 def result_path(case: Path) -> Path:

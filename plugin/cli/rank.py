@@ -7,7 +7,7 @@ import argparse
 from murmesh.plugin.cli.command import DONE, Command, answer, answer_json, band_argument, register, table
 from murmesh.plugin.describe import level_unit, plain
 from murmesh.plugin.export.ranking_json import ranking_tree
-from murmesh.plugin.summary import shown
+from murmesh.plugin.summary import CAUTIONS, shown
 from murmesh.solver.contribution import Ranking, rank
 from murmesh.solver.result import read_result
 
@@ -43,7 +43,8 @@ def text(ranking: Ranking) -> str:
     rows = [(row.panel, f"{100 * row.share:+.1f} %", shown(row.own_db), f"{row.removal_db:+.1f}") for row in ranking.rows]
     body = table(("panel", f"share of {ranking.what}", f"alone [{unit}]", "if silent [dB]"), rows)
     total = sum(row.share for row in ranking.rows)
-    return f"{head}\n{body}\nShares add up to {100 * total:.6f} % (closure {ranking.closure:.0e}).\n{ranking.words}"
+    remarks = [f"Shares add up to {100 * total:.6f} % (closure {ranking.closure:.0e}).", ranking.words]
+    return "\n".join([head, body, *remarks, *([CAUTIONS] if ranking.power else [])])
 
 
 register(

@@ -9,6 +9,7 @@ import numpy as np
 
 from murmesh.plugin.cli.command import DONE, Command, answer, answer_json, register, table
 from murmesh.plugin.pictures import PICTURES
+from murmesh.plugin.summary import CAUTIONS
 from murmesh.plugin.transmission import REMARK, Transmission, write_csv
 from murmesh.solver.result import read_result
 
@@ -25,7 +26,7 @@ def run(args: argparse.Namespace) -> int:
     found = Transmission.of(read_result(args.result), args.outlet, args.load_case)
     if args.json:
         loss = [round(float(v), 3) if np.isfinite(v) else None for v in found.loss]
-        head = {"inlet": found.inlet, "outlet": found.outlet}
+        head = {"inlet": found.inlet, "outlet": found.outlet, "first_cut_on_hz": round(found.cut_on, 1)}
         answer_json(head | {"frequencies_hz": found.result.frequencies.tolist(), "transmission_loss_db": loss})
     else:
         answer(text(found))
@@ -43,8 +44,8 @@ def text(found: Transmission) -> str:
         (f"{f:g}", f"{loss:.1f}" if np.isfinite(loss) else "-")
         for f, loss in zip(found.result.frequencies, found.loss, strict=True)
     ]
-    head = f"Transmission loss from {found.inlet} to {found.outlet}"
-    return f"{head}\n{table(('frequency [Hz]', 'loss [dB]'), rows)}\n{REMARK}"
+    head = f"Transmission loss from {found.inlet} to {found.outlet}, {found.limit}"
+    return f"{head}\n{table(('frequency [Hz]', 'loss [dB]'), rows)}\n{REMARK}\n{CAUTIONS}"
 
 
 register(

@@ -17,12 +17,11 @@ from murmesh.solver.errors import CaseError, MurmeshError
 from murmesh.solver.orders import elements_kh, expected_errors, orders_text
 from murmesh.solver.scan import interpolation
 from murmesh.solver.space import Space, discretise
+from murmesh.solver.transmission import port_shape
 
 Floats = npt.NDArray[np.float64]
 UNCOVERED = 0.01
 """Share of a scanned surface without a scan point near it that is worth a warning (common practice, no source)."""
-ROUND = 0.95
-"""Area over that of the circle of the same largest diameter from which a port counts as round."""
 
 
 def resolution(scene: Scene) -> Iterator[Finding]:
@@ -140,22 +139,6 @@ def ports(scene: Scene) -> Iterator[Finding]:
 def _plane(scene: Scene, triangles: npt.NDArray[np.int64]) -> bool:
     normals = scene.skin.outward(triangles, scene.skin.owners(triangles))
     return bool(np.min(normals @ normals[0]) > math.cos(math.radians(1.0)))
-
-
-def port_shape(points: Floats, area: float) -> tuple[str, float, float]:
-    """Words, factor and size d of the first cut-on f = factor c / d of a plane duct section through `points`.
-
-    Round: 1.8412 c/(pi d) (j'_11, Pierce, Acoustics, 1981, sect. 7-1); otherwise as a rectangle, c/(2 d).
-    """
-    centred = points - points.mean(axis=0)
-    plane = centred @ np.linalg.svd(centred, full_matrices=False)[2][:2].T
-    angles = np.linspace(0.0, np.pi / 2, 181)
-    turned = [plane @ np.array([[np.cos(a), -np.sin(a)], [np.sin(a), np.cos(a)]]) for a in angles]
-    boxes = np.array([np.ptp(t, axis=0) for t in turned])
-    diameter = float(boxes.max())
-    if area > ROUND * math.pi * diameter**2 / 4:
-        return "round", 1.8412 / math.pi, diameter
-    return "by its longer side", 0.5, float(boxes[np.argmin(boxes.prod(axis=1))].max())
 
 
 def scans(scene: Scene) -> Iterator[Finding]:

@@ -16,7 +16,6 @@ from meshes import TestMesh, box, cylinder, faces_where, quadratic, shell
 from murmesh.plugin import check as check_module
 from murmesh.plugin.check import Finding, as_json, check, check_case, render
 from murmesh.plugin.findings import shape
-from murmesh.plugin.findings.acoustics import port_shape
 from murmesh.plugin.job import Job, Rule
 from murmesh.plugin.mesh_source import TaggedMesh, tagged_mesh
 from murmesh.plugin.model import build_case
@@ -39,6 +38,7 @@ from murmesh.solver.case.motion import Autospectrum, Scan, Uniform
 from murmesh.solver.case.porous import Miki
 from murmesh.solver.case.spectrum import Table
 from murmesh.solver.case.wall import Absorption, Given, Layers, PerforatedPlate, PorousLayer, Resonator
+from murmesh.solver.transmission import port_shape
 from tagged import BOX, job, tagged
 
 

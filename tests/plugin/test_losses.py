@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import json
+from dataclasses import replace
 from functools import cache
 from pathlib import Path
 
@@ -61,6 +62,16 @@ def test_insertion_losses_need_the_same_lines() -> None:
     one, other = solved_box.result(), _radiating(0.01)
     with pytest.raises(ResultError, match="two sweeps differ"):
         insertion_loss(one, other, "axis")
+    held = _radiating(0.01)
+    noise = solve(held.case.with_(load_cases=(held.case.load_cases[0].with_(spectrum="density"),)))
+    with pytest.raises(ResultError, match="holds tones in one result and density in the other"):
+        insertion_loss(held, noise, "axis")
+    moved = solve(held.case.with_(receivers=(held.case.receivers[0].with_(position=(0.0, 0.0, 0.41)),)))
+    with pytest.raises(ResultError, match=r"'axis' is at \(0.0, 0.0, 0.4\) m .*give it one place in both"):
+        insertion_loss(held, moved, "axis")
+    found = compare(held, moved)
+    assert [pair.loss is None for pair in found.pairs] == [True, False]
+    assert any("'axis' is at" in text for text in found.remarks)
     found = compare(_radiating(0.01), _radiating(0.005))
     assert "axis, test (tones): +6.0 dB over all" in texts(insertion_picture.figure(found))
 
@@ -79,6 +90,10 @@ def test_levels_and_ranking_of_the_radiated_power(tmp_path: Path, capsys: pytest
     assert held["unit"] == "dB(A) re 1 pW" and sum(row["share"] for row in held["panels"]) == pytest.approx(1.0)
     assert main(["levels", str(tmp_path / "r.h5")]) == 0
     assert "radiated power [re 1 pW]" in capsys.readouterr().out
+    folder, wanted = str(tmp_path / "files"), ["--receiver", RADIATED]
+    assert main(["export", str(tmp_path / "r.h5"), folder, *wanted, "--format", "ranking_csv"]) == 0
+    assert "dB(A) re 1 pW" in (tmp_path / "files" / "ranking.csv").read_text("utf-8")
+    assert main(["draw", str(tmp_path / "r.h5"), folder, *wanted, "--picture", "contribution_bars"]) == 0
     words = " ".join(texts(contribution_bars.figure(result, [RADIATED])))
     assert "share of the power [%]" in words and "re 1 pW" in words
 
@@ -99,6 +114,10 @@ def test_the_transmission_loss_of_a_duct_as_command_table_and_picture(
     assert main(["transmission", str(tmp_path / "duct.h5"), "--outlet", "z1", "--json"]) == 0
     held = json.loads(capsys.readouterr().out)
     assert (held["inlet"], held["outlet"]) == ("z0", "z1") and len(held["transmission_loss_db"]) == len(LINES)
-    assert "from z0 to z1" in " ".join(texts(transmission_loss.figure(Transmission.of(result))))
+    found = Transmission.of(result)
+    assert found.cut_on == pytest.approx(343.0 / (2 * 0.1), rel=0.01)
+    assert "from z0 to z1 · 200–600 Hz · first cut-on of the ports at 17" in " ".join(texts(transmission_loss.figure(found)))
+    words = " ".join(texts(transmission_loss.figure(replace(found, cut_on=400.0))))
+    assert "Hatched: above the first cut-on, a guess." in words
     assert main(["transmission", str(tmp_path / "duct.h5"), "--outlet", "q"]) == 2
     assert "no port to leave through is called 'q'" in capsys.readouterr().err
