@@ -18,7 +18,7 @@ from murmesh.solver.result import Result
 Floats = npt.NDArray[np.float64]
 Ints = npt.NDArray[np.int64]
 RANGE_DB = 40.0
-RINGS = 36
+RINGS = 24
 """Directions every 180/RINGS degrees."""
 
 

@@ -142,11 +142,7 @@ class Exterior:
     def _integrated(self, points: Floats, k: complex, field: Complex, degree: int) -> Complex:
         """int (p dG/dn - G dp/dn) dS for many points, some at a time."""
         env = self.envelope
-        at, traces = self._quadrature(degree)
-        y, n, weights = at.points.reshape(-1, 3), at.normals.reshape(-1, 3), at.weights.reshape(-1, 1)
-        free = ~env.held
-        pressure = weights * (traces @ field[env.trace])
-        flux = weights * (traces[:, free] @ self._project((self.operator(k)[env.trace] @ field)[free]))
+        y, n, pressure, flux = self._surface_values(degree, k, field)
 
         def of(x: Floats) -> Complex:
             return _summed(x, y, n, k, pressure, flux)
@@ -156,6 +152,32 @@ class Exterior:
             found.append(of(x))
             if env.ground is not None:
                 found[-1] += env.ground.sign * of(env.ground.mirror(env.centre, x))
+        return np.concatenate(found)
+
+    def _surface_values(self, degree: int, k: complex, field: Complex) -> tuple[Floats, Floats, Complex, Complex]:
+        """Points and normals (q, 3) of the rule, and p and -dp/dn (q, r) of a field there, times the rule's weights."""
+        env = self.envelope
+        at, traces = self._quadrature(degree)
+        free, weights = ~env.held, at.weights.reshape(-1, 1)
+        pressure = weights * (traces @ field[env.trace])
+        flux = weights * (traces[:, free] @ self._project((self.operator(k)[env.trace] @ field)[free]))
+        return at.points.reshape(-1, 3), at.normals.reshape(-1, 3), pressure, flux
+
+    def far(self, directions: Floats, k: complex, field: Complex) -> Complex:
+        """F (m, r) [Pa m] in directions (m, 3), of a field u (size, r): `far_rows` @ u, without the rows."""
+        unit = np.atleast_2d(directions) / np.linalg.norm(np.atleast_2d(directions), axis=1, keepdims=True)
+        env = self.envelope
+        y, n, pressure, flux = self._surface_values(env.dofs.max_order + _DEGREE, k, field)
+
+        def of(d: Floats) -> Complex:
+            g, slope = far_kernel(d, k, env.centre)(y, n)
+            return np.asarray(slope @ pressure + g @ flux)
+
+        found = []
+        for d in np.array_split(unit, len(unit) * len(y) // _PAIRS + 1):
+            found.append(of(d))
+            if env.ground is not None:
+                found[-1] += env.ground.sign * of(env.ground.mirror(np.zeros(3), d))
         return np.concatenate(found)
 
     def _project(self, moments: npt.NDArray[np.complexfloating[Any, Any]]) -> Complex:
@@ -243,13 +265,14 @@ class Exterior:
         return float(0.5 * np.real(np.vdot(velocity, field[self.envelope.trace])))
 
     def far_power(self, field: Complex, k: float, impedance: float, points: int = 0) -> float:
-        """W = int |F|^2 dOmega / (2 rho c) [W] over the sphere, or over the half space above a ground plane."""
+        """W = int |F|^2 dOmega / (2 rho c) [W] over the sphere, or over the half space above a ground plane, of a field
+        (size,) or summed over fields (size, r)."""
         count = points or int(np.ceil(2 * k * self.envelope.largest_radius)) + 12
         directions, weights = sphere_rule(count)
         if self.envelope.ground is not None:
             weights = 0.5 * weights  # images make the pattern even about the plane
-        pattern = self.far_rows(directions, k) @ field
-        return float(np.sum(weights * np.abs(pattern) ** 2) / (2 * impedance))
+        pattern = self.far(directions, k, field.reshape(len(field), -1))
+        return float(weights @ (np.abs(pattern) ** 2).sum(axis=1) / (2 * impedance))
 
 
 def sphere_rule(count: int) -> tuple[Floats, Floats]:
@@ -283,7 +306,7 @@ class Outside:
 
     def far_field(self, directions: Floats) -> Complex:
         """F (m, r) [Pa m] in directions (m, 3): p -> F e^{-ikR} / R, R the distance from the centre."""
-        return np.asarray(self.exterior.far_rows(directions, self.k) @ self.field)
+        return self.exterior.far(directions, self.k, self.field)
 
     def directivity_index(self, directions: Floats) -> Floats:
         """DI (m,) [dB], of the mean squares of all columns together."""
@@ -301,7 +324,7 @@ class Outside:
     def far_power(self) -> float:
         """Radiated power [W] from the far field (of the fluid without its losses); it must agree with `power`."""
         impedance = (self.rho * self.c).real
-        return sum(self.exterior.far_power(u, self.k.real, impedance) for u in self.field.T)
+        return self.exterior.far_power(self.field, self.k.real, impedance)
 
 
 # ---------------------------------------------------------------------------------------------------------------------

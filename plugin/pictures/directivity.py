@@ -49,9 +49,7 @@ def figure(result: Result, frequency: float | None = None, load_case: str = "") 
         _balloon(sheet, up, far)
         watts = far.power / result.bandwidth(load_case)
         per = " per Hz" if is_density(result, load_case) else ""
-        words = (
-            f"{far.name}: {number(float(power_level(watts)))} dB re 1 pW{per} radiated, index up to {far.index.max():+.1f} dB"
-        )
+        words = f"{far.name}: {number(float(power_level(watts)))} dB re 1 pW{per} radiated, directivity index up to {far.index.max():+.1f} dB"
         sheet.write(words, 0.0, up + _ROW + 0.15, fontsize=12, fontweight="bold")
     return sheet.figure
 
@@ -74,16 +72,16 @@ def _polar(sheet: Page, up: float, far: Pattern, level: Any) -> None:
 
 
 def _balloon(sheet: Page, up: float, far: Pattern) -> None:
-    axes: Any = sheet.axes(sheet.width - 5.4, up, 5.2, _ROW, projection="3d")
+    axes: Any = sheet.axes(sheet.width - 5.2, up + 0.1, 5.0, _ROW - 0.1, projection="3d")
     x, y, z = (far.radius[:, None] * far.directions).T
-    norm = Normalize(far.level.max() - RANGE_DB, far.level.max())
+    norm = Normalize(far.level.max() - 0.5 * RANGE_DB, far.level.max())
     heights = far.level[far.triangles].mean(axis=1)
     surface = axes.plot_trisurf(x, y, z, triangles=far.triangles, linewidth=0.1, edgecolor="#6b7880", shade=False)
     surface.set_facecolor(colormaps[LEVEL_MAP](norm(heights)))
     axes.set_xlim(-1, 1)
     axes.set_ylim(-1, 1)
     axes.set_zlim(-1, 1)
-    axes.set_box_aspect((1, 1, 1), zoom=1.25)
+    axes.set_box_aspect((1, 1, 1), zoom=0.95)
     axes.set_xlabel("x", labelpad=-12)
     axes.set_ylabel("y", labelpad=-12)
     axes.set_zlabel("z", labelpad=-12)
