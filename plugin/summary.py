@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from murmesh.solver.case.medium import damped
 from murmesh.solver.levels import Band, band_energy, level, overall_energy, third_octaves
 from murmesh.solver.radiation import is_power, mean_square, places
 from murmesh.solver.result import Result
@@ -102,6 +103,21 @@ def shown(value: float, bar: float = float("nan")) -> str:
     return f"{value:.{digits}f} ±{max(bar, 0.1):.{digits}f}"
 
 
+def outside_facts(result: Result) -> list[tuple[str, str]]:
+    """What the infinite elements rest on, by surface: radial functions, k a at the highest line, condition number there."""
+    facts = []
+    for outer in result.space.envelopes if result.radiates else ():
+        found, top = outer.envelope, result.frequencies[-1:]
+        region = result.case.regions[outer.region]
+        k = float((2 * np.pi * top / damped(region.medium, region.damping, top)[1])[0].real)
+        words = (
+            f"{found.radial} radial functions, k a up to {k * found.largest_radius:.2g} (a: farthest point of the surface), "
+            f"condition number of the scaled radial matrices {found.condition(k):.2g}"
+        )
+        facts.append((f"infinite elements on {outer.name}", words))
+    return facts
+
+
 def trust(result: Result) -> str:
     """What is known about the numerical error of the levels: mesh bar and certificate; an empty text where nothing is."""
     parts = []
@@ -109,4 +125,5 @@ def trust(result: Result) -> str:
         parts.append("± dB (mesh): what elements of the next order would change, every line of a band erring the same way")
     if result.certificate is not None:
         parts.append(f"reduced sweep: {result.certificate.words}")
+    parts += [f"{name}: {words}" for name, words in outside_facts(result)]
     return "\n".join(parts)

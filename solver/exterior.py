@@ -10,8 +10,8 @@ fast as energies do.
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
 from functools import cached_property
 from typing import Any
 
@@ -286,7 +286,11 @@ def sphere_rule(count: int) -> tuple[Floats, Floats]:
 
 @dataclass(frozen=True, eq=False)
 class Outside:
-    """A solved field beyond one surface at one frequency: u (size, r) and the fluid's rho and c, with all losses."""
+    """A solved field beyond one surface at one frequency: u (size, r) and the fluid's rho and c, with all losses.
+
+    Where fields come from outside (`arriving`: each with its part (r,) in the columns), u is what is added to them, and so are
+    far field and power: they are scattered. `pressure` holds both.
+    """
 
     name: str
     exterior: Exterior
@@ -294,6 +298,14 @@ class Outside:
     frequency: float
     rho: complex
     c: complex
+    arriving: tuple[tuple[Incident, Complex], ...] = ()
+
+    def with_arriving(self, fields: Sequence[tuple[IncidentField, Complex]]) -> Outside:
+        """The same where `field` still holds the traces of fields from outside, each with its part (r,)."""
+        f, k, rho = (np.array([value]) for value in (self.frequency, self.k, self.rho))
+        found = tuple((Incident.of(load, self.exterior, self.k.real, self.k.real), part) for load, part in fields)
+        own = [np.outer(held.traces @ held.surface(f, k, rho)[0], part) for held, part in found]
+        return replace(self, field=self.field - np.sum(own, axis=0), arriving=found)
 
     @property
     def k(self) -> complex:
@@ -302,7 +314,11 @@ class Outside:
 
     def pressure(self, points: Floats) -> Complex:
         """p (m, r) [Pa] at points (m, 3) outside."""
-        return self.exterior.pressure(points, self.k, self.field) if len(points) else self.field[:0]
+        if not len(points):
+            return self.field[:0]
+        f, k, rho = (np.array([value]) for value in (self.frequency, self.k, self.rho))
+        own = [np.outer(held.at(points, f, k, rho)[0], part) for held, part in self.arriving]
+        return np.asarray(self.exterior.pressure(points, self.k, self.field) + np.sum(own, axis=0), dtype=np.complex128)
 
     def far_field(self, directions: Floats) -> Complex:
         """F (m, r) [Pa m] in directions (m, 3): p -> F e^{-ikR} / R, R the distance from the centre."""

@@ -19,7 +19,7 @@ import numpy.typing as npt
 
 from murmesh.solver.assembly import evaluate
 from murmesh.solver.case.hdf5 import check_header, open_hdf5, read_case_group, write_atomically, write_case_group
-from murmesh.solver.case.load import LoadCase
+from murmesh.solver.case.load import IncidentField, LoadCase
 from murmesh.solver.case.medium import damped
 from murmesh.solver.case.model import HIGHEST_ORDER, Case
 from murmesh.solver.engine import Engine, Line
@@ -247,14 +247,19 @@ class Result:
         return any(surface.boundary.radiates for surface in self.case.surfaces)
 
     def outside(self, frequency: float, load_case: str = "") -> tuple[Outside, ...]:
-        """The field beyond every surface that radiates, as `unknowns` at the frequency give it."""
+        """The field beyond every surface that radiates, as `unknowns` at the frequency give it; fields that come from outside
+        are kept apart from what the model adds to them."""
         f, u = np.array([frequency]), self.unknowns(frequency, load_case)
+        declared = self.load_case_of(load_case)
+        mix = declared.combination.factors(f, len(declared.loads))[0]
+        arriving = [(load, mix[i]) for i, load in enumerate(declared.loads) if isinstance(load, IncidentField)]
         out = []
         for outer in self.space.envelopes:
             region = self.case.regions[outer.region]
-            rho, c = damped(region.medium, region.damping, f)
+            rho, c = (complex(value[0]) for value in damped(region.medium, region.damping, f))
             exterior = Exterior(outer.envelope, self.space.size)
-            out.append(Outside(outer.name, exterior, u, frequency, complex(rho[0]), complex(c[0])))
+            own = Outside(outer.name, exterior, u, frequency, rho, c)
+            out.append(own.with_arriving(arriving) if arriving else own)
         return tuple(out)
 
     def unknowns(self, frequency: float, load_case: str = "") -> Complex:

@@ -49,7 +49,8 @@ def figure(result: Result, frequency: float | None = None, load_case: str = "") 
         _balloon(sheet, up, far)
         watts = far.power / result.bandwidth(load_case)
         per = " per Hz" if is_density(result, load_case) else ""
-        words = f"{far.name}: {number(float(power_level(watts)))} dB re 1 pW{per} radiated, directivity index up to {far.index.max():+.1f} dB"
+        power = f"{number(float(power_level(watts)))} dB re 1 pW{per} radiated"
+        words = f"{far.name}: {power}, directivity index up to {far.index.max():+.1f} dB"
         sheet.write(words, 0.0, up + _ROW + 0.15, fontsize=12, fontweight="bold")
     return sheet.figure
 

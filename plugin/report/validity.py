@@ -11,7 +11,7 @@ from murmesh.plugin.describe import hertz
 from murmesh.plugin.findings.finding import Finding
 from murmesh.plugin.report.html import Html, join, note, table, tag
 from murmesh.plugin.report.review import Review
-from murmesh.plugin.summary import all_levels
+from murmesh.plugin.summary import all_levels, outside_facts
 from murmesh.solver.case.model import Case
 from murmesh.solver.contribution import participation
 from murmesh.solver.errors import CaseError
@@ -29,9 +29,9 @@ def section(review: Review) -> Html:
     listed = table(("severity", "finding", "subject", "what was found, and the cure"), rows, words=4)
     figures = table(("check", "figure"), list(_figures(review.result, found)), words=2)
     remark = (
-        "Not in these figures: the residual damping of hard walls (doubling it moved levels by 2 to 3 dB(A) in a study of "
-        "box cabs, our own, unpublished) and the spread between machines of one build (about 5 dB per third octave, common "
-        "practice, no source). Gains are more certain than absolute levels."
+        "Not in these figures: how well the residual damping of hard walls is known (the draws of a study of treatments tell "
+        "what it does here) and the spread between machines of one build (about 5 dB per third octave, common practice, no "
+        "source). Gains are more certain than absolute levels."
     )
     return join([figures, note(remark), tag("h3", "Findings of the check"), listed if found else tag("p", "None.")])
 
@@ -48,6 +48,7 @@ def _figures(result: Result, found: tuple[Finding, ...]) -> Iterator[tuple[str, 
     yield "error bar of the mesh", _mesh_words(result)
     certificate = "direct solution of every line: no reduced model, none needed"
     yield "certificate of the sweep", result.certificate.words if result.certificate else certificate
+    yield from outside_facts(result)
     residuals = np.concatenate([held.residual for held in result.load_cases] or [np.array([np.nan])])
     if np.isfinite(residuals).any():
         yield "largest residual of a linear system", f"{np.nanmax(residuals):.1e}"

@@ -18,6 +18,7 @@ from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.pictures import PICTURES, directivity
 from murmesh.plugin.pictures.style import texts
 from murmesh.plugin.study import Study, study
+from murmesh.plugin.summary import outside_facts, trust
 from murmesh.solver.case.boundary import Radiating, Vibrating
 from murmesh.solver.case.catalogue import Treatment
 from murmesh.solver.case.load import SurfaceVelocity
@@ -71,6 +72,15 @@ def test_products_of_the_outside_are_offered_where_something_radiates(tmp_path: 
         name = "directivity" if command == "draw" else "outside_vtm"
         assert main([command, str(tmp_path / "r.h5"), str(tmp_path / "out"), option, name]) == 0
         assert (tmp_path / "out" / made).is_file()
+
+
+def test_what_the_infinite_elements_rest_on_is_said() -> None:
+    [(name, words)] = outside_facts(_pulsating())
+    envelope = _pulsating().space.envelopes[0].envelope
+    assert name == "infinite elements on outer" and f"{envelope.radial} radial functions, k a up to 2.2" in words
+    condition = float(words.split()[-1])
+    assert 1.0 < condition < 1e3 and words in trust(_pulsating())
+    assert outside_facts(solved_box.result()) == []
 
 
 @cache

@@ -30,7 +30,8 @@ from murmesh.solver.sweep import solve
 from murmesh.solver.treatment import Goal, treated_case
 
 FOAM = Layers((PorousLayer(Miki(12000.0), 0.05),))
-MADE = ("options.csv", "study.json", "before_after.png", "choice_front.png", "gain_colours.png", "two_rankings.png")
+MADE = ("options.csv", "study.json", "before_after.png", "choice_front.png", "gain_colours.png", "gains.vtp",
+        "two_rankings.png")  # fmt: skip
 
 
 def _case() -> Case:

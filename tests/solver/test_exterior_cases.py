@@ -139,6 +139,22 @@ def test_a_ground_without_normal_is_refused() -> None:
         Radiating(ground="rigid", ground_normal=(0.0, 0.0, 0.0))
 
 
+def test_the_cross_section_of_a_rigid_sphere() -> None:
+    """B04: scattered power over the intensity of the wave, in units of pi a^2, from the far field of what is added; 1 %."""
+    a = 0.25
+    for case in [c for c in read_json_reference("B04_rigid_sphere_scattering.json")["cases"] if c["ka"] <= 2.0]:
+        f = case["ka"] / a * 343.0 / (2 * np.pi)
+        mesh, wave = meshes.shell(3, (a, 0.3)), PlaneWave("wave", (0.0, 0.0, 2.0), 1.0 + 0j)
+        result = solve(case_of(mesh, {"outer": Radiating()}, [wave], [f], {}, order=4, field_frequencies=np.array([f])))
+        [outside] = result.outside(f)
+        incident = 1.0 / (2 * RHO_C)
+        for power in (outside.power, outside.far_power):
+            assert power / incident / (np.pi * a**2) == pytest.approx(case["Q_scat"], rel=0.01)
+        angle = np.radians([row["theta_deg"] for row in case["form_function_abs"]])
+        forms = np.abs(outside.far_field(np.stack([np.sin(angle), 0 * angle, np.cos(angle)], axis=1))[:, 0]) / (a / 2)
+        assert np.abs(forms - [row["form"] for row in case["form_function_abs"]]).max() < 0.01
+
+
 def test_a_wave_around_a_rigid_sphere() -> None:
     """B04 at ka = 1 and 2: total pressure outside, within 1 % of the wave."""
     a = 0.25
@@ -174,7 +190,7 @@ def test_where_nothing_is_in_its_way_a_field_from_outside_stays_itself(wave: Inc
     kinds = {name: Radiating(ground=ground) if name == outer else floor for name in mesh.surfaces}
     points = {"inside": (0.02, 0.05, 0.1), "outside": (0.1, -0.1, 0.4)}
     f = np.linspace(200.0, 600.0, 3)
-    result = solve(case_of(mesh, kinds, [wave], f, points, order=5))
+    result = solve(case_of(mesh, kinds, [wave], f, points, order=5, field_frequencies=f))
     x, sign = np.array(list(points.values())), {"none": 0.0, "rigid": 1.0, "pressure_release": -1.0}[ground]
     exact = []
     for each in f:
@@ -183,6 +199,10 @@ def test_where_nothing_is_in_its_way_a_field_from_outside_stays_itself(wave: Inc
         exact.append(scale * (wave.shape(x, k)[0] + sign * wave.shape(x * [1, 1, -1], k)[0]))
     found = result.load_cases[0].contributions[..., 0]
     assert np.abs(found - exact).max() < 5e-3 * np.abs(exact).max()
+    last = result.pressure_at(x, float(f[-1]))[:, 0]
+    assert np.abs(last - exact[-1]).max() < 5e-3 * np.abs(exact).max()
+    [outside] = result.outside(float(f[-1]))  # nothing is scattered
+    assert abs(outside.power) < 1e-4 * np.abs(exact).max() ** 2 / RHO_C
 
 
 def test_sources_from_outside_are_declared_and_lie_outside() -> None:
