@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.polynomial.legendre import leggauss
 from scipy.special import spherical_jn, spherical_yn
 
 import meshes
-from murmesh.solver.assembly import DofMap, Geometry, face_dofs, surface_load, volume_matrices
+from murmesh.solver.assembly import DofMap, Geometry, evaluate, face_dofs, surface_load, volume_matrices
 from murmesh.solver.envelope import Ground, envelope
 from murmesh.solver.exterior import Exterior
 from murmesh.solver.linalg import analyse, solve_refined
@@ -54,3 +55,23 @@ class Shell:
         out = np.zeros(self.size, dtype=np.complex128)
         out[free] = solve_refined(factor, matrix.tocsr(), load[free, None].astype(np.complex128))[0][:, 0]
         return out
+
+
+def open_end(shell: Shell, length: float, ka: float) -> tuple[float, float]:
+    """Reflection R = -|R| e^{-2ikl} at the mouth z = 0 of `meshes.flanged_pipe` with a piston at z = -length; |R| and l/a.
+
+    From the mean pressure of six sections: higher modes of the pipe have none, but for those of rotation.
+    """
+    u = shell.solve(ka, 1j * ka * shell.load("bottom"))
+    sections = -length + np.linspace(0.2, min(1.2, length - 1.5), 6)
+    gauss, weights = leggauss(4)
+    ring, angle = np.sqrt(0.5 * (gauss + 1)) * 0.999, np.arange(8) * np.pi / 4 + 0.2
+    mean = []
+    for z in sections:
+        points = np.array([(r * np.cos(t), r * np.sin(t), z) for r in ring for t in angle])
+        tet, bary = shell.geometry.locate(points)
+        p = evaluate(shell.geometry, shell.dofs, tet, bary) @ u[: shell.dofs.n_dofs]
+        mean.append(0.5 * weights @ p.reshape(len(ring), len(angle)).mean(axis=1))
+    waves = np.stack([np.exp(-1j * ka * sections), np.exp(1j * ka * sections)], axis=1)
+    out, back = np.linalg.lstsq(waves, np.array(mean), rcond=None)[0]
+    return abs(back / out), float((-np.angle(-back / out) / (2 * ka)) % (np.pi / ka))

@@ -242,6 +242,31 @@ def dome(n: int, radii: Sequence[float]) -> TestMesh:
     return _rounded(quadratic(replace(bare, surfaces=surfaces)), bare)
 
 
+def flanged_pipe(radii: Sequence[float], layers: Floats) -> TestMesh:
+    """A round pipe of radius 1 from below (planes z = `layers`, the last one 0) into a dome of air over a floor: spheres of
+    the given radii (1 among them), as in `dome`; surfaces outer and bottom."""
+    top = dome(len(radii) - 1, radii)
+    corners = top.tets[:, :4]
+    nodes = top.nodes[: corners.max() + 1]
+    disc = np.concatenate([top.surfaces[f"disc_{i}"] for i in range(list(radii).index(1.0))])[:, :3]
+    used, flat = np.unique(disc, return_inverse=True)
+    pipe = extrude(nodes[used][:, :2], flat.reshape(-1, 3), layers)
+    both = np.concatenate([nodes, pipe.nodes])
+    _, first, same = np.unique(np.round(both, 9) + 0.0, axis=0, return_index=True, return_inverse=True)
+    bare = TestMesh(both[first], same.reshape(-1)[np.concatenate([corners, pipe.tets + len(nodes)])])
+    on_dome = lambda x: (np.abs(np.linalg.norm(x, axis=-1) - radii[-1]) < 1e-9) & (x[..., 2] > -1e-9)  # noqa: E731
+    bottom = _on_boundary(bare, lambda x: np.abs(x[..., 2] - layers[0]) < 1e-9)
+    mesh = quadratic(replace(bare, surfaces={"outer": _on_boundary(bare, on_dome), "bottom": bottom}))
+    moved, middle = mesh.nodes.copy(), mesh.tets[:, 4:].ravel()
+    ends = bare.nodes[bare.tets[:, TET_EDGES].reshape(-1, 2)]
+    above = np.all(ends[..., 2] > -1e-9, axis=1)
+    for at, axes in ((above, 3), (~above, 2)):  # spheres above, cylinders below
+        wanted = np.linalg.norm(ends[at][..., :axes], axis=2).mean(axis=1)
+        found = np.linalg.norm(mesh.nodes[middle[at], :axes], axis=1)
+        moved[middle[at], :axes] = mesh.nodes[middle[at], :axes] * (wanted / np.maximum(found, 1e-300))[:, None]
+    return replace(mesh, nodes=moved)
+
+
 def _on_sphere(bary: Floats, corners: Floats) -> Floats:
     """Unit vectors of barycentric coordinates of a corner of the octahedron, equal angles along its edges."""
     x = np.sin(0.5 * np.pi * bary / np.maximum(bary.sum(axis=1, keepdims=True), 1e-300)) @ corners

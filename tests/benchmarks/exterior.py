@@ -6,12 +6,13 @@ from collections.abc import Iterator
 
 import numpy as np
 import numpy.typing as npt
-from exterior_shells import Shell, hankel
+from exterior_shells import Shell, hankel, open_end
 from scipy.special import eval_legendre, j1
 
 import meshes
 from bench import Row, benchmark
 from murmesh.solver.envelope import Ground
+from reading import read_csv_reference
 
 Floats = npt.NDArray[np.float64]
 
@@ -22,6 +23,7 @@ def exterior(quick: bool) -> Iterator[Row]:
     yield from sphere(2 if quick else 4)
     yield Row("condition number, 3:1 spheroid, ka = 20", slender(2 if quick else 4), "", "limit of the issue", 5e3)
     yield from piston(quick)
+    yield from mouth(quick)
 
 
 def sphere(n: int) -> Iterator[Row]:
@@ -61,6 +63,22 @@ def piston(quick: bool) -> Iterator[Row]:
         loud = np.abs(exact) > 0.1 * np.abs(exact).max()
         worst.append(np.abs(20 * np.log10(np.abs(found / exact)))[loud].max())
     yield Row("piston, far field within 20 dB, ka <= 10", float(max(worst)), "dB", "2 J1(x) / x", 0.01)
+
+
+def mouth(quick: bool) -> Iterator[Row]:
+    """The mouth of a round pipe in a rigid flange (B07), to ka = 3.5: the edge's singular field asks for fine rings."""
+    radii, length = ((0.0, 0.5, 1.0, 1.4), 3) if quick else ((0.0, 0.4, 0.7, 0.9, 1.0, 1.1, 1.3), 3)
+    layers = np.concatenate([np.linspace(-length, -0.4, 2 * length), [-0.15, 0.0]])
+    shell = Shell(meshes.flanged_pipe(radii, layers), 4, ground=Ground.of((0, 0, 1), 1), centre=(0.0, 0.0, 0.0))
+    table = read_csv_reference("B07_flanged_pipe.csv")
+    rows = [row for row in zip(table["ka"], table["absR"], table["l_over_a"], strict=True) if row[0] >= 0.3]
+    off = [
+        (abs(size / r - 1), abs(end - length_))
+        for ka, r, length_ in rows
+        for size, end in [open_end(shell, length, float(ka))]
+    ]
+    yield Row("flanged pipe, |R|, ka <= 3.5", float(max(o[0] for o in off)), "", "Zorumski, 24 modes (B07)", 0.01)
+    yield Row("flanged pipe, end correction l/a", float(max(o[1] for o in off)), "", "the same", 0.01)
 
 
 def _directivity(x: Floats) -> Floats:

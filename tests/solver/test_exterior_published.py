@@ -11,7 +11,7 @@ from functools import cache
 import numpy as np
 import numpy.typing as npt
 import pytest
-from exterior_shells import Shell
+from exterior_shells import Shell, open_end
 
 import meshes
 from murmesh.solver.assembly import evaluate
@@ -163,3 +163,16 @@ def test_modes_of_a_plate_in_a_baffle(m: int, n: int, f: float, sigma: float) ->
     _, power = _moved(shell, shell.load("floor", shape), k)
     found = power / (RHO * C * a * b * 0.5 * 0.25 * SPEED**2)
     assert abs(10 * np.log10(found / sigma)) < 0.2
+
+
+def test_the_mouth_of_a_flanged_pipe() -> None:
+    """B07 at ka = 0.5, 1, 2: |R| within 1 %, end correction within 0.01 a. The benchmark goes to ka = 3.5 with finer rings."""
+    layers = np.array([-3.0, -2.2, -1.4, -0.7, -0.2, 0.0])
+    mesh = meshes.flanged_pipe((0.0, 0.5, 1.0, 1.4), layers)
+    shell = Shell(mesh, 4, ground=Ground.of((0, 0, 1), 1), centre=(0.0, 0.0, 0.0))
+    table = read_csv_reference("B07_flanged_pipe.csv")
+    for ka in (0.5, 1.0, 2.0):
+        at = int(np.flatnonzero(table["ka"] == ka)[0])
+        size, end = open_end(shell, 3.0, ka)
+        assert size == pytest.approx(table["absR"][at], rel=0.01)
+        assert end == pytest.approx(table["l_over_a"][at], abs=0.01)
