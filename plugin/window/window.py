@@ -258,7 +258,8 @@ class Window:
         held = parameters(self.state)
         if self.views is not None and self.choice is not None:
             held += results.result_parameters(self.views.result, self.choice)
-        entries = [*self._fixed(), *(parameter.json for parameter in held)]
+        known = self._names
+        entries = [*self._fixed(), *(entry.again if entry.name in known else entry.json for entry in held)]
         names = {entry["name"] for entry in entries}
         for name in self._names - names:
             gmsh.onelab.clear(name)

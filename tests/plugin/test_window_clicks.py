@@ -100,6 +100,13 @@ class Driver:
         self._tool("key", name)
         time.sleep(0.3)
 
+    def enter(self, x: int, y: int, text: str) -> None:
+        """Type a value over the one in a field of the tree."""
+        self.click(x, y)
+        self.key("ctrl+a")
+        self._tool("type", "--delay", "30", text)
+        self.key("Return")
+
     def end(self) -> int:
         """End it as a person ends a program from outside."""
         self.process.send_signal(signal.SIGINT)
@@ -130,6 +137,8 @@ def driver(display: str, tmp_path: Path) -> Iterator[Driver]:
 # pixels in the window: four modules, the legend under the fourth, then Job with its file and four buttons
 CHECK, SAVE, UNDO, PICK = ((150, y) for y in (186, 207, 228, 307))
 SOLVE, SURFACE = (380, 826), (1000, 450)
+OPEN_SWEEP, OPEN_FIRST_SURFACE = (34, 497), (46, 329)
+VELOCITY, STEP = (130, 366), (90, 619)  # with both of these branches open
 
 
 def test_surfaces_are_picked_saved_undone_and_solved(driver: Driver) -> None:
@@ -147,6 +156,17 @@ def test_surfaces_are_picked_saved_undone_and_solved(driver: Driver) -> None:
     driver.click(*SOLVE)
     _wait(lambda: driver.job.with_name("box_result.h5").is_file(), "the result")
     assert driver.process.poll() is None
+
+
+def test_what_is_typed_in_the_tree_reaches_the_job_file(driver: Driver) -> None:
+    """A text and a number; the branches stay open after the first edit, or the second would find no field."""
+    driver.click(*OPEN_SWEEP)
+    driver.click(*OPEN_FIRST_SURFACE)
+    driver.enter(*VELOCITY, "2e-3")
+    driver.enter(*STEP, "5")
+    driver.click(*SAVE)
+    wanted = _JOB.replace("velocity = 1e-3", "velocity = 0.002").replace("step = 10.0", "step = 5.0")
+    _wait(lambda: driver.job.read_text() == wanted, "the job with what was typed")
 
 
 def test_no_display_is_said_at_once(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, gmsh_library: None) -> None:
