@@ -35,7 +35,7 @@ class Parameter:
     def again(self) -> dict[str, Any]:
         """The same for a parameter that is there already: its branch stays as a person left it."""
         row = self.row
-        held: dict[str, Any] = {"name": self.name, "attributes": {"Help": row.help}}
+        held: dict[str, Any] = {"name": self.name, "attributes": {"Help": row.help, "Closed": "0"}}
         if row.form == "choice":
             labels = _labels(row)
             return held | {

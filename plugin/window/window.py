@@ -210,11 +210,13 @@ class Window:
             self._say(f"murmesh: {line.removeprefix('murmesh: ')}")
         if status is None:
             return
-        self.child.close()
-        self.child = None
+        child, self.child = self.child, None
+        child.close()
         if status == 0:
             self.load_result()
-        elif status != 130:
+        elif child.stopped:
+            self._say("murmesh: stopped; finished lines are kept, Solve goes on from there")
+        else:
             self._say(f"murmesh: the solution ended with status {status}; its last lines in the log say why", "error")
         self._refresh()
 
