@@ -23,7 +23,7 @@ from murmesh.plugin.window.child import Child
 from murmesh.plugin.window.document import REMOVED, Document
 from murmesh.plugin.window.opening import open_files
 from murmesh.plugin.window.parameters import Row, kind_rows, read_back, starting_tree
-from murmesh.plugin.window.state import State, save
+from murmesh.plugin.window.state import State, keep, save, taken_up, unsaved_file
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.fields import from_tree
 from murmesh.solver.case.hdf5 import read_case, write_case
@@ -159,6 +159,28 @@ def test_assigning_is_one_change_and_can_be_undone() -> None:
     assert state.changed and "# all walls" in state.document.text
     assert state.undone().document.text == DOCUMENT.text and not state.undone().changed
     assert STATE.undone() is STATE
+
+
+def test_what_was_undone_is_made_again_until_something_else_is_changed() -> None:
+    state = STATE.assigned(["x0"], "impedance").assigned(["x1"], "impedance")
+    back = state.undone().undone()
+    assert back.document == DOCUMENT and back.redone().redone().document == state.document
+    assert back.with_receiver((0, 0, 0)).future == () and STATE.redone() is STATE
+
+
+def test_changes_that_were_not_saved_are_there_again(tmp_path: Path) -> None:
+    path = tmp_path / "box.toml"
+    changed = STATE.assigned(["x0"], "impedance")
+    keep(STATE, path)
+    assert not unsaved_file(path).exists(), "nothing was changed"
+    keep(changed, path)
+    again = taken_up(STATE, path)
+    assert again.document.text == changed.document.text and again.undone().document == STATE.document
+    keep(again.undone(), path)
+    assert not unsaved_file(path).exists() and taken_up(STATE, path) is STATE
+    keep(again, path)
+    save(again, path)
+    assert [file.name for file in tmp_path.iterdir()] == ["box.toml"]
 
 
 def test_a_loaded_surface_keeps_the_load_that_its_new_kind_can_carry() -> None:
@@ -308,6 +330,15 @@ def test_views_show_what_the_result_holds(gmsh_model: None) -> None:
     assert len(gmsh.view.getTags()) == 3
     views.remove()
     assert not len(gmsh.view.getTags())
+
+
+def test_views_on_the_same_surfaces_take_each_others_place(gmsh_model: None) -> None:
+    views = Views(solved_box.result())
+    choice = results.Choice.of(views.result, views)
+    rows = {str(p.row.path[0]): p.row for p in results.result_parameters(views.result, choice)}
+    for key, shown, seen in (("cut", 1, ("levels", "cut")), ("phase", 1, ("cut", "phase")), ("phase", 0, ("cut",))):
+        choice = results.changed(choice, rows[key], shown, views)
+        assert choice.views == seen
 
 
 def test_planes_that_cannot_be_cut_are_refused(gmsh_model: None) -> None:

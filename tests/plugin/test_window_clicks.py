@@ -78,9 +78,10 @@ class Driver:
 
     def __init__(self, folder: Path, display: str, job: str) -> None:
         self._environment = os.environ | {"DISPLAY": display}
-        (folder / "box.geo").write_text(_GEO)
         self.job = folder / "box.toml"
-        self.job.write_text(job)
+        if not self.job.exists():
+            (folder / "box.geo").write_text(_GEO)
+            self.job.write_text(job)
         command = [sys.executable, "-c", _PROGRAM, "window", str(self.job)]
         self.process = subprocess.Popen(command, env=self._environment, stdout=subprocess.PIPE, stderr=subprocess.STDOUT)
         _wait(lambda: bool(self._tool("search", "--name", "Gmsh")), "the window")
@@ -143,11 +144,11 @@ def driver(display: str, tmp_path: Path, request: pytest.FixtureRequest) -> Iter
     made.end()
 
 
-# pixels in the window: four modules, the legend under the fourth, then Job with its file and four buttons
-CHECK, SAVE, UNDO, STOP, PICK = ((150, y) for y in (186, 207, 228, 249, 307))
+# pixels in the window: four modules, the legend under the fourth, then Job with its file and five buttons
+CHECK, SAVE, UNDO, REDO, STOP, PICK = ((150, y) for y in (186, 207, 228, 249, 270, 328))
 SOLVE, SURFACE = (380, 826), (1000, 450)
-OPEN_SWEEP, OPEN_FIRST_SURFACE = (34, 497), (46, 329)
-VELOCITY, STEP = (130, 366), (90, 619)  # with both of these branches open
+OPEN_SWEEP, OPEN_FIRST_SURFACE = (34, 518), (46, 350)
+VELOCITY, STEP = (130, 387), (90, 640)  # with both of these branches open
 
 
 def test_surfaces_are_picked_saved_undone_and_solved(driver: Driver) -> None:
@@ -162,6 +163,9 @@ def test_surfaces_are_picked_saved_undone_and_solved(driver: Driver) -> None:
     driver.click(*UNDO)
     driver.click(*SAVE)
     _wait(lambda: driver.job.read_text() == before, "the job without the change")
+    driver.click(*REDO)
+    driver.click(*SAVE)
+    _wait(lambda: driver.job.read_text() == saved, "the change made again")
     driver.click(*SOLVE)
     _wait(lambda: driver.job.with_name("box_result.h5").is_file(), "the result")
     assert driver.process.poll() is None
@@ -174,6 +178,23 @@ def test_what_is_typed_in_the_tree_reaches_the_job_file(driver: Driver) -> None:
     driver.enter(VELOCITY, "2e-3", "velocity = 0.002\n")
     driver.enter(STEP, "5", "step = 5.0\n")
     assert driver.job.read_text() == _JOB.replace("1e-3", "0.002").replace("step = 10.0", "step = 5.0")
+
+
+def test_what_was_not_saved_is_there_again(driver: Driver, display: str) -> None:
+    driver.click(*PICK)
+    driver.click(*SURFACE)
+    driver.key("q")
+    driver.end()
+    assert driver.job.read_text() == _JOB
+    unsaved = driver.job.with_name("box.unsaved.toml")
+    kept = unsaved.read_text()
+    assert kept.count("vibrating") == 2
+    again = Driver(driver.job.parent, display, _JOB)
+    try:
+        again.click(*SAVE)
+        _wait(lambda: again.job.read_text() == kept and not unsaved.exists(), "the change of last time")
+    finally:
+        again.end()
 
 
 @pytest.mark.parametrize("driver", [_LONG], indirect=True)
