@@ -276,6 +276,34 @@ def test_a_geometry_is_opened_with_a_job_to_begin_with(gmsh_model: None, tmp_pat
     assert not [f for f in state.findings(opened.mesh) if f.severity == "error"]
 
 
+def _in_millimetres(path: Path) -> Path:
+    import gmsh
+
+    gmsh.option.setString("Geometry.OCCTargetUnit", "MM")
+    gmsh.model.occ.addBox(0, 0, 0, 1000, 800, 600)
+    gmsh.model.occ.synchronize()
+    gmsh.write(str(path))
+    gmsh.clear()
+    return path
+
+
+@pytest.mark.parametrize(("file", "unit"), [("box.step", None), ("box.brep", "mm")])
+def test_cad_in_millimetres_is_opened_in_metres(gmsh_model: None, tmp_path: Path, file: str, unit: str | None) -> None:
+    """STEP states its unit, BREP does not; either comes without groups, and its job says the unit of the .msh saved."""
+    opened, state = open_files(_in_millimetres(tmp_path / file), unit=unit)
+    assert opened.regrouped and np.allclose(np.ptp(opened.mesh.nodes, axis=0), (1.0, 0.8, 0.6))
+    assert state.document.tree["mesh"] == {"file": "box.msh", "unit": "mm"} and len(state.surfaces) == 6
+
+
+def test_a_unit_that_must_be_stated_is_asked_for_before_meshing(gmsh_model: None, tmp_path: Path) -> None:
+    path = _in_millimetres(tmp_path / "box.brep")
+    with pytest.raises(CaseError, match=r"is 1000 m long if its own unit is believed.*state the unit"):
+        open_files(path)
+    (tmp_path / "box.toml").write_text('[mesh]\nfile = "box.brep"\nsize = 0.5\n')
+    opened, state = open_files(path, unit="mm")
+    assert opened.scale == 1e-3 and state.document.value(("mesh", "unit")) == "mm"
+
+
 def test_a_wrapped_geometry_is_opened_with_its_air(gmsh_model: None, tmp_path: Path) -> None:
     (tmp_path / "box.geo").write_text('SetFactory("OpenCASCADE");\nBox(1) = {0, 0, 0, 1, 0.8, 0.6};\n')
     wrapped = '[mesh]\nfile = "box.geo"\nsize = 0.5\n[wrap]\ngap = 0.2\nground = 0.0\n'
