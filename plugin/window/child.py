@@ -9,7 +9,11 @@ import sys
 import time
 from pathlib import Path
 
-_PROGRAM = "import sys; from murmesh.plugin.cli import main; sys.exit(main(sys.argv[1:]))"
+# a window started in the background by a script ignores interrupts, and its children would inherit that
+_PROGRAM = (
+    "import signal, sys; signal.signal(signal.SIGINT, signal.default_int_handler); "
+    "from murmesh.plugin.cli import main; sys.exit(main(sys.argv[1:]))"
+)
 _PATIENCE = 10.0  # seconds between an interrupt and a kill: the line at hand is finished or dropped in less
 
 
@@ -44,6 +48,11 @@ class Child:
         if self._asked and time.monotonic() - self._asked > _PATIENCE and self._process.poll() is None:
             self._process.kill()
         return self._process.poll()
+
+    @property
+    def stopped(self) -> bool:
+        """Whether it was asked to stop."""
+        return bool(self._asked)
 
     def stop(self) -> None:
         """Interrupt it: finished lines are kept, and the next solution of the same case goes on from there."""

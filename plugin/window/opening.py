@@ -12,7 +12,7 @@ from murmesh.plugin.cli.start import job_text as started
 from murmesh.plugin.gmsh_session import CAD, current_gmsh, generate, group_name, open_model
 from murmesh.plugin.job import Job, MeshFile
 from murmesh.plugin.job_text import toml_text
-from murmesh.plugin.mesh_source import BY_GMSH, UNITS, TaggedMesh, from_gmsh
+from murmesh.plugin.mesh_source import BY_GMSH, UNITS, TaggedMesh, from_gmsh, require_unit
 from murmesh.plugin.window.document import Document
 from murmesh.plugin.window.state import State
 from murmesh.plugin.wrapping import wrap_model
@@ -51,6 +51,8 @@ def open_files(model: str | Path, job: str | Path | None = None, unit: str | Non
         path = _named_model(_read(path))
     elif document is not None:
         document = _naming(document, path)
+    if document is not None and unit and document.value(("mesh", "unit")) is None:
+        document = document.with_value(("mesh", "unit"), unit)
     opened = _opened(path, document, job_file, unit)
     saved = job_file.read_text(encoding="utf-8") if job_file.is_file() else ""
     document = document or _first(opened, unit)
@@ -87,6 +89,8 @@ def _opened(path: Path, document: Document | None, job_file: Path, unit: str | N
         job = document.job
         mesh_file, size, around = job.mesh or mesh_file, job.size_for(path), job.wrap
     factor = open_model(path, size, mesh_file.unit, UNITS)
+    if mesh_file.unit is None:
+        require_unit(path, factor)
     gmsh = current_gmsh()
     if around is not None:
         wrap_model(around, factor)

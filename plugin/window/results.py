@@ -20,6 +20,7 @@ _SHOWN = {
     "phase": "Phase animation",
     "panels": "Panels by contribution",
 }
+_ON_SURFACES = {"levels", "phase", "panels"}
 _LISTED = 6
 
 
@@ -73,8 +74,9 @@ def changed(choice: Choice, row: Row, shown: Value, views: Views) -> Choice:
     """The choice after a person changed a row of the branch."""
     key = str(row.path[0])
     if key in _SHOWN:
-        kept = tuple(which for which in _SHOWN if (bool(shown) if which == key else which in choice.views))
-        return replace(choice, views=kept)
+        # two views on the same surfaces would flicker: one takes the place of the other
+        kept = {*choice.views} - (_ON_SURFACES if shown and key in _ON_SURFACES else {key}) | ({key} if shown else set())
+        return replace(choice, views=tuple(which for which in _SHOWN if which in kept))
     if key == "load_case":
         # tones and densities are not of one scale: the limits begin anew
         low, high = views.limits(choice.frequency, str(shown))

@@ -44,6 +44,7 @@ class State:
     surfaces: tuple[str, ...] = ()
     volumes: tuple[str, ...] = ()
     past: tuple[Document, ...] = ()
+    future: tuple[Document, ...] = ()
     saved: str = ""
 
     @property
@@ -55,11 +56,21 @@ class State:
 
     def changed_to(self, document: Document) -> State:
         """The state with another document; the one now is kept for undo."""
-        return self if document == self.document else replace(self, document=document, past=(*self.past, self.document))
+        if document == self.document:
+            return self
+        return replace(self, document=document, past=(*self.past, self.document), future=())
 
     def undone(self) -> State:
         """The state before the last change."""
-        return replace(self, document=self.past[-1], past=self.past[:-1]) if self.past else self
+        if not self.past:
+            return self
+        return replace(self, document=self.past[-1], past=self.past[:-1], future=(*self.future, self.document))
+
+    def redone(self) -> State:
+        """The state before the last undo; a change in between leaves nothing to redo."""
+        if not self.future:
+            return self
+        return replace(self, document=self.future[-1], past=(*self.past, self.document), future=self.future[:-1])
 
     def with_row(self, row: Row, shown: Value) -> State:
         """The state after a person changed a row. Raises FieldError where the new value cannot be meant."""
@@ -226,7 +237,31 @@ def save(state: State, path: Path) -> State:
     _ = state.document.job
     with written(path) as scratch:
         scratch.write_text(state.document.text, encoding="utf-8")
+    unsaved_file(path).unlink(missing_ok=True)
     return replace(state, saved=state.document.text)
 
 
-__all__ = ["NO_KIND", "State", "save"]
+def unsaved_file(path: Path) -> Path:
+    """Where the changes to the job file `path` that were not saved yet are kept, so that nothing is lost with the window."""
+    return path.with_name(f"{path.stem}.unsaved{path.suffix}")
+
+
+def keep(state: State, path: Path) -> None:
+    """Write what a person changed and did not save beside the job file; remove it where nothing is left of it."""
+    beside = unsaved_file(path)
+    if not (state.changed and (state.past or state.future)):
+        beside.unlink(missing_ok=True)
+        return
+    with written(beside) as scratch:
+        scratch.write_text(state.document.text, encoding="utf-8")
+
+
+def taken_up(state: State, path: Path) -> State:
+    """The state with the changes that were not saved when a window closed, as one change: undo goes back to the file."""
+    beside = unsaved_file(path)
+    if not beside.is_file():
+        return state
+    return state.changed_to(replace(state.document, text=beside.read_text(encoding="utf-8")))
+
+
+__all__ = ["NO_KIND", "State", "keep", "save", "taken_up", "unsaved_file"]

@@ -26,12 +26,16 @@ class Parameter:
 
     @property
     def json(self) -> dict[str, Any]:
-        """As gmsh's parameter database takes it."""
+        """As gmsh's parameter database takes it the first time: its branch is closed."""
+        held = self.again
+        closed = "0" if self.name.startswith(RESULTS) else "1"
+        return held | {"attributes": held["attributes"] | {"Closed": closed}}
+
+    @property
+    def again(self) -> dict[str, Any]:
+        """The same for a parameter that is there already: its branch stays as a person left it."""
         row = self.row
-        held: dict[str, Any] = {
-            "name": self.name,
-            "attributes": {"Help": row.help, "Closed": "0" if self.name.startswith(RESULTS) else "1"},
-        }
+        held: dict[str, Any] = {"name": self.name, "attributes": {"Help": row.help, "Closed": "0"}}
         if row.form == "choice":
             labels = _labels(row)
             return held | {
@@ -56,7 +60,7 @@ class Parameter:
     @property
     def stored(self) -> Any:
         """The value as it lies in the database."""
-        return self.json["values"][0]
+        return self.again["values"][0]
 
 
 def _labels(row: Row) -> dict[str, int]:

@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any
 
 from murmesh.plugin.check import Finding, render
+from murmesh.plugin.cli.command import say
 from murmesh.plugin.files import written
 from murmesh.plugin.gmsh_session import current_gmsh
 from murmesh.plugin.gmsh_views import Views
@@ -22,7 +23,7 @@ from murmesh.plugin.window import results
 from murmesh.plugin.window.child import Child
 from murmesh.plugin.window.opening import Opened
 from murmesh.plugin.window.scene import Scene
-from murmesh.plugin.window.state import State, save
+from murmesh.plugin.window.state import State, keep, save, taken_up, unsaved_file
 from murmesh.plugin.window.tree import RECEIVERS, RESULTS, ROOT, SURFACES, Parameter, button, edits, note, parameters
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.hdf5 import write_case
@@ -58,6 +59,7 @@ class Window:
             "stop": self.stop,
             "save": self.save,
             "undo": self.undo,
+            "redo": lambda: self._become(self.state.redone(), "the change undone last is made again"),
             "check_tags": self.check_tags,
             "pick": self.pick,
             "add_receiver": lambda: self._become(self.state.with_receiver(self._middle())),
@@ -75,6 +77,7 @@ class Window:
             gmsh.fltk.openTreeItem(name)
         self._say(f"murmesh: {self.opened.model.name}, job {self.opened.job_file}")
         self.load_result()
+        self._take_up()
         try:
             while gmsh.fltk.isAvailable():
                 self.tick()
@@ -100,10 +103,24 @@ class Window:
             self._refresh()
 
     def close(self) -> None:
-        """Stop the solution, remove scratch files."""
+        """Stop the solution, remove scratch files, say where changes are that were not saved."""
         if self.child is not None:
             self.child.close()
         self.scene.close()
+        beside = unsaved_file(self.opened.job_file)
+        if beside.is_file():
+            say(f"murmesh: changes that were not saved are kept in {beside}; the window takes them up when it opens again")
+
+    def _take_up(self) -> None:
+        """Go on with what was not saved when the window closed."""
+        try:
+            state = taken_up(self.state, self.opened.job_file)
+            _ = state.document.tree
+        except (MurmeshError, OSError, UnicodeDecodeError) as error:
+            self._say(f"murmesh: {unsaved_file(self.opened.job_file)} cannot be read: {error}", "warning")
+            return
+        if state is not self.state:
+            self._become(state, "changes that were not saved last time are here again; Undo returns to the job file")
 
     # -- the job -------------------------------------------------------------------------------------------------------
 
@@ -168,6 +185,7 @@ class Window:
 
     def _become(self, state: State, words: str = "") -> None:
         self.state = state
+        keep(state, self.opened.job_file)
         problem = state.problem()
         if problem:
             self._say(f"murmesh: {problem}", "warning")
@@ -210,11 +228,13 @@ class Window:
             self._say(f"murmesh: {line.removeprefix('murmesh: ')}")
         if status is None:
             return
-        self.child.close()
-        self.child = None
+        child, self.child = self.child, None
+        child.close()
         if status == 0:
             self.load_result()
-        elif status != 130:
+        elif child.stopped:
+            self._say("murmesh: stopped; finished lines are kept, Solve goes on from there")
+        else:
             self._say(f"murmesh: the solution ended with status {status}; its last lines in the log say why", "error")
         self._refresh()
 
@@ -258,7 +278,8 @@ class Window:
         held = parameters(self.state)
         if self.views is not None and self.choice is not None:
             held += results.result_parameters(self.views.result, self.choice)
-        entries = [*self._fixed(), *(parameter.json for parameter in held)]
+        known = self._names
+        entries = [*self._fixed(), *(entry.again if entry.name in known else entry.json for entry in held)]
         names = {entry["name"] for entry in entries}
         for name in self._names - names:
             gmsh.onelab.clear(name)
@@ -286,7 +307,8 @@ class Window:
             button(f"{_JOB}/1Check", "check_tags", "list what the tag check finds"),
             button(f"{_JOB}/2Save", "save", "write the job file, and the job into the .msh"),
             button(f"{_JOB}/3Undo", "undo", "take back the last change"),
-            button(f"{_JOB}/4Stop", "stop", "interrupt the solution; solving again goes on from there"),
+            button(f"{_JOB}/4Redo", "redo", "make the change undone last again"),
+            button(f"{_JOB}/5Stop", "stop", "interrupt the solution; solving again goes on from there"),
             assign,
             button(f"{SURFACES}/01Pick surfaces", "pick", "give this kind to surfaces picked in the window"),
             button(f"{RECEIVERS}/00Add receiver", "add_receiver"),

@@ -23,7 +23,7 @@ from murmesh.plugin.window.child import Child
 from murmesh.plugin.window.document import REMOVED, Document
 from murmesh.plugin.window.opening import open_files
 from murmesh.plugin.window.parameters import Row, kind_rows, read_back, starting_tree
-from murmesh.plugin.window.state import State, save
+from murmesh.plugin.window.state import State, keep, save, taken_up, unsaved_file
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.fields import from_tree
 from murmesh.solver.case.hdf5 import read_case, write_case
@@ -161,6 +161,28 @@ def test_assigning_is_one_change_and_can_be_undone() -> None:
     assert STATE.undone() is STATE
 
 
+def test_what_was_undone_is_made_again_until_something_else_is_changed() -> None:
+    state = STATE.assigned(["x0"], "impedance").assigned(["x1"], "impedance")
+    back = state.undone().undone()
+    assert back.document == DOCUMENT and back.redone().redone().document == state.document
+    assert back.with_receiver((0, 0, 0)).future == () and STATE.redone() is STATE
+
+
+def test_changes_that_were_not_saved_are_there_again(tmp_path: Path) -> None:
+    path = tmp_path / "box.toml"
+    changed = STATE.assigned(["x0"], "impedance")
+    keep(STATE, path)
+    assert not unsaved_file(path).exists(), "nothing was changed"
+    keep(changed, path)
+    again = taken_up(STATE, path)
+    assert again.document.text == changed.document.text and again.undone().document == STATE.document
+    keep(again.undone(), path)
+    assert not unsaved_file(path).exists() and taken_up(STATE, path) is STATE
+    keep(again, path)
+    save(again, path)
+    assert [file.name for file in tmp_path.iterdir()] == ["box.toml"]
+
+
 def test_a_loaded_surface_keeps_the_load_that_its_new_kind_can_carry() -> None:
     state = STATE.assigned(["z0"], "vibrating_treated")
     assert state.document.tree["surfaces"]["z0"]["velocity"] == 1e-3
@@ -254,6 +276,34 @@ def test_a_geometry_is_opened_with_a_job_to_begin_with(gmsh_model: None, tmp_pat
     assert not [f for f in state.findings(opened.mesh) if f.severity == "error"]
 
 
+def _in_millimetres(path: Path) -> Path:
+    import gmsh
+
+    gmsh.option.setString("Geometry.OCCTargetUnit", "MM")
+    gmsh.model.occ.addBox(0, 0, 0, 1000, 800, 600)
+    gmsh.model.occ.synchronize()
+    gmsh.write(str(path))
+    gmsh.clear()
+    return path
+
+
+@pytest.mark.parametrize(("file", "unit"), [("box.step", None), ("box.brep", "mm")])
+def test_cad_in_millimetres_is_opened_in_metres(gmsh_model: None, tmp_path: Path, file: str, unit: str | None) -> None:
+    """STEP states its unit, BREP does not; either comes without groups, and its job says the unit of the .msh saved."""
+    opened, state = open_files(_in_millimetres(tmp_path / file), unit=unit)
+    assert opened.regrouped and np.allclose(np.ptp(opened.mesh.nodes, axis=0), (1.0, 0.8, 0.6))
+    assert state.document.tree["mesh"] == {"file": "box.msh", "unit": "mm"} and len(state.surfaces) == 6
+
+
+def test_a_unit_that_must_be_stated_is_asked_for_before_meshing(gmsh_model: None, tmp_path: Path) -> None:
+    path = _in_millimetres(tmp_path / "box.brep")
+    with pytest.raises(CaseError, match=r"is 1000 m long if its own unit is believed.*state the unit"):
+        open_files(path)
+    (tmp_path / "box.toml").write_text('[mesh]\nfile = "box.brep"\nsize = 0.5\n')
+    opened, state = open_files(path, unit="mm")
+    assert opened.scale == 1e-3 and state.document.value(("mesh", "unit")) == "mm"
+
+
 def test_a_wrapped_geometry_is_opened_with_its_air(gmsh_model: None, tmp_path: Path) -> None:
     (tmp_path / "box.geo").write_text('SetFactory("OpenCASCADE");\nBox(1) = {0, 0, 0, 1, 0.8, 0.6};\n')
     wrapped = '[mesh]\nfile = "box.geo"\nsize = 0.5\n[wrap]\ngap = 0.2\nground = 0.0\n'
@@ -308,6 +358,15 @@ def test_views_show_what_the_result_holds(gmsh_model: None) -> None:
     assert len(gmsh.view.getTags()) == 3
     views.remove()
     assert not len(gmsh.view.getTags())
+
+
+def test_views_on_the_same_surfaces_take_each_others_place(gmsh_model: None) -> None:
+    views = Views(solved_box.result())
+    choice = results.Choice.of(views.result, views)
+    rows = {str(p.row.path[0]): p.row for p in results.result_parameters(views.result, choice)}
+    for key, shown, seen in (("cut", 1, ("levels", "cut")), ("phase", 1, ("cut", "phase")), ("phase", 0, ("cut",))):
+        choice = results.changed(choice, rows[key], shown, views)
+        assert choice.views == seen
 
 
 def test_planes_that_cannot_be_cut_are_refused(gmsh_model: None) -> None:

@@ -52,6 +52,8 @@ step = 10.0
 field_frequencies = [150.0]
 """
 
+_LONG = _JOB.replace("step = 10.0", 'step = 0.05\nmethod = "direct"')
+
 
 @pytest.fixture
 def display(gmsh_library: None) -> Iterator[str]:
@@ -74,11 +76,12 @@ def display(gmsh_library: None) -> Iterator[str]:
 class Driver:
     """A window that is clicked."""
 
-    def __init__(self, folder: Path, display: str) -> None:
+    def __init__(self, folder: Path, display: str, job: str) -> None:
         self._environment = os.environ | {"DISPLAY": display}
-        (folder / "box.geo").write_text(_GEO)
         self.job = folder / "box.toml"
-        self.job.write_text(_JOB)
+        if not self.job.exists():
+            (folder / "box.geo").write_text(_GEO)
+            self.job.write_text(job)
         command = [sys.executable, "-c", _PROGRAM, "window", str(self.job)]
         self.process = subprocess.Popen(command, env=self._environment, stdout=subprocess.PIPE, stderr=subprocess.STDOUT)
         _wait(lambda: bool(self._tool("search", "--name", "Gmsh")), "the window")
@@ -99,6 +102,20 @@ class Driver:
     def key(self, name: str) -> None:
         self._tool("key", name)
         time.sleep(0.3)
+
+    def enter(self, place: tuple[int, int], text: str, wanted: str) -> None:
+        """Type a value over the one in a field of the tree and save; again where a busy machine was not ready for it."""
+        for _ in range(4):
+            self.click(*place)
+            self.key("ctrl+a")
+            self._tool("type", "--delay", "30", text)
+            self.key("Return")
+            time.sleep(0.5)
+            self.click(*SAVE)
+            time.sleep(0.5)
+            if wanted in self.job.read_text():
+                return
+        raise AssertionError(f"'{text}' typed at {place} did not reach the job file:\n{self.job.read_text()}")
 
     def end(self) -> int:
         """End it as a person ends a program from outside."""
@@ -121,15 +138,17 @@ def _wait(ready: Callable[[], bool], what: str, patience: float = 40.0) -> None:
 
 
 @pytest.fixture
-def driver(display: str, tmp_path: Path) -> Iterator[Driver]:
-    made = Driver(tmp_path, display)
+def driver(display: str, tmp_path: Path, request: pytest.FixtureRequest) -> Iterator[Driver]:
+    made = Driver(tmp_path, display, getattr(request, "param", _JOB))
     yield made
     made.end()
 
 
-# pixels in the window: four modules, the legend under the fourth, then Job with its file and four buttons
-CHECK, SAVE, UNDO, PICK = ((150, y) for y in (186, 207, 228, 307))
+# pixels in the window: four modules, the legend under the fourth, then Job with its file and five buttons
+CHECK, SAVE, UNDO, REDO, STOP, PICK = ((150, y) for y in (186, 207, 228, 249, 270, 328))
 SOLVE, SURFACE = (380, 826), (1000, 450)
+OPEN_SWEEP, OPEN_FIRST_SURFACE = (34, 518), (46, 350)
+VELOCITY, STEP = (130, 387), (90, 640)  # with both of these branches open
 
 
 def test_surfaces_are_picked_saved_undone_and_solved(driver: Driver) -> None:
@@ -144,9 +163,58 @@ def test_surfaces_are_picked_saved_undone_and_solved(driver: Driver) -> None:
     driver.click(*UNDO)
     driver.click(*SAVE)
     _wait(lambda: driver.job.read_text() == before, "the job without the change")
+    driver.click(*REDO)
+    driver.click(*SAVE)
+    _wait(lambda: driver.job.read_text() == saved, "the change made again")
     driver.click(*SOLVE)
     _wait(lambda: driver.job.with_name("box_result.h5").is_file(), "the result")
     assert driver.process.poll() is None
+
+
+def test_what_is_typed_in_the_tree_reaches_the_job_file(driver: Driver) -> None:
+    """A text and a number; the branches stay open after the first edit, or the second would find no field."""
+    driver.click(*OPEN_SWEEP)
+    driver.click(*OPEN_FIRST_SURFACE)
+    driver.enter(VELOCITY, "2e-3", "velocity = 0.002\n")
+    driver.enter(STEP, "5", "step = 5.0\n")
+    assert driver.job.read_text() == _JOB.replace("1e-3", "0.002").replace("step = 10.0", "step = 5.0")
+
+
+def test_what_was_not_saved_is_there_again(driver: Driver, display: str) -> None:
+    driver.click(*PICK)
+    driver.click(*SURFACE)
+    driver.key("q")
+    driver.end()
+    assert driver.job.read_text() == _JOB
+    unsaved = driver.job.with_name("box.unsaved.toml")
+    kept = unsaved.read_text()
+    assert kept.count("vibrating") == 2
+    again = Driver(driver.job.parent, display, _JOB)
+    try:
+        again.click(*SAVE)
+        _wait(lambda: again.job.read_text() == kept and not unsaved.exists(), "the change of last time")
+    finally:
+        again.end()
+
+
+@pytest.mark.parametrize("driver", [_LONG], indirect=True)
+def test_a_stopped_solution_keeps_its_lines_and_goes_on(driver: Driver) -> None:
+    result = driver.job.with_name("box_result.h5")
+
+    def lines() -> dict[str, int]:
+        return {path.name: path.stat().st_mtime_ns for path in Path(f"{result}.lines").glob("*")}
+
+    driver.click(*SOLVE)
+    _wait(lambda: len(lines()) > 5, "the first lines")
+    driver.click(*STOP)
+    time.sleep(1.5)
+    kept = lines()
+    time.sleep(1.0)
+    assert lines() == kept and not result.exists()
+    driver.click(*SOLVE)
+    _wait(lambda: len(lines()) > len(kept), "the next lines")
+    now = lines()
+    assert {name: now[name] for name in kept} == kept, "a finished line was solved again"
 
 
 def test_no_display_is_said_at_once(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, gmsh_library: None) -> None:
