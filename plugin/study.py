@@ -10,6 +10,7 @@ from __future__ import annotations
 import json
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import lru_cache
 from itertools import pairwise
 from pathlib import Path
 from typing import Any
@@ -17,7 +18,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from murmesh.plugin.check import check_catalogue
 from murmesh.plugin.files import written
+from murmesh.plugin.findings.finding import Finding
 from murmesh.plugin.summary import CAUTIONS, Levels, levels
 from murmesh.solver.case.catalogue import Limits, Treatment
 from murmesh.solver.case.model import Case
@@ -53,6 +56,8 @@ class Measure:
     treatment: str = ""
     spread: tuple[float, float] | None = None
     places: tuple[int, int] | None = None
+    caution: str = ""
+    """What speaks against believing or doing it: who hears it louder, what the check says of the treatment's law."""
 
     @property
     def louder(self) -> bool:
@@ -188,7 +193,24 @@ def _spread_out(measures: Sequence[Measure], found: Spread, columns: slice) -> l
 def _measured(whatif: WhatIf, goal: Goal, name: str, panel: str, changes: Sequence[Change], *more: Any) -> Measure:
     before, after = (whatif.squares(held, goal.load_case) for held in ((), changes))
     gain = float(level(whatif.energy(before, goal)) - level(whatif.energy(after, goal)))
-    return Measure(name, panel, gain, whatif.band_gains(before, after, goal), *more)
+    measure = Measure(name, panel, gain, whatif.band_gains(before, after, goal), *more)
+    return replace(measure, caution=_caution(whatif, goal, measure, before, after))
+
+
+def _caution(whatif: WhatIf, goal: Goal, measure: Measure, before: Floats, after: Floats) -> str:
+    """`louder`, or at which of several receivers; and what the check of the catalogue finds."""
+    words = ["louder"] if measure.louder else []
+    for receiver in _receivers(whatif.case, goal) if not measure.louder else ():
+        alone = replace(goal, receivers=(receiver,))
+        if level(whatif.energy(before, alone)) - level(whatif.energy(after, alone)) < LOUDER:
+            words.append(f"louder at {receiver}")
+    found = [item for item in _law_findings(whatif) if item.subject == measure.treatment and item.severity != "note"]
+    return "; ".join([*words, *dict.fromkeys(item.code.replace("_", " ") for item in found)])
+
+
+@lru_cache(maxsize=4)
+def _law_findings(whatif: WhatIf) -> tuple[Finding, ...]:
+    return check_catalogue(whatif.case)
 
 
 # ---------------------------------------------------------------------------------------------------------------------
@@ -208,8 +230,8 @@ def tree(found: Study) -> dict[str, Any]:
         },
         "baseline_level_db": round(found.level, 3),
         "quieten": [
-            {"panel": m.panel, "cut_db": QUIETER, "gain_db": round(m.gain, 4), "louder": m.louder, **_drawn(m),
-             "third_octaves": _bands(m)}
+            {"panel": m.panel, "cut_db": QUIETER, "gain_db": round(m.gain, 4), "louder": m.louder, "caution": m.caution,
+             **_drawn(m), "third_octaves": _bands(m)}
             for m in found.quieten
         ],
         "treat": [_measure(m) for m in found.treat],
@@ -242,6 +264,7 @@ def _measure(measure: Measure) -> dict[str, Any]:
         "gain_per_kg": round(measure.gain / measure.mass, 4) if measure.mass > 0 else None,
         "gain_per_eur": round(measure.gain / measure.cost, 5) if measure.cost > 0 else None,
         "louder": measure.louder,
+        "caution": measure.caution,
         **_drawn(measure),
         "third_octaves": _bands(measure),
     }

@@ -137,19 +137,19 @@ def text(found: Study) -> str:
     unit = f"dB({goal.weighting})" if goal.weighting != "Z" else "dB"
     where = ", ".join(goal.receivers) or "all receivers"
     head = f"Baseline {found.level:.1f} {unit} re 20 uPa, mean over {where}, load case '{_load_case(found)}'"
-    quiet = [(m.panel, _gain(m.gain), *_drawn(m), "louder" if m.louder else "") for m in found.quieten]
+    quiet = [(m.panel, _gain(m.gain), *_drawn(m), m.caution) for m in found.quieten]
     drawn = ("80 % of draws", "place") if found.spread else ()
     treat = [
         (m.name, _gain(m.gain), *_drawn(m), f"{m.mass:.2f}", f"{m.cost:.1f}", _per(m.gain, m.mass), _per(m.gain, m.cost, 3),
-         "louder" if m.louder else "")
+         m.caution)
         for m in found.treat
     ]  # fmt: skip
     parts = [
         head,
         f"QUIETEN: the panel's velocity lowered by {QUIETER:g} dB, nothing else changed\n"
-        + table(("panel", f"gain [{unit}]", *drawn, ""), quiet),
+        + table(("panel", f"gain [{unit}]", *drawn, "caution"), quiet),
         "TREAT: each treatment of the catalogue where it may go\n"
-        + table(("measure", f"gain [{unit}]", *drawn, "kg", "EUR", "dB/kg", "dB/EUR", ""), treat),
+        + table(("measure", f"gain [{unit}]", *drawn, "kg", "EUR", "dB/kg", "dB/EUR", "caution"), treat),
         _choices(found, unit),
         _spread(found, unit),
         found.words,

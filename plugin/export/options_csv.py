@@ -9,15 +9,18 @@ from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.export.tables import decibels, write_table
 from murmesh.plugin.study import LOUDER, QUIETER, Study
 from murmesh.plugin.summary import CAUTIONS
+from murmesh.solver.choice import Candidate
 
 DRAWN = ("gain_low_db", "gain_high_db", "place_low", "place_high")
 COLUMNS = (
     "table", "measure", "gain_db", "verified_db", *DRAWN, "mass_kg", "cost_eur", "gain_per_kg", "gain_per_eur", "louder",
+    "caution",
 )  # fmt: skip
 REMARKS = (
     f"quieten: the panel's velocity lowered by {QUIETER:g} dB; treat: one treatment on one panel; choice: sets within limits",
     "gain_db: level before less level after, positive is quieter; verified_db: from a full solution with the set in place",
     "gain_low_db, gain_high_db, place_low, place_high: the middle 80 % of the draws of what is not known; empty without draws",
+    "caution: who hears it louder, and what the check says of the law",
     "louder: yes where the level rises; gain_..._hz_db: per third octave, empty where nothing is heard",
     CAUTIONS,
 )
@@ -36,7 +39,7 @@ def _rows(study: Study) -> Iterator[tuple[str, ...]]:
     for name, measures in (("quieten", study.quieten), ("treat", study.treat)):
         for m in measures:
             yield (name, m.name, decibels(m.gain), "", *_drawn(m.spread, m.places),
-                   *_amounts(m.gain, m.mass, m.cost), "yes" if m.louder else "",
+                   *_amounts(m.gain, m.mass, m.cost), "yes" if m.louder else "", m.caution,
                    *(decibels(gain) for _, gain in m.bands))  # fmt: skip
     for number, candidate in enumerate(study.choice.candidates[:10]):
         checked = decibels(study.verified[number].gain) if number < len(study.verified) else ""
@@ -44,7 +47,14 @@ def _rows(study: Study) -> Iterator[tuple[str, ...]]:
         bands = study.whatif.gains_by_band(candidate.chosen, study.goal)
         yield ("choice", names, decibels(candidate.gain), checked, *_drawn(study.band(number)),
                *_amounts(candidate.gain, candidate.mass, candidate.cost), "yes" if candidate.gain < LOUDER else "",
+               _cautions(study, candidate),
                *(decibels(gain) for _, gain in bands))  # fmt: skip
+
+
+def _cautions(study: Study, candidate: Candidate) -> str:
+    """What is said of the measures of a set."""
+    names = {option.name for option in study.used(candidate)}
+    return "; ".join(dict.fromkeys(f"{m.name}: {m.caution}" for m in study.treat if m.name in names and m.caution))
 
 
 def _drawn(gains: tuple[float, float] | None, places: tuple[int, int] | None = None) -> tuple[str, ...]:

@@ -70,7 +70,7 @@ def _answer(found: Tree) -> Iterator[Html]:
     ]
     yield table(("panel", "it gets", "cut of velocity [dB]", f"gain [{unit}]", *drawn), rows, words=2)
     yield tag("h3", "Treat: each treatment where it may go")
-    header = ("measure", "it gets", f"gain [{unit}]", *drawn, "mass [kg]", "cost [EUR]", "dB per kg", "dB per EUR")
+    header = ("measure", "it gets", f"gain [{unit}]", *drawn, "mass [kg]", "cost [EUR]", "dB per kg", "dB per EUR", "caution")
     yield table(header, [_treated(item, len(drawn)) for item in found["treat"]], words=2)
 
 
@@ -86,7 +86,7 @@ def _treated(item: Tree, drawn: int) -> tuple[str, ...]:
         "–" if item[key] is None else f"{item[key]:.{digits}f}" for key, digits in (("gain_per_kg", 2), ("gain_per_eur", 3))
     )
     head = item["measure"], _gets(item["gain_db"]), signed(item["gain_db"]), *_drawn(item)[:drawn]
-    return *head, f"{item['mass_kg']:.1f}", f"{item['cost_eur']:.0f}", *per
+    return *head, f"{item['mass_kg']:.1f}", f"{item['cost_eur']:.0f}", *per, item["caution"] or "–"
 
 
 def _drawn(item: Tree) -> tuple[str, str]:

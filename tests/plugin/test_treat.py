@@ -13,6 +13,7 @@ import pytest
 
 import solved_box
 from murmesh.plugin import study as study_module
+from murmesh.plugin.check import check_catalogue
 from murmesh.plugin.cli import main
 from murmesh.plugin.cli import treat as treat_command
 from murmesh.plugin.export import EXPORTS
@@ -162,6 +163,19 @@ def test_draws_say_how_stable_every_gain_and_place_is(tmp_path: Path) -> None:
     assert "80 % of draws" in words and "SPREAD over 12 draws" in words and "80 % of draws" not in treat_command.text(_study())
     lines = sum(len(axes.collections) for axes in two_rankings.figure(found).axes)
     assert lines == len(found.quieten) + len(found.treat)
+
+
+def test_cautions_say_who_hears_it_louder_and_what_the_check_doubts() -> None:
+    """Foam on y0 whose law is asked below its range; and every measure that is louder at some ear says so."""
+    found = _study()
+    for m in found.treat:
+        option = next(i for i, o in enumerate(found.whatif.options) if o.name == m.name)
+        ears = [found.whatif.gain((option,), Goal((ear.name,))) for ear in found.result.case.receivers]
+        assert ("louder" in m.caution) == (m.louder or min(ears) < -0.005)
+    doubted = {finding.subject for finding in check_catalogue(found.result.case) if finding.severity != "note"}
+    assert all((m.treatment in doubted) == bool(m.caution.replace("louder", "").strip(" ;")) for m in found.treat
+               if "louder at" not in m.caution)  # fmt: skip
+    assert "foam" in doubted and "caution" in treat_command.text(found)
 
 
 def test_the_tree_is_plain_json() -> None:
