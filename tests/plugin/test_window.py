@@ -208,6 +208,18 @@ def test_receivers_come_and_go() -> None:
     assert [receiver.name for receiver in state.without_receiver().document.job.receivers] == ["ear", "receiver_1"]
 
 
+def test_monopoles_come_are_moved_and_go() -> None:
+    state = STATE.with_monopole((0.1, 0.2, 0.3)).with_monopole((0.2, 0.2, 0.3))
+    assert not state.problem() and "# coarse" in state.document.text
+    row = _row(state.load_rows(), "loads", "loads")
+    state = state.with_row(row, str(row.value).replace("[0.2, 0.2, 0.3]", "[0.4, 0.2, 0.3]"))
+    found = [entry for entry in state.document.tree["loads"]["loads"] if entry["kind"] == "monopole"]
+    assert [(entry["label"], entry["position"][0]) for entry in found] == [("monopole_1", 0.1), ("monopole_2", 0.4)]
+    assert len(state.document.job.loads.loads) == 3, "two monopoles and the vibrating wall"
+    assert state.without_monopole().without_monopole().document.value(("loads", "loads")) is None
+    assert STATE.without_monopole() is STATE
+
+
 def test_a_job_that_makes_no_sense_is_said_and_not_saved(tmp_path: Path) -> None:
     state = STATE.with_row(_row(STATE.sweep_rows(), "sweep", "start"), 900.0)
     assert "give 0 < start <= stop" in state.problem()
