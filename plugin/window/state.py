@@ -28,6 +28,8 @@ from murmesh.solver.errors import MurmeshError
 NO_KIND = ""
 _LOADS = (("moves", "velocity", "m/s"), ("fixes_pressure", "pressure", "Pa"), ("takes_wave", "wave", "Pa"))
 _DRIVEN = ("velocity", "acceleration", "pressure", "wave")
+_MONOPOLE = 1e-4
+"""Volume velocity [m3/s], peak, of a monopole to begin with."""
 _LOAD_HELP = {
     "velocity": "normal velocity, peak, positive = into the air: a number, a spectrum, or { csv = ..., column = ... }",
     "acceleration": "normal acceleration in m/s2, peak, positive = into the air",
@@ -100,6 +102,23 @@ class State:
         """The state without its last receiver."""
         held = self.document.value(("receivers",)) or []
         return self.changed_to(self.document.with_table(("receivers", len(held) - 1), REMOVED)) if held else self
+
+    def with_monopole(self, position: Sequence[float]) -> State:
+        """The state with a new monopole in the load case "default"."""
+        held = self.document.value(("loads", "loads")) or []
+        labels = {entry.get("label") for entry in held}
+        label = next(f"monopole_{n}" for n in range(1, len(held) + 2) if f"monopole_{n}" not in labels)
+        entry = {"kind": "monopole", "label": label, "position": [round(float(x), 4) for x in position]}
+        return self._with_loads([*held, entry | {"volume_velocity": _MONOPOLE}])
+
+    def without_monopole(self) -> State:
+        """The state without the last monopole of the load case "default"."""
+        held = self.document.value(("loads", "loads")) or []
+        last = max((n for n, entry in enumerate(held) if entry.get("kind") == "monopole"), default=None)
+        return self if last is None else self._with_loads([*held[:last], *held[last + 1 :]])
+
+    def _with_loads(self, loads: list[Any]) -> State:
+        return self.changed_to(self.document.with_value(("loads", "loads"), loads or REMOVED))
 
     def _with_kind(self, path: Path_, family: type[Declared], kind: str) -> State:
         if path[0] != "surfaces":

@@ -24,7 +24,7 @@ from murmesh.plugin.window.child import Child
 from murmesh.plugin.window.opening import Opened
 from murmesh.plugin.window.scene import Scene
 from murmesh.plugin.window.state import State, keep, save, taken_up, unsaved_file
-from murmesh.plugin.window.tree import RECEIVERS, RESULTS, ROOT, SURFACES, Parameter, button, edits, note, parameters
+from murmesh.plugin.window.tree import LOADS, RECEIVERS, RESULTS, ROOT, SURFACES, Parameter, button, edits, note, parameters
 from murmesh.solver.case.boundary import Boundary
 from murmesh.solver.case.hdf5 import write_case
 from murmesh.solver.errors import MurmeshError
@@ -64,6 +64,8 @@ class Window:
             "pick": self.pick,
             "add_receiver": lambda: self._become(self.state.with_receiver(self._middle())),
             "remove_receiver": lambda: self._become(self.state.without_receiver()),
+            "add_monopole": lambda: self._become(self.state.with_monopole(self._middle())),
+            "remove_monopole": lambda: self._become(self.state.without_monopole()),
         }
 
     # -- the loop ------------------------------------------------------------------------------------------------------
@@ -311,6 +313,8 @@ class Window:
             button(f"{_JOB}/5Stop", "stop", "interrupt the solution; solving again goes on from there"),
             assign,
             button(f"{SURFACES}/01Pick surfaces", "pick", "give this kind to surfaces picked in the window"),
+            button(f"{LOADS}/00Add monopole", "add_monopole", "in the middle; edit its place under default, loads"),
+            button(f"{LOADS}/01Remove last monopole", "remove_monopole"),
             button(f"{RECEIVERS}/00Add receiver", "add_receiver"),
             button(f"{RECEIVERS}/01Remove last receiver", "remove_receiver"),
             *found,

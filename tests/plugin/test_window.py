@@ -208,6 +208,18 @@ def test_receivers_come_and_go() -> None:
     assert [receiver.name for receiver in state.without_receiver().document.job.receivers] == ["ear", "receiver_1"]
 
 
+def test_monopoles_come_are_moved_and_go() -> None:
+    state = STATE.with_monopole((0.1, 0.2, 0.3)).with_monopole((0.2, 0.2, 0.3))
+    assert not state.problem() and "# coarse" in state.document.text
+    row = _row(state.load_rows(), "loads", "loads")
+    state = state.with_row(row, str(row.value).replace("[0.2, 0.2, 0.3]", "[0.4, 0.2, 0.3]"))
+    found = [entry for entry in state.document.tree["loads"]["loads"] if entry["kind"] == "monopole"]
+    assert [(entry["label"], entry["position"][0]) for entry in found] == [("monopole_1", 0.1), ("monopole_2", 0.4)]
+    assert len(state.document.job.loads.loads) == 3, "two monopoles and the vibrating wall"
+    assert state.without_monopole().without_monopole().document.value(("loads", "loads")) is None
+    assert STATE.without_monopole() is STATE
+
+
 def test_a_job_that_makes_no_sense_is_said_and_not_saved(tmp_path: Path) -> None:
     state = STATE.with_row(_row(STATE.sweep_rows(), "sweep", "start"), 900.0)
     assert "give 0 < start <= stop" in state.problem()
@@ -388,6 +400,32 @@ def test_the_branch_of_results_follows_a_person(gmsh_model: None) -> None:
     choice = results.show(views, choice)
     assert (choice.views, choice.normal, choice.position, choice.frequency) == (("levels", "cut"), "z", 0.3, 220.0)
     assert len(results.ranking(views, choice)) == 3
+
+
+def test_a_gmsh_script_of_a_model_that_radiates(gmsh_model: None, tmp_path: Path) -> None:
+    """A ball wrapped, solved and shown: the power of a pulsating sphere (Pierce, Acoustics, ch. 4), less for flat faces."""
+    import gmsh
+
+    ball = gmsh.model.occ.addSphere(0, 0, 0, 0.25)
+    gmsh.model.occ.synchronize()
+    gmsh.model.addPhysicalGroup(2, [tag for _, tag in gmsh.model.getBoundary([(3, ball)])], name="ball")
+    script.wrap(gap=0.08)
+    gmsh.option.setNumber("Mesh.MeshSizeMax", 0.06)
+    gmsh.model.mesh.generate(3)
+    (tmp_path / "ball.toml").write_text(
+        'regions.outside_air.medium = { kind = "fluid", density = 1.205, speed = 343.0 }\n'
+        '[surfaces.ball]\nkind = "vibrating"\nvelocity = 0.01\n[surfaces.outside]\nkind = "radiating"\n'
+        '[[receivers]]\nname = "near"\nposition = [0.29, 0.0, 0.0]\n'
+        "[sweep]\nfrequencies = [200.0]\nfield_frequencies = [200.0]\norder = 2\nerror_bar = false\nmethod = 'direct'\n"
+    )
+
+    result = script.solved(tmp_path / "ball.toml")
+    tags = script.show(result, 200.0, receiver="near")
+
+    ka = 2 * np.pi * 200.0 / 343.0 * 0.25
+    exact = 4 * np.pi * 0.25**2 * 0.01**2 / 2 * 1.205 * 343.0 * ka**2 / (1 + ka**2)
+    radiated = result.load_cases[0].absorbed[:, result.power_labels.index("radiated/outside")]
+    assert radiated == pytest.approx([exact], rel=0.05) and list(gmsh.view.getTags()) == list(tags.values())
 
 
 def test_three_lines_in_a_gmsh_script(gmsh_model: None, tmp_path: Path) -> None:

@@ -147,8 +147,8 @@ def driver(display: str, tmp_path: Path, request: pytest.FixtureRequest) -> Iter
 # pixels in the window: four modules, the legend under the fourth, then Job with its file and five buttons
 CHECK, SAVE, UNDO, REDO, STOP, PICK = ((150, y) for y in (186, 207, 228, 249, 270, 328))
 SOLVE, SURFACE = (380, 826), (1000, 450)
-OPEN_SWEEP, OPEN_FIRST_SURFACE = (34, 518), (46, 350)
-VELOCITY, STEP = (130, 387), (90, 640)  # with both of these branches open
+OPEN_SWEEP, OPEN_FIRST_SURFACE = (34, 560), (46, 350)
+VELOCITY, STEP = (130, 387), (90, 682)  # with both of these branches open
 
 
 def test_surfaces_are_picked_saved_undone_and_solved(driver: Driver) -> None:
