@@ -28,10 +28,11 @@ class _SizeClass:
 
 @dataclass(frozen=True)
 class Locator:
-    """Centroids of all tetrahedra, and the same by classes of size."""
+    """Centroids of all tetrahedra, the same by classes of size, and boxes (2, t, 3) that hold the tetrahedra."""
 
     tree: KDTree
     classes: tuple[_SizeClass, ...]
+    boxes: Floats
 
     @staticmethod
     def build(controls: Floats) -> Locator:
@@ -41,7 +42,9 @@ class Locator:
         level = np.floor(np.log2(radius / radius.max()) + 1e-12)
         groups = [np.flatnonzero(level == v) for v in np.unique(level)[::-1]]
         classes = [_SizeClass(g, float(radius[g].max()) * (1.0 + 1e-6), KDTree(centre[g])) for g in groups]
-        return Locator(KDTree(centre), tuple(classes))
+        slack = 1e-6 * radius[:, None]
+        boxes = np.stack([controls.min(axis=1) - slack, controls.max(axis=1) + slack])
+        return Locator(KDTree(centre), tuple(classes), boxes)
 
     def find(self, points: Floats, barycentric: Barycentric) -> tuple[Ints, Floats]:
         """tet (k,), bary (k, 4); -1 and NaN outside: first by the eight nearest centroids, then by all in reach."""
@@ -52,7 +55,7 @@ class Locator:
         return tet, bary
 
     def _find_chunk(self, points: Floats, barycentric: Barycentric) -> tuple[Ints, Floats]:
-        best = _Best(points, barycentric)
+        best = _Best(points, barycentric, self.boxes)
         count = min(8, self.tree.n)
         near = np.asarray(self.tree.query(points, k=count)[1]).reshape(len(points), count)
         for column in near.T:
@@ -77,9 +80,10 @@ class Locator:
 class _Best:
     """The tetrahedron with the largest smallest barycentric coordinate offered so far, for each point."""
 
-    def __init__(self, points: Floats, barycentric: Barycentric) -> None:
+    def __init__(self, points: Floats, barycentric: Barycentric, boxes: Floats) -> None:
         self.points = points
         self.barycentric = barycentric
+        self.boxes = boxes
         self.tet = np.full(len(points), -1, dtype=np.int64)
         self.bary = np.full((len(points), 4), -np.inf)
 
@@ -88,7 +92,10 @@ class _Best:
         return np.asarray(self.bary.min(axis=1) >= -TOLERANCE)
 
     def offer(self, which: Ints, tets: Ints) -> None:
-        """Try tetrahedra for points; `which` may repeat a point."""
+        """Try tetrahedra for points; `which` may repeat a point. Boxes first: curved tetrahedra are dear to ask."""
+        low, high = self.boxes[:, tets]
+        held = np.all((self.points[which] >= low) & (self.points[which] <= high), axis=1)
+        which, tets = which[held], tets[held]
         if not len(which):
             return
         bary = self.barycentric(tets, self.points[which])
