@@ -22,7 +22,7 @@ from murmesh.plugin.check import check_catalogue
 from murmesh.plugin.files import written
 from murmesh.plugin.findings.finding import Finding
 from murmesh.plugin.summary import CAUTIONS, Levels, levels
-from murmesh.solver.case.catalogue import Limits, Treatment
+from murmesh.solver.case.catalogue import Limits, Ranges, Treatment
 from murmesh.solver.case.model import Case
 from murmesh.solver.choice import Candidate, Choice, choose
 from murmesh.solver.contribution import rank
@@ -173,6 +173,11 @@ def study(
     )  # fmt: skip
 
 
+def untreated(case: Case) -> Case:
+    """The case without catalogue, limits and ranges: what a solution depends on."""
+    return case.with_(catalogue=(), limits=Limits(), ranges=Ranges())
+
+
 def _receivers(case: Case, goal: Goal) -> tuple[str, ...]:
     return goal.receivers or tuple(receiver.name for receiver in case.receivers)
 
@@ -222,6 +227,7 @@ def tree(found: Study) -> dict[str, Any]:
     goal = found.goal
     return {
         "case_checksum": found.result.case.checksum,
+        "untreated_checksum": untreated(found.result.case).checksum,
         "goal": {
             "receivers": list(_receivers(found.result.case, goal)),
             "load_case": found.result.load_case(goal.load_case).name,

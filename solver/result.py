@@ -302,15 +302,15 @@ class Result:
             raise FormatError("the reduced model belongs to another mesh or other laws; solve the case again")
         return Engine.of(system.on(self.model.projected))
 
-    def pressure_at(self, points: Floats, frequency: float, load_case: str = "") -> Complex:
+    def pressure_at(self, points: Floats, frequency: float, load_case: str = "", *, outside: bool = True) -> Complex:
         """Pressure (k, r) [Pa] at points (k, 3): from the elements themselves inside the mesh, from the surface that radiates
-        outside of it; nan elsewhere."""
+        outside of it (slower, and only where `outside`); nan elsewhere."""
         tet, bary = self.space.geometry.locate(points)
         inside = tet >= 0
         field = self.field(frequency, load_case)
         values = np.full((len(points), field.shape[1]), complex(np.nan, np.nan))
         values[inside] = evaluate(self.space.geometry, self.space.dofs, tet[inside], bary[inside]) @ field
-        for outer in self.outside(frequency, load_case) if self.radiates else ():
+        for outer in self.outside(frequency, load_case) if outside and self.radiates else ():
             beyond = np.flatnonzero(~inside)
             beyond = beyond[outer.exterior.beyond(points[beyond])]
             values[beyond] = outer.pressure(points[beyond])

@@ -26,9 +26,8 @@ from murmesh.plugin.cli.draw import draw
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.load import load_case_file
 from murmesh.plugin.pictures import PICTURES
-from murmesh.plugin.study import QUIETER, VERIFIED, Measure, Study, study, tree, write_study
+from murmesh.plugin.study import QUIETER, VERIFIED, Measure, Study, study, tree, untreated, write_study
 from murmesh.plugin.summary import CAUTIONS
-from murmesh.solver.case.catalogue import Limits, Ranges
 from murmesh.solver.case.model import Case
 from murmesh.solver.errors import ResultError
 from murmesh.solver.result import Result, read_result
@@ -106,13 +105,9 @@ def result_of(path: Path) -> Result:
     if not target.is_file():
         raise ResultError(f"'{path}' is not solved yet: there is no '{target}'; run murmesh solve {path} first")
     result = read_result(target)
-    if _untreated(case).checksum != _untreated(result.case).checksum:
+    if untreated(case).checksum != untreated(result.case).checksum:
         raise ResultError(f"'{path}' has changed since '{target}' was solved, in more than its treatments; solve it again")
     return replace(result, case=case)
-
-
-def _untreated(case: Case) -> Case:
-    return case.with_(catalogue=(), limits=Limits(), ranges=Ranges())
 
 
 def _told(words: str) -> None:

@@ -68,7 +68,7 @@ def still(
     """The figure, and its images with the pressures (rows, columns) that they show."""
     line = kept_line(result, frequency, load_case)
     cuts = cuts_of(result, planes, line, load_case)
-    whole = np.concatenate([cut.pressure.reshape(-1, cut.pressure.shape[2]) for cut in cuts])
+    whole = np.concatenate([layer.columns for cut in cuts for layer in cut.layers])
     column = int(np.nansum(np.abs(whole) ** 2, axis=0).argmax())
     top = limit or film.limit_of(whole[:, column])
     facts = [film.amplitude_words(result, line, load_case), load_case_words(result.load_case_of(load_case))]
@@ -78,12 +78,12 @@ def still(
     shown = []
     for (left, bottom), cut in zip(layout.corners, cuts, strict=True):
         axes = sheet.axes(left, bottom, *(cut.size * layout.scale))
-        pressure = cut.pressure[..., column]
-        extent = (cut.low[0], cut.high[0], cut.low[1], cut.high[1])
-        image = axes.imshow(pressure.real, origin="lower", extent=extent, cmap=SIGNED_MAP, vmin=-top, vmax=top)
+        for layer in cut.layers:
+            pressure, box = layer.pressure[..., column], layer.extent
+            image = axes.imshow(pressure.real, origin="lower", extent=box, cmap=SIGNED_MAP, vmin=-top, vmax=top)
+            shown.append((image, pressure))
         axes.add_collection(LineCollection(list(cut.outline), colors=INK, linewidths=1.2, clip_on=False))
         frame_cut(axes, result.case, cut, layout.scale)
-        shown.append((image, pressure))
     high = min(layout.height - 0.6, 4.2)
     bar = sheet.axes(sheet.width - BAR + 0.3, (layout.height - high) / 2, 0.24, high)
     colour_bar(bar, (-top, top), "sound pressure [Pa, peak]", colours=SIGNED_MAP, step=top / 4)

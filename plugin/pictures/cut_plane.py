@@ -1,7 +1,8 @@
 """Level on planes through the model, sampled from the elements, with the outline of what the plane cuts.
 
-The default planes go through the receivers' mean position, square to the three axes. All planes of one picture share
-one scale of colours and one scale of lengths.
+The default planes go through the mean position of the receivers in the model, square to the three axes. Where the case
+radiates, the field outside is shown around the model as far as its receivers. All planes of one picture share one scale of
+colours and one scale of lengths.
 """
 
 from __future__ import annotations
@@ -29,10 +30,13 @@ from murmesh.solver.errors import ResultError
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
+Complex = npt.NDArray[np.complex128]
 Vector = tuple[float, float, float]
 
 _CELLS, _LEAST, _MOST = 250, 60, 1200  # along a cut's longer edge; at least along the shorter; at most along either
 _CONTOUR = 5.0  # dB
+_AROUND, _WITHIN = 50, 100  # cells along the longer edge, outside (each is an integral over what radiates) and in the model
+_MARGIN, _FAR = 0.25, 1.5  # how far the field outside is shown: at least and, to reach receivers, at most, in model extents
 _BESIDE = 1e-7  # of the model's longest extent
 _NEAR = 0.05  # metres: a receiver farther from the plane is drawn hollow
 BAR, _LABELS, _ABOVE, _UNDER = 1.35, 0.8, 0.35, 0.62  # inches: colour bar, room left of, above and below a cut
@@ -84,14 +88,34 @@ class Plane:
 
 
 @dataclass(frozen=True, eq=False)
+class Layer:
+    """Pressures (rows, columns, r) on a grid between two corners; nan where the layer holds nothing."""
+
+    low: Floats
+    high: Floats
+    pressure: Complex
+
+    @property
+    def extent(self) -> tuple[float, float, float, float]:
+        """Left, right, bottom, top."""
+        return float(self.low[0]), float(self.high[0]), float(self.low[1]), float(self.high[1])
+
+    @property
+    def columns(self) -> Complex:
+        """The pressures as (k, r)."""
+        return self.pressure.reshape(-1, self.pressure.shape[2])
+
+
+@dataclass(frozen=True, eq=False)
 class Cut:
-    """A plane, the outline of the fluid on it as segments (k, 2, 2), and pressures (rows, columns, r) on a grid."""
+    """A plane, the outline of the fluid on it as segments (k, 2, 2), its corners, and its layers: around the model where it
+    radiates, then the model, finer and drawn above."""
 
     plane: Plane
     outline: Floats
     low: Floats
     high: Floats
-    pressure: npt.NDArray[np.complex128]
+    layers: tuple[Layer, ...]
 
     @property
     def size(self) -> Floats:
@@ -127,22 +151,24 @@ def figure(
     """The figure, for further work."""
     line = kept_line(result, frequency, load_case)
     cuts = cuts_of(result, planes, line, load_case)
-    levels = [field_levels(result, cut.pressure.reshape(-1, cut.pressure.shape[2]), load_case) for cut in cuts]
-    scale = level_limits(np.concatenate(levels), limits)
+    levels = [[field_levels(result, layer.columns, load_case) for layer in cut.layers] for cut in cuts]
+    every = np.concatenate([layer for of_cut in levels for layer in of_cut])
+    scale = level_limits(every, limits)
     facts = [
-        f"{hertz(line)} · no frequency weighting · highest on these planes {np.nanmax(np.concatenate(levels)):.1f} dB",
+        f"{hertz(line)} · no frequency weighting · highest on these planes {np.nanmax(every):.1f} dB",
         load_case_words(result.load_case_of(load_case)),
     ]
+    outside = " Around the model: the field outside, by the integral over what radiates." if result.radiates else ""
     notes = [
         f"Sampled from the elements on a grid; contours every {_CONTOUR:.0f} dB. A hollow dot is a receiver more than "
-        f"{1000 * _NEAR:.0f} mm off the plane.",
+        f"{1000 * _NEAR:.0f} mm off the plane.{outside}",
         f"Convention: {CONVENTION}. {origin(result)}.",
     ]
     layout = Arrangement.of(cuts)
     sheet = page("Sound pressure level on cut planes", facts, notes, layout.height)
     for (left, bottom), cut, values in zip(layout.corners, cuts, levels, strict=True):
         axes = sheet.axes(left, bottom, *(cut.size * layout.scale))
-        _draw(axes, result.case, cut, values.reshape(cut.pressure.shape[:2]), scale, layout.scale)
+        _draw(axes, result.case, cut, values, scale, layout.scale)
     high = min(layout.height - 0.6, 4.2)
     bar = sheet.axes(sheet.width - BAR + 0.3, (layout.height - high) / 2, 0.24, high)
     colour_bar(bar, scale, f"level [{level_unit('Z', is_density(result, load_case))}]")
@@ -156,9 +182,11 @@ def cuts_of(result: Result, planes: Sequence[tuple[Vector, Vector]], line: float
 
 
 def default_planes(case: Case) -> list[tuple[Vector, Vector]]:
-    """Square to x, y and z through the mean of the receivers, or through the middle of the model."""
-    points = np.array([receiver.position for receiver in case.receivers])
-    middle = points.mean(axis=0) if len(points) else (case.mesh.nodes.min(axis=0) + case.mesh.nodes.max(axis=0)) / 2
+    """Square to x, y and z through the mean of the receivers in the model's box, or through the middle of that box."""
+    low, high = case.mesh.nodes.min(axis=0), case.mesh.nodes.max(axis=0)
+    points = np.array([receiver.position for receiver in case.receivers]).reshape(-1, 3)
+    points = points[np.all((points > low) & (points < high), axis=1)]
+    middle = points.mean(axis=0) if len(points) else (low + high) / 2
     x, y, z = (float(v) for v in middle)
     return [((x, y, z), (1.0, 0.0, 0.0)), ((x, y, z), (0.0, 1.0, 0.0)), ((x, y, z), (0.0, 0.0, 1.0))]
 
@@ -192,24 +220,48 @@ def _cut(result: Result, skin: Skin, plane: Plane, frequency: float, load_case: 
         raise ResultError(f"the plane {plane.title} misses the fluid; choose another origin or normal")
     low, high = segments.min(axis=(0, 1)), segments.max(axis=(0, 1))
     size = high - low
-    step = max(min(size.max() / _CELLS, size.min() / _LEAST), size.max() / _MOST)
-    counts = np.maximum(np.ceil(size / step), 1).astype(int)
-    u, v = (low[k] + (np.arange(counts[k]) + 0.5) / counts[k] * size[k] for k in (0, 1))
+    cells = _WITHIN if result.radiates else _CELLS
+    step = max(min(size.max() / cells, size.min() / _LEAST), size.max() / _MOST)
+    inside = _layer(result, plane, low, high, step, frequency, load_case, outside=False)
+    if not result.radiates:
+        return Cut(plane, segments, low, high, (inside,))
+    low, high = _window(result.case, plane, low, high)
+    around = _layer(result, plane, low, high, (high - low).max() / _AROUND, frequency, load_case)
+    return Cut(plane, segments, low, high, (around, inside))
+
+
+def _window(case: Case, plane: Plane, low: Floats, high: Floats) -> tuple[Floats, Floats]:
+    """What of the outside a cut shows: a margin around the model, more where a receiver lies farther out."""
+    extent = float((high - low).max())
+    points = plane.flat(np.array([receiver.position for receiver in case.receivers]).reshape(-1, 3))
+    reach = np.vstack([low, high, points])
+    return (
+        np.maximum(reach.min(axis=0), low - _FAR * extent) - _MARGIN * extent,
+        np.minimum(reach.max(axis=0), high + _FAR * extent) + _MARGIN * extent,
+    )
+
+
+def _layer(
+    result: Result, plane: Plane, low: Floats, high: Floats, step: float, line: float, load_case: str, *, outside: bool = True
+) -> Layer:
+    """The field in cells of about `step` [m] between two corners on a plane."""
+    counts = np.maximum(np.ceil((high - low) / step), 2).astype(int)
+    u, v = (low[k] + (np.arange(counts[k]) + 0.5) / counts[k] * (high - low)[k] for k in (0, 1))
     grid = np.stack(np.meshgrid(u, v), axis=-1)
-    pressure = _sampled(result, plane, plane.place(grid.reshape(-1, 2)), frequency, load_case)
-    return Cut(plane, segments, low, high, pressure.reshape(*grid.shape[:2], -1))
+    pressure = _sampled(result, plane, plane.place(grid.reshape(-1, 2)), line, load_case, outside=outside)
+    return Layer(low, high, pressure.reshape(*grid.shape[:2], -1))
 
 
-def _sampled(result: Result, plane: Plane, points: Floats, frequency: float, load_case: str) -> npt.NDArray[np.complex128]:
+def _sampled(result: Result, plane: Plane, points: Floats, frequency: float, load_case: str, *, outside: bool) -> Complex:
     """Pressures (k, r) just beside a plane, where its normal points to; on the other side where that is no fluid.
 
     A plane that lies in a sheet would meet either side at random.
     """
     shift = _BESIDE * float(np.ptp(result.case.mesh.nodes, axis=0).max()) * plane.normal
-    pressure = result.pressure_at(points + shift, frequency, load_case)
+    pressure = result.pressure_at(points + shift, frequency, load_case, outside=outside)
     missing = np.isnan(pressure[:, 0])
     if missing.any():
-        pressure[missing] = result.pressure_at(points[missing] - shift, frequency, load_case)
+        pressure[missing] = result.pressure_at(points[missing] - shift, frequency, load_case, outside=outside)
     return pressure
 
 
@@ -233,12 +285,14 @@ def _tick(about: float) -> float:
     return float(max(m * power for m in (1, 2, 5) if m * power <= about * (1 + 1e-9)))
 
 
-def _draw(axes: Axes, case: Case, cut: Cut, levels: Floats, scale: tuple[float, float], scale_of_lengths: float) -> None:
-    extent = (cut.low[0], cut.high[0], cut.low[1], cut.high[1])
-    norm = Normalize(*scale)
-    axes.imshow(levels, origin="lower", extent=extent, cmap=LEVEL_MAP, norm=norm, interpolation="nearest")
+def _draw(
+    axes: Axes, case: Case, cut: Cut, levels: Sequence[Floats], scale: tuple[float, float], scale_of_lengths: float
+) -> None:
     steps = np.arange(scale[0], scale[1] + 0.1, _CONTOUR)
-    axes.contour(levels, steps, extent=extent, colors=INK, linewidths=0.5, alpha=0.45)
+    for layer, values in zip(cut.layers, levels, strict=True):
+        shown, extent = values.reshape(layer.pressure.shape[:2]), layer.extent
+        axes.imshow(shown, origin="lower", extent=extent, cmap=LEVEL_MAP, norm=Normalize(*scale), interpolation="nearest")
+        axes.contour(shown, steps, extent=extent, colors=INK, linewidths=0.5, alpha=0.45)
     axes.add_collection(LineCollection(list(cut.outline), colors=INK, linewidths=1.2, clip_on=False))
     frame_cut(axes, case, cut, scale_of_lengths)
 

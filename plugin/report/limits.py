@@ -13,6 +13,10 @@ NOT_MODELLED = (
     "the panels' own response to a treatment or to the air",
     "frequencies outside the sweep, and receivers elsewhere than stated (a head moves, a person absorbs)",
 )
+OUTSIDE = (
+    "bodies and walls outside other than the stated ground plane, and a ground that absorbs",
+    "wind, temperature and absorption in the air outside",
+)
 CAUTIONS = (
     "Predictions are not measurements, noise declarations or exposure assessments.",
     "Hearing limits and noise-declaration duties are set by local law and standards and decided by qualified people.",
@@ -22,7 +26,14 @@ CAUTIONS = (
 
 def section(review: Review) -> Html:
     """Two lists."""
-    return join([tag("h3", "Not modelled"), _list(NOT_MODELLED), tag("h3", "Cautions"), _list(CAUTIONS)])
+    return join(
+        [
+            tag("h3", "Not modelled"),
+            _list(NOT_MODELLED + (OUTSIDE if review.result.radiates else ())),
+            tag("h3", "Cautions"),
+            _list(CAUTIONS),
+        ]
+    )
 
 
 def _list(items: tuple[str, ...]) -> Html:

@@ -13,6 +13,7 @@ from typing import Any
 from murmesh.plugin.describe import band_words, names, signed
 from murmesh.plugin.report.html import Html, join, not_computed, note, table, tag
 from murmesh.plugin.report.review import Review
+from murmesh.plugin.study import untreated
 from murmesh.solver.case.catalogue import Treatment
 from murmesh.solver.errors import ResultError
 from murmesh.solver.result import Result
@@ -29,17 +30,27 @@ _WHY = (
     "The page was written without a study of treatments (`murmesh treat RESULT FOLDER`, then `murmesh report --study "
     "FOLDER/study.json`). A ranking by contribution does not say where an absorber helps."
 )
+_OTHER_CATALOGUE = (
+    "The study had another catalogue, other limits or other ranges than the result file holds; model, loads and sweep are "
+    "the same, so its gains hold. The result's catalogue is left out here."
+)
 
 
 def read_study(path: str | Path, result: Result) -> Tree:
-    """The tree of a study of this very case. Raises ResultError for another file, or a study of another case."""
+    """The tree of a study of this case, whatever catalogue, limits and ranges the study had: a solution does not depend on
+    them. Raises ResultError for another file, or a study of a case that differs in more.
+    """
     try:
         tree = json.loads(Path(path).read_text(encoding="utf-8"))
-        checksum = tree["case_checksum"]
+        checksum, model = tree["case_checksum"], tree.get("untreated_checksum")
     except (OSError, ValueError, KeyError, TypeError) as problem:
         raise ResultError(f"{path}: this is no study ({problem}); make one with `murmesh treat RESULT FOLDER`") from None
-    if checksum != result.case.checksum:
-        raise ResultError(f"{path}: the study is of another case than the result; run `murmesh treat` on this result")
+    if checksum != result.case.checksum and model != untreated(result.case).checksum:
+        raise ResultError(
+            f"{path}: the study is of another case than the result (study {checksum[:8]}, result "
+            f"{result.case.checksum[:8]}): mesh, surfaces, media, loads, receivers or sweep differ, so its gains would be "
+            "wrong here; run `murmesh treat` on this result (`murmesh compare` of both results says what changed)"
+        )
     return dict(tree)
 
 
@@ -49,6 +60,8 @@ def section(review: Review, found: Tree | None = None) -> Html:
         parts = list(_answer(found)) if found else [not_computed(_WHY)]
     except (KeyError, TypeError, IndexError) as problem:
         raise ResultError(f"the study lacks {problem}; make it anew with `murmesh treat`") from None
+    if found and found["case_checksum"] != review.result.case.checksum:
+        return join([*parts, note(_OTHER_CATALOGUE)])
     catalogue = review.result.case.catalogue
     return join([*parts, tag("h3", "Catalogue"), _catalogue(catalogue)] if catalogue else parts)
 

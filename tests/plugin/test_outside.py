@@ -15,7 +15,7 @@ from cases import case_of
 from murmesh.plugin.cli import main
 from murmesh.plugin.directivity import pattern
 from murmesh.plugin.export import EXPORTS
-from murmesh.plugin.pictures import PICTURES, directivity
+from murmesh.plugin.pictures import PICTURES, cut_plane, directivity
 from murmesh.plugin.pictures.style import texts
 from murmesh.plugin.study import Study, study
 from murmesh.plugin.summary import outside_facts, trust
@@ -52,6 +52,19 @@ def test_the_outside_is_read_back_with_levels_that_fall_with_distance(tmp_path: 
     assert np.abs(air["level_db"][beyond] + 20 * np.log10(r[beyond] / 0.3) - near).max() < 0.2
     assert np.abs(found["far/outer"]["directivity_index_db"] - 10 * np.log10(2)).max() < 0.05  # half space: 3 dB
     assert np.abs(found["far/outer"]["level_db"] - near + 20 * np.log10(1 / 0.3)).max() < 0.2
+
+
+def test_a_cut_shows_the_outside_as_far_as_its_receivers() -> None:
+    """A pulsating sphere falls by 6 dB per doubling of the distance, in the model and around it."""
+    [cut] = cut_plane.cuts_of(_pulsating(), cut_plane.default_planes(_pulsating().case)[1:2], 400.0, "")
+    around, inside = cut.layers
+    assert (cut.low < [-0.3, 0.0]).all() and (cut.high > [0.6, 0.8]).all() and np.isnan(inside.columns).any()
+    u, v = (np.linspace(around.low[k], around.high[k], 2 * around.pressure.shape[1 - k] + 1)[1::2] for k in (0, 1))
+    r = np.hypot(*np.meshgrid(u, v)).ravel()
+    p = np.abs(around.columns[:, 0])
+    assert np.isnan(p[(r < 0.22)]).all()
+    far = (r > 0.45) & np.isfinite(p)
+    assert np.ptp(20 * np.log10(p[far] * r[far])) < 0.3
 
 
 def test_directivity_is_drawn_with_power_and_index() -> None:

@@ -216,6 +216,13 @@ def test_a_study_must_be_of_the_result(tmp_path: Path, result: Result) -> None:
     assert treatments.read_study(path, own) == json.loads(json.dumps(found))
     with pytest.raises(ResultError, match="of another case"):
         treatments.read_study(path, result)
+    changed = replace(own, case=own.case.with_(catalogue=own.case.catalogue[:1]))
+    accepted = treatments.read_study(path, changed)
+    words = treatments.section(Review(changed), accepted)
+    assert "another catalogue" in words and "<h3>Catalogue</h3>" not in words
+    louder = replace(own, case=own.case.with_(load_cases=()))
+    with pytest.raises(ResultError, match="mesh, surfaces, media, loads"):
+        treatments.read_study(path, louder)
     path.write_text("[1]")
     with pytest.raises(ResultError, match="no study"):
         treatments.read_study(path, own)
