@@ -187,7 +187,7 @@ def default_planes(case: Case) -> list[tuple[Vector, Vector]]:
     points = np.array([receiver.position for receiver in case.receivers]).reshape(-1, 3)
     points = points[np.all((points > low) & (points < high), axis=1)]
     middle = points.mean(axis=0) if len(points) else (low + high) / 2
-    x, y, z = (float(v) for v in middle)
+    x, y, z = (round(float(v), 9) + 0.0 for v in middle)
     return [((x, y, z), (1.0, 0.0, 0.0)), ((x, y, z), (0.0, 1.0, 0.0)), ((x, y, z), (0.0, 0.0, 1.0))]
 
 
