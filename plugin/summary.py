@@ -56,6 +56,11 @@ class Levels:
         return f"{unit} re {'1 pW' if self.power else '20 uPa'}"
 
     @property
+    def heading(self) -> str:
+        """The place as the heading of a column of levels re 20 uPa: a sound power says its own reference."""
+        return f"{self.receiver} [re 1 pW]" if self.power else self.receiver
+
+    @property
     def power(self) -> bool:
         """Whether these are levels of a sound power."""
         return is_power(self.receiver)

@@ -39,12 +39,8 @@ def text(found: list[Levels]) -> str:
             cells = (shown(g.band_levels[i], g.bars.bands[i] if g.bars else np.nan) for g in group)
             rows.append((f"{band.nominal} Hz{' (partial)' if partial else ''}", *cells))
         title = f"{group[0].unit}, load case '{name}' ({group[0].spectrum}), third octaves"
-        parts.append(f"{title}\n{table(('band', *(_heading(g) for g in group)), rows)}")
+        parts.append(f"{title}\n{table(('band', *(g.heading for g in group)), rows)}")
     return "\n\n".join(parts)
-
-
-def _heading(item: Levels) -> str:
-    return f"{item.receiver} [re 1 pW]" if item.power else item.receiver
 
 
 def _tree(item: Levels) -> dict[str, object]:

@@ -32,7 +32,7 @@ def _load_case(review: Review, name: str) -> Html:
         target = review.target
         rows.append((f"target {target:g} dB(A)", *(verdict(item, target) for item in found)))
     rows += [(_band_name(found[0], i), *(_cell(item, i) for item in found)) for i in range(len(found[0].bands))]
-    body = table(("", *(item.receiver for item in found)), rows, caption=f"{found[0].unit}, third octaves")
+    body = table(("", *(item.heading for item in found)), rows, caption=f"{found[0].unit}, third octaves")
     return join([tag("h3", f"Load case {name} ({found[0].spectrum})"), body, _chart(review.result, name)])
 
 

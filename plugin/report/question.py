@@ -29,7 +29,7 @@ def section(review: Review) -> Html:
 def _row(review: Review, item: Levels) -> tuple[str, ...]:
     judged = verdict(item, review.target) if review.target is not None else "no target"
     bar = item.bars.overall if item.bars else float("nan")
-    return item.receiver, item.load_case, judged, _loudest(review, item.receiver, item.load_case), shown(item.overall, bar)
+    return item.heading, item.load_case, judged, _loudest(review, item.receiver, item.load_case), shown(item.overall, bar)
 
 
 def _loudest(review: Review, receiver: str, load_case: str) -> str:

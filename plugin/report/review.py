@@ -62,6 +62,8 @@ def worst_lines(result: Result, load_case: str = "", count: int = 3) -> list[flo
 
 def verdict(item: Levels, target: float) -> str:
     """The overall level against the target; undecided where the mesh's error bar reaches across it."""
+    if item.power:
+        return "no level at a receiver"
     gap, bar = item.overall - target, item.bars.overall if item.bars else 0.0
     if not np.isfinite(item.overall):
         return "silent: met"

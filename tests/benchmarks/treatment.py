@@ -34,7 +34,8 @@ def treatment(quick: bool) -> Iterator[Row]:
     for count in (1, 3, 5):
         seconds = best_of(5, lambda c=walls[:count]: whatif.gain(c, goal))  # type: ignore[misc]
         yield Row(f"cab: a combination of {count} absorbers", 1000 * seconds, "ms", "234 lines, 14 sample points", 20)
-    drawn, known = [*((i,) for i in order[:4]), *(tuple(chosen[:n]) for n in (2, 3))], case.ranges.with_(damping=1.0)
+    known = case.ranges.with_(damping=1.0)
+    drawn = [[whatif.act(i) for i in chosen] for chosen in (*([i] for i in order[:4]), *(chosen[:n] for n in (2, 3)))]
     _, seconds = timed(lambda: spread(whatif, drawn, goal, known, 200))
     yield Row("cab: 200 samples, damping known", seconds, "s", f"{len(drawn)} sets", 10)
     _, seconds = timed(lambda: spread(whatif, drawn, goal, case.ranges, 200))

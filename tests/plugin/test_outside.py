@@ -17,6 +17,8 @@ from murmesh.plugin.directivity import pattern
 from murmesh.plugin.export import EXPORTS
 from murmesh.plugin.pictures import PICTURES, cut_plane, directivity
 from murmesh.plugin.pictures.style import texts
+from murmesh.plugin.report.page import page
+from murmesh.plugin.report.review import Review
 from murmesh.plugin.study import Study, study
 from murmesh.plugin.summary import outside_facts, trust
 from murmesh.solver.case.boundary import Radiating, Vibrating
@@ -94,6 +96,12 @@ def test_what_the_infinite_elements_rest_on_is_said() -> None:
     condition = float(words.split()[-1])
     assert 1.0 < condition < 1e3 and words in trust(_pulsating())
     assert outside_facts(solved_box.result()) == []
+
+
+def test_a_page_of_a_case_that_radiates() -> None:
+    text = page(Review(_pulsating(), target=60.0))
+    assert "radiated power [re 1 pW]" in text and "no level at a receiver" in text
+    assert "infinite elements on outer" in text and "radiated/outer" in text
 
 
 @cache
