@@ -17,10 +17,10 @@ from murmesh.plugin.describe import CONVENTION, plain
 from murmesh.plugin.files import written
 from murmesh.plugin.summary import PARTIAL, Levels, levels, shown
 from murmesh.solver.levels import Band, power_level
+from murmesh.solver.power import RADIATED_LABEL
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
-RADIATED = "radiated/"
 
 
 @dataclass(frozen=True, eq=False)
@@ -42,7 +42,7 @@ class Variant:
     @property
     def radiated(self) -> float:
         """Power [W] that leaves."""
-        return sum(w for label, w in self.balance.taken.items() if label.startswith(RADIATED))
+        return sum(w for label, w in self.balance.taken.items() if label.startswith(RADIATED_LABEL))
 
 
 @dataclass(frozen=True, eq=False)

@@ -19,6 +19,7 @@ from murmesh.plugin.pictures.style import INK, LEVEL_MAP, LINES, QUIET, colour_b
 from murmesh.plugin.sampling import sample_skin
 from murmesh.plugin.variants import Variant, Variants, split
 from murmesh.solver.levels import power_level
+from murmesh.solver.power import RADIATED_LABEL
 from murmesh.solver.result import Result
 
 Floats = npt.NDArray[np.float64]
@@ -110,7 +111,7 @@ def _shown(found: Variants) -> tuple[str, ...]:
         for label, part in split(variant).items():
             most[label] = max(part, most.get(label, 0.0))
     large = [label for label in sorted(most, key=lambda label: -most[label]) if most[label] >= _LEAST]
-    large.sort(key=lambda label: not label.startswith("radiated/"))
+    large.sort(key=lambda label: not label.startswith(RADIATED_LABEL))
     return (*large[: len(_HATCHES) - 1], "others")
 
 
